@@ -1,0 +1,1 @@
+"""Effective temperatures, radii and luminosities of stars from survey photometry."""

@@ -1,0 +1,1 @@
+"""Planning, parts, ledger, generations and the cluster."""

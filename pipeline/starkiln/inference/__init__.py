@@ -1,0 +1,1 @@
+"""Log-posterior, sampling, convergence and summaries of many stars at once."""

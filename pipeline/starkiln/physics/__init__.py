@@ -1,0 +1,1 @@
+"""Physics as pure functions of arrays."""

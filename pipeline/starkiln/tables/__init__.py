@@ -1,0 +1,1 @@
+"""Parquet in and out: schemas, units, hashes and atomic writes."""
