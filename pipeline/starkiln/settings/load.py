@@ -25,6 +25,7 @@ _EXPECTED = {
     "too_short": "should be two numbers, [low, high]",
     "too_long": "should be two numbers, [low, high]",
     "is_instance_of": "should be a path in quotes",
+    "list_type": "should be a list in square brackets",
 }
 _PATTERNS = {
     r"^[a-z0-9_]+$": "should be lower-case letters, digits and underscores only",
@@ -123,7 +124,8 @@ def _describe(item: Any, data: Mapping[str, Any]) -> str:
         text = item["msg"].removeprefix("Input ") + nearest(value, _choices(item["ctx"]["expected"]))
     else:
         text = _EXPECTED.get(kind, item["msg"].removeprefix("Input "))
-    return f"{where}: {text}" if repr(value) in text else f"{where} = {value!r}: {text}"
+    shown = isinstance(value, str) and repr(value) in text
+    return f"{where}: {text}" if shown else f"{where} = {value!r}: {text}"
 
 
 def _visible(loc: Loc) -> Loc:

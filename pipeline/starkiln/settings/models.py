@@ -357,7 +357,7 @@ class Settings(Section):
         for index, name in _repeats(file.name for file in self.passband):
             yield ("passband", index, "name"), f"{name!r} is the name of two passbands"
         if Path(self.input.tables) in (self.run.output, *self.run.output.parents):
-            yield ("run", "output"), "lies inside input.tables: the next run would read these results as input"
+            yield ("run", "output"), "lies inside input.tables: the next run would read its results as input"
 
     def fit_columns(self) -> list[str]:
         """Return every input column that can change a fit: the id, then in settings order, none twice."""
