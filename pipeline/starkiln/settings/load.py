@@ -110,6 +110,8 @@ def _describe(item: Any, data: Mapping[str, Any]) -> str:
         return f"{where} {item['msg']}"
     if kind == "extra_forbidden":
         return f"{where}: unknown key{_hint(loc)}"
+    if kind == "missing" and isinstance(loc[-1], int):
+        return f"{_dotted(loc[:-1])}: {_EXPECTED['too_short']}"
     if kind == "missing":
         return f"{where} is missing: {_meaning(loc)}"
     if isinstance(value, dict) and kind == "list_type":

@@ -30,9 +30,9 @@ from starkiln.settings.values import (
     Positive,
     PositiveOrColumn,
     PositiveRange,
-    Range,
     SnakeCase,
     TablesPath,
+    TemperatureRange,
     Text,
     Where,
     Workers,
@@ -271,10 +271,7 @@ class Model(Section):
 
     photosphere: Literal["blackbody"] = "blackbody"
     """The light of a bare star."""
-    temperature_k: Annotated[Range, Field(json_schema_extra={"minimum": 1000, "maximum": 100000})] = (
-        1500.0,
-        60000.0,
-    )
+    temperature_k: TemperatureRange = (1500.0, 60000.0)
     """Least and largest effective temperature in kelvins."""
     radius_rsun: PositiveRange = (1e-3, 3e3)
     """Least and largest radius in nominal solar radii."""
@@ -287,12 +284,6 @@ class Model(Section):
     """Dust."""
     distance: DistancePrior = DistancePrior()
     """Prior of the distance."""
-
-    def problems(self) -> Iterator[Problem]:
-        """Yield temperatures that no star has."""
-        low, high = self.temperature_k
-        if low < 1000 or high > 100000:
-            yield ("temperature_k",), f"is [{low:g}, {high:g}], but must lie within 1000 to 100000 K"
 
 
 class Sampling(Section):
