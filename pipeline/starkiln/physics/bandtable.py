@@ -17,7 +17,7 @@ from starkiln.physics.planck import ln_exitance_jy
 FloatArray = NDArray[np.float64]
 
 LN_TEFF_STEP = math.log(60_000.0 / 1_500.0) / 256.0
-AV_STEP = 0.5
+AV_STEP = 0.25  # twice this is too coarse for the red leaks of the u bands
 _PAD_STEPS = 3  # beyond both ends of the temperatures, where a spline with free ends is at its worst
 _MIN_AV_NODES = 4
 
@@ -69,8 +69,8 @@ def build_band_table(
     ln_teff_min = math.log(teff_min_k) - _PAD_STEPS * LN_TEFF_STEP
     n_teff = _nodes(math.log(teff_max_k / teff_min_k), LN_TEFF_STEP) + 2 * _PAD_STEPS
     n_av = max(_nodes(av_max, AV_STEP), _MIN_AV_NODES)
-    teff_k = np.exp(ln_teff_min + LN_TEFF_STEP * np.arange(n_teff))
-    av_mag = AV_STEP * np.arange(n_av)
+    teff_k = np.exp(ln_teff_min + LN_TEFF_STEP * np.arange(n_teff, dtype=np.float64))
+    av_mag = AV_STEP * np.arange(n_av, dtype=np.float64)
     coef = np.empty((len(passbands), n_teff + 2, n_av + 2))
     for band, passband in enumerate(passbands):
         ratio = extinction_ratio(law, rv, passband.quadrature[0])
@@ -161,8 +161,8 @@ def _warn_outside(passbands: Sequence[Passband], law: str) -> None:
             outside.append(passband.name)
     if outside:
         warnings.warn(
-            f"extinction law {law} was published for {low_um:.3g} to {high_um:.3g} um; in {', '.join(outside)} "
-            "it goes on with the shape of G23, which covers every built-in band",
+            f"extinction law {law} was published for {low_um:.3g} to {high_um:.3g} um; in "
+            f"{', '.join(outside)} it goes on with the shape of G23, which covers every built-in band",
             ExtinctionRangeWarning,
             stacklevel=3,
         )

@@ -69,7 +69,7 @@ class Passband:
         return nodes_um[used], weights[used] / weights[used].sum()
 
     def average(self, spectrum_at: Callable[[FloatArray], ArrayLike]) -> float:
-        """Return the band average of a spectrum per unit frequency, given as a function of wavelength [um]."""
+        """Return the band average of a spectrum per unit frequency, a function of the wavelength [um]."""
         nodes_um, weights = self.quadrature
         return float(np.sum(weights * np.asarray(spectrum_at(nodes_um), dtype=np.float64)))
 
@@ -132,6 +132,10 @@ def load_passband(name: str) -> Passband:
         raise UnknownPassband(_unknown(name))
     band = _BUILTIN[name]
     wavelength_um, throughput, meta = _read_curve(_speclite_file(band), "wavelength", "response")
+    for zero_um in band.zeros_um:
+        place = int(np.searchsorted(wavelength_um, zero_um))
+        wavelength_um = np.insert(wavelength_um, place, zero_um)
+        throughput = np.insert(throughput, place, 0.0)
     return Passband(
         name=name,
         wavelength_um=wavelength_um,
@@ -193,7 +197,7 @@ def read_passband(
 
 
 def describe_passbands() -> list[dict[str, Any]]:
-    """Return one row per built-in passband: name, pivot, detector, system, zero points [Jy], error, source."""
+    """Return a row per built-in passband: name, pivot, detector, system, zero points [Jy], error, source."""
     return [_description(load_passband(name)) for name in _BUILTIN]
 
 
@@ -213,7 +217,8 @@ def _description(passband: Passband) -> dict[str, Any]:
 
 def _unknown(name: str) -> str:
     family, _, band = name.partition("_")
-    editions = [known for known in _BUILTIN if known.startswith(f"{family}_dr") and known.endswith(f"_{band}")]
+    released = [known for known in _BUILTIN if known.startswith(f"{family}_dr")]
+    editions = [known for known in released if known.endswith(f"_{band}")]
     if editions:
         return f"passband {name!r} comes in several editions; choose {' or '.join(editions)}"
     return (
@@ -287,7 +292,9 @@ def _wavelengths_um(column: Column, path: Path) -> FloatArray:
 
     if not _is_length(column):
         given = "no unit" if column.unit is None else f"the unit {column.unit}"
-        raise SettingsError(f"{path}, column {column.name!r}: has {given}; wavelengths need one, such as nm or um")
+        raise SettingsError(
+            f"{path}, column {column.name!r}: has {given}; give a wavelength's, such as nm or um"
+        )
     return _numbers(column, path) * float(units.Unit(column.unit).to(units.um))
 
 
@@ -303,7 +310,9 @@ def _check_curve(
     wavelength_um: FloatArray, throughput: FloatArray, path: Path, wavelength_name: str, throughput_name: str
 ) -> None:
     if len(wavelength_um) < _MIN_POINTS:
-        raise SettingsError(f"{path}: {len(wavelength_um)} points are too few; a curve has {_MIN_POINTS} or more")
+        raise SettingsError(
+            f"{path}: {len(wavelength_um)} points are too few; a curve has {_MIN_POINTS} or more"
+        )
     for name, values in ((wavelength_name, wavelength_um), (throughput_name, throughput)):
         _refuse_rows(~np.isfinite(values), path, name, "is missing or not finite")
     _refuse_rows(wavelength_um <= 0.0, path, wavelength_name, "is not above zero")
