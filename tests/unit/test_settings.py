@@ -314,7 +314,7 @@ class TestColumns:
                 },
                 input__photometry=[
                     band(bad="g_bad"),
-                    band("wise_w1", "w1", bad="g_bad", limit="w1_limit"),
+                    band("wise_w1", "w1", bad="w1_bad", limit="w1_limit"),
                     band("2mass_j", "j"),
                 ],
                 model={
@@ -333,6 +333,7 @@ class TestColumns:
             "g_bad",
             "w1",
             "w1_error",
+            "w1_bad",
             "w1_limit",
             "j",
             "j_error",
@@ -421,6 +422,8 @@ class TestResolvedCopy:
                 input__where=[[["night", ">=", date(2026, 12, 1)]], [["name", "==", 'a "b" \\']]],
                 input__only="targets.parquet",
                 model={"outliers": False, "extinction": {"prior": "gaussian", "mean": "av", "scale": 0.1}},
+                output={"per_band": "none", "rows_per_file": 10, "layout": "hive"},
+                sampling={"walkers": 40, "keep_draws": 5},
                 compute={"workers": 2, "scratch": "fast"},
             ),
             "/survey",
