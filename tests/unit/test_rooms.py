@@ -20,9 +20,10 @@ BELOW = {
     "engine": {"errors", "flags", "settings", "tables", "stages"},
     "report": {"errors", "flags", "settings", "tables", "physics", "inference", "stages", "engine"},
     "cli": {"errors", "flags", "settings", "tables", "physics", "inference", "stages", "engine", "report"},
+    "__main__": {"cli"},
 }
 TABLE_LIBRARIES = {"pandas", "pyarrow", "pydantic", "dask", "distributed", "typer"}
-LIGHT = {"__future__", "typer", "rich", "starkiln.errors", "starkiln.flags", "starkiln.__version__"}
+LIGHT = {"typer", "rich", "starkiln.errors", "starkiln.flags", "starkiln.cli", "starkiln.__version__"}
 
 
 def room_of(module: Path) -> str:
