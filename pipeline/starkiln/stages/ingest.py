@@ -54,7 +54,7 @@ class Ingested:
 
 
 @dataclass(frozen=True)
-class _Band:
+class BandValues:
     """One band of n rows; `fault` says why a row's value cannot be used, 0 where it can."""
 
     flux_jy: NDArray[np.float64]
@@ -64,7 +64,7 @@ class _Band:
 
 
 @dataclass(frozen=True)
-class _Rejection:
+class Rejection:
     """Rows turned down for one reason, with the text for each."""
 
     rows: NDArray[np.bool_]
@@ -127,7 +127,7 @@ def ingest(table: pa.Table, settings: Settings, model: FitModel) -> Ingested:
     return Ingested(stars, _kept_rows(table, settings, kept), _rejected_rows(table, settings, first, rejections))
 
 
-def read_band(table: pa.Table, band: PhotometryColumns, passband: Passband) -> _Band:
+def read_band(table: pa.Table, band: PhotometryColumns, passband: Passband) -> BandValues:
     """Return one band's fluxes and errors in Jy, its limits, and why a value cannot be used."""
     value, error = float64_values(table[band.value]), float64_values(table[band.error])
     limit = _marks(table, band.limit)
@@ -144,7 +144,7 @@ def read_band(table: pa.Table, band: PhotometryColumns, passband: Passband) -> _
         [_BAD, _NO_VALUE, _PLACEHOLDER, _NO_ERROR, _ERROR_NOT_POSITIVE],
         _USABLE,
     ).astype(np.int8)
-    return _Band(flux_jy, error_jy, limit, fault)
+    return BandValues(flux_jy, error_jy, limit, fault)
 
 
 def _marks(table: pa.Table, column: str | None) -> NDArray[np.bool_]:
@@ -238,20 +238,20 @@ def _prior_parameters(table: pa.Table, settings: Settings) -> dict[str, NDArray[
     }
 
 
-def _without_id(ids: list[bytes | None], settings: Settings) -> _Rejection:
+def _without_id(ids: list[bytes | None], settings: Settings) -> Rejection:
     missing = np.array([star_id is None for star_id in ids], bool)
-    return _Rejection(missing, "no id", [f"column {settings.input.id!r} is null or empty"])
+    return Rejection(missing, "no id", [f"column {settings.input.id!r} is null or empty"])
 
 
-def _repeated(table: pa.Table, settings: Settings) -> _Rejection:
+def _repeated(table: pa.Table, settings: Settings) -> Rejection:
     if "_duplicate" not in table.column_names:
         later = np.zeros(table.num_rows, bool)
     else:
         later = table["_duplicate"].to_numpy() == 2
-    return _Rejection(later, "duplicate id", [f"an earlier row has the same {settings.input.id!r}"])
+    return Rejection(later, "duplicate id", [f"an earlier row has the same {settings.input.id!r}"])
 
 
-def _without_prior(priors: dict[str, NDArray[np.float64]], settings: Settings) -> list[_Rejection]:
+def _without_prior(priors: dict[str, NDArray[np.float64]], settings: Settings) -> list[Rejection]:
     """Return the rows whose prior parameters, read from columns, are missing or out of range."""
     extinction, distance = settings.model.extinction, settings.model.distance
     mean, scale, length = priors["av_mean"], priors["av_scale"], priors["length_scale_pc"]
@@ -266,13 +266,13 @@ def _without_prior(priors: dict[str, NDArray[np.float64]], settings: Settings) -
         (distance.length_scale_pc, np.isfinite(length) & (length > 0), "positive"),
     ]
     return [
-        _Rejection(~good, "no prior", [f"column {setting!r} is missing or not {wanted}"])
+        Rejection(~good, "no prior", [f"column {setting!r} is missing or not {wanted}"])
         for setting, good, wanted in checks
         if isinstance(setting, str)
     ]
 
 
-def _short_of_bands(fault: NDArray[np.int8], settings: Settings) -> _Rejection:
+def _short_of_bands(fault: NDArray[np.int8], settings: Settings) -> Rejection:
     """Return the rows with too few usable bands; rows with the same faults share one text."""
     needed = settings.input.min_bands
     short = (fault == _USABLE).sum(axis=1) < needed
@@ -280,7 +280,7 @@ def _short_of_bands(fault: NDArray[np.int8], settings: Settings) -> _Rejection:
     detail_of = np.zeros(len(fault), np.intp)
     detail_of[short] = pattern_of.reshape(-1)
     texts = [_fault_text(pattern, settings.input.photometry, needed) for pattern in patterns]
-    return _Rejection(short, "too few bands", texts, detail_of)
+    return Rejection(short, "too few bands", texts, detail_of)
 
 
 def _fault_text(pattern: NDArray[np.int8], bands: Sequence[PhotometryColumns], needed: int) -> str:
@@ -303,7 +303,7 @@ def _kept_rows(table: pa.Table, settings: Settings, kept: NDArray[np.bool_]) -> 
 
 
 def _rejected_rows(
-    table: pa.Table, settings: Settings, first: NDArray[np.int_], rejections: list[_Rejection]
+    table: pa.Table, settings: Settings, first: NDArray[np.int_], rejections: list[Rejection]
 ) -> pa.Table:
     rows = np.flatnonzero(first != _NOT_REJECTED)
     why = [rejections[number] for number in first[rows].tolist()]
