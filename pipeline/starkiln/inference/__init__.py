@@ -1,1 +1,1 @@
-"""Log-posterior, sampling, convergence and summaries of many stars at once."""
+"""Sampling the posterior of many stars at once: kernels, moves, convergence and summaries."""

@@ -1,4 +1,4 @@
-"""From columns to what a fit needs: fluxes in Jy, parallaxes in mas, prior parameters; and the rows it cannot use."""
+"""From columns to what a fit needs: fluxes in Jy, parallaxes in mas, prior parameters; other rows are rejected."""
 
 from __future__ import annotations
 
@@ -73,15 +73,17 @@ class Rejection:
     detail_of: NDArray[np.intp] | None = None
 
     def detail(self, row: int) -> str:
+        """Return the text of a row."""
         return self.details[0 if self.detail_of is None else self.detail_of[row]]
 
 
 def ingest(table: pa.Table, settings: Settings, model: FitModel) -> Ingested:
     """Turn the rows of a table into stars, and set aside those that cannot be fitted.
 
-    A band is left out of a row where it is marked bad, where its value or error is missing (null, NaN, infinite, or
-    a magnitude beyond `MAG_PLACEHOLDER`), and where its error is not positive. A row is rejected that has no id,
-    repeats an earlier one (`_duplicate` = 2), lacks a usable prior parameter, or keeps fewer than `min_bands` bands.
+    A band is left out of a row where it is marked bad, where its value or error is missing (null, NaN,
+    infinite, or a magnitude beyond `MAG_PLACEHOLDER`), and where its error is not positive. A row is rejected
+    that has no id, repeats an earlier one (`_duplicate` = 2), lacks a usable prior parameter, or keeps fewer
+    than `min_bands` bands.
 
     Parameters
     ----------
@@ -113,7 +115,9 @@ def ingest(table: pa.Table, settings: Settings, model: FitModel) -> Ingested:
     distance, distance_error = _distance_pc(table, settings)
     usable = fault[kept] == _USABLE
     stars = Stars(
-        ids=[star_id for star_id, keep in zip(ids, kept.tolist(), strict=True) if keep and star_id is not None],
+        ids=[
+            star_id for star_id, keep in zip(ids, kept.tolist(), strict=True) if keep and star_id is not None
+        ],
         flux_jy=np.where(usable, np.stack([band.flux_jy for band in bands], axis=1)[kept], 0.0),
         error_jy=np.where(usable, np.stack([band.error_jy for band in bands], axis=1)[kept], 1.0),
         usable=usable,
@@ -124,7 +128,9 @@ def ingest(table: pa.Table, settings: Settings, model: FitModel) -> Ingested:
         distance_error_pc=distance_error[kept],
         **{name: values[kept] for name, values in priors.items()},
     )
-    return Ingested(stars, _kept_rows(table, settings, kept), _rejected_rows(table, settings, first, rejections))
+    return Ingested(
+        stars, _kept_rows(table, settings, kept), _rejected_rows(table, settings, first, rejections)
+    )
 
 
 def read_band(table: pa.Table, band: PhotometryColumns, passband: Passband) -> BandValues:
@@ -187,8 +193,8 @@ def _exp(x):  # type: ignore[no-untyped-def]
 def jy_per_unit(unit: str, pivot_um: float) -> float:
     """Return the factor from a unit of flux density to Jy.
 
-    Per wavelength, f_nu = f_lambda * pivot**2 / c: exact, as it is what defines the pivot wavelength of a passband
-    (Tokunaga & Vacca 2005, PASP 117, 421, eq. A16, from memory).
+    Per wavelength, f_nu = f_lambda * pivot**2 / c: exact, as it is what defines the pivot wavelength of a
+    passband (Tokunaga & Vacca 2005, PASP 117, 421, from memory).
     """
     return float((1.0 * u.Unit(unit)).to_value(u.Jy, u.spectral_density(pivot_um * u.um)))
 
@@ -205,7 +211,7 @@ def _parallax_mas(table: pa.Table, settings: Settings) -> tuple[NDArray[np.float
 
 
 def _distance_pc(table: pa.Table, settings: Settings) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Return distance and error in pc; both NaN where either cannot be used or the distance is not positive."""
+    """Return distance and error in pc; both NaN where either cannot be used."""
     columns = settings.input.distance
     if columns is None:
         return np.full(table.num_rows, np.nan), np.full(table.num_rows, np.nan)
@@ -311,7 +317,9 @@ def _rejected_rows(
     columns = [
         *origin.columns,
         pa.array([rejection.reason for rejection in why], pa.string()),
-        pa.array([rejection.detail(row) for rejection, row in zip(why, rows.tolist(), strict=True)], pa.string()),
+        pa.array(
+            [rejection.detail(row) for rejection, row in zip(why, rows.tolist(), strict=True)], pa.string()
+        ),
         pa.array(["data"] * len(rows), pa.string()),
     ]
     schema = rejected_schema(output_fields(table.schema, settings)[0])

@@ -49,3 +49,8 @@ class Stars:
     def take(self, rows: slice) -> Stars:
         """Return the stars of a slice of rows."""
         return Stars(**{field.name: getattr(self, field.name)[rows] for field in fields(self)})
+
+    def at(self, rows: NDArray[np.int64]) -> Stars:
+        """Return the stars at some rows, in their order."""
+        others = {field.name: getattr(self, field.name)[rows] for field in fields(self) if field.name != "ids"}
+        return Stars(ids=[self.ids[row] for row in rows], **others)

@@ -1,0 +1,243 @@
+"""The photometric log-posterior of a block of stars, one star's walkers to a vector lane each.
+
+Walkers live in the coordinates in which the posterior is closest to Gaussian: ``heat`` = 1e4 K / T,
+``glow`` = ln(Omega T) with Omega = (R/d)^2, and A_V in magnitudes when it is fitted. The prior is
+uniform in ln T and ln Omega, so the density in these coordinates carries the Jacobian T.
+"""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from starkiln.inference.arithmetic import exp, log, log_normal_cdf
+from starkiln.inference.compile import kernel
+
+HEAT_K = 1e4
+LN_HEAT_K = float(np.log(HEAT_K))
+HALF_LN_2PI = 0.9189385332046727
+
+
+class Grid(NamedTuple):
+    """The band table as kernels read it: flattened B-spline coefficients on a uniform (ln T, A_V) grid."""
+
+    coef: NDArray[np.float64]  # (n_bands * n_rows * n_columns,)
+    n_rows: int
+    n_columns: int
+    ln_teff_min: float
+    ln_teff_step: float
+    av_step: float
+
+
+class Prior(NamedTuple):
+    """Bounds and prior parameters shared by all stars, and the outlier mixture."""
+
+    ln_teff_min: float
+    ln_teff_max: float
+    ln_omega_min: float
+    ln_omega_max: float
+    av_max: float
+    fit_av: bool
+    outlier_fraction: float  # 0 turns the mixture off
+    outlier_width: float
+
+
+class Block(NamedTuple):
+    """The data of S stars, each with its usable bands packed first.
+
+    Attributes
+    ----------
+    n_bands
+        (S,) int64, usable bands of each star.
+    band
+        (S, B) int64, index into the band table.
+    scaled_flux, inverse_error, floor
+        (S, B): flux / error, 1 / error in 1/Jy, and the fractional floor with the zero point's error.
+    limit
+        (S, B) bool.
+    av_mean, av_inverse_variance, av_rate
+        (S,): minus the log prior of A_V is (A_V - mean)^2 * inverse variance / 2 + rate * A_V.
+    av_fixed
+        (S,) magnitudes, used when A_V is not fitted.
+    log_norm
+        (S,): constant of the likelihood, minus the sum of ln(sqrt(2 pi) error).
+    """
+
+    n_bands: NDArray[np.int64]
+    band: NDArray[np.int64]
+    scaled_flux: NDArray[np.float64]
+    inverse_error: NDArray[np.float64]
+    floor: NDArray[np.float64]
+    limit: NDArray[np.bool_]
+    av_mean: NDArray[np.float64]
+    av_inverse_variance: NDArray[np.float64]
+    av_rate: NDArray[np.float64]
+    av_fixed: NDArray[np.float64]
+    log_norm: NDArray[np.float64]
+
+
+@kernel
+def log_posterior(coords, block, grid, prior, out):
+    """Write the log-posterior of every walker.
+
+    Parameters
+    ----------
+    coords
+        (S * L, ndim) with the L walkers of a star next to each other.
+    out
+        (S * L,); minus infinity outside the bounds.
+    """
+    n_stars = block.n_bands.size
+    lanes = coords.shape[0] // n_stars
+    ln_omega = np.empty(lanes)
+    ln_teff = np.empty(lanes)
+    av = np.empty(lanes)
+    outside = np.empty(lanes)
+    total = np.empty(lanes)
+    product = np.empty(lanes)
+    flux = np.empty(lanes)
+    row_weight = np.empty((4, lanes))
+    column_weight = np.empty((4, lanes))
+    corner = np.empty(lanes, dtype=np.uint64)
+    for star in range(n_stars):
+        first = star * lanes
+        for i in range(lanes):
+            heat = coords[first + i, 0]
+            ln_teff[i] = LN_HEAT_K - log(max(heat, 1e-300))
+            ln_omega[i] = coords[first + i, 1] - ln_teff[i]
+            if prior.fit_av:
+                av[i] = coords[first + i, 2]
+            else:
+                av[i] = block.av_fixed[star]
+        for i in range(lanes):
+            bad = (
+                (ln_teff[i] < prior.ln_teff_min)
+                | (ln_teff[i] > prior.ln_teff_max)
+                | (ln_omega[i] < prior.ln_omega_min)
+                | (ln_omega[i] > prior.ln_omega_max)
+                | (av[i] < 0.0)
+                | (av[i] > prior.av_max)
+            )
+            outside[i] = -np.inf if bad else 0.0
+            ln_teff[i] = min(max(ln_teff[i], prior.ln_teff_min), prior.ln_teff_max)
+            ln_omega[i] = min(max(ln_omega[i], prior.ln_omega_min), prior.ln_omega_max)
+            av[i] = min(max(av[i], 0.0), prior.av_max)
+            offset = av[i] - block.av_mean[star]
+            total[i] = (
+                block.log_norm[star]
+                + ln_teff[i]
+                - 0.5 * offset * offset * block.av_inverse_variance[star]
+                - av[i] * block.av_rate[star]
+            )
+            product[i] = 1.0
+        spline_weights(ln_teff, av, grid, row_weight, column_weight, corner)
+        for j in range(block.n_bands[star]):
+            spline_value(grid, block.band[star, j], row_weight, column_weight, corner, flux)
+            if block.limit[star, j]:
+                add_limit(flux, ln_omega, block, star, j, total)
+            else:
+                add_band(flux, ln_omega, block, star, j, prior, total, product)
+                if j % 4 == 3:
+                    for i in range(lanes):
+                        total[i] += 0.5 * log(product[i])
+                        product[i] = 1.0
+        for i in range(lanes):
+            out[first + i] = total[i] + 0.5 * log(product[i]) + outside[i]
+
+
+@kernel
+def spline_weights(ln_teff, av, grid, row_weight, column_weight, corner):
+    """Write the four uniform cubic B-spline weights along each axis and the corner of each lane's cell."""
+    last_row = np.float64(grid.n_rows - 4)
+    last_column = np.float64(grid.n_columns - 4)
+    inverse_row = 1.0 / grid.ln_teff_step
+    inverse_column = 1.0 / grid.av_step
+    for i in range(ln_teff.size):
+        x = (ln_teff[i] - grid.ln_teff_min) * inverse_row
+        cell = min(np.floor(x), last_row)
+        t = x - cell
+        row_weight[0, i] = (1.0 - t) * (1.0 - t) * (1.0 - t) / 6.0
+        row_weight[1, i] = (4.0 + t * t * (3.0 * t - 6.0)) / 6.0
+        row_weight[2, i] = (1.0 + t * (3.0 + t * (3.0 - 3.0 * t))) / 6.0
+        row_weight[3, i] = t * t * t / 6.0
+        y = av[i] * inverse_column
+        column = min(np.floor(y), last_column)
+        t = y - column
+        column_weight[0, i] = (1.0 - t) * (1.0 - t) * (1.0 - t) / 6.0
+        column_weight[1, i] = (4.0 + t * t * (3.0 * t - 6.0)) / 6.0
+        column_weight[2, i] = (1.0 + t * (3.0 + t * (3.0 - 3.0 * t))) / 6.0
+        column_weight[3, i] = t * t * t / 6.0
+        corner[i] = np.uint64(np.int64(cell) * grid.n_columns + np.int64(column))
+
+
+@kernel
+def spline_value(grid, band, row_weight, column_weight, corner, out):
+    """Write ln(band flux / (Omega Jy)) of each lane for one band."""
+    base = np.uint64(band * grid.n_rows * grid.n_columns)
+    stride = np.uint64(grid.n_columns)
+    one, two, three = np.uint64(1), np.uint64(2), np.uint64(3)
+    for i in range(out.size):
+        c0, c1 = column_weight[0, i], column_weight[1, i]
+        c2, c3 = column_weight[2, i], column_weight[3, i]
+        k = base + corner[i]
+        value = row_weight[0, i] * (
+            (c0 * grid.coef[k] + c1 * grid.coef[k + one]) + (c2 * grid.coef[k + two] + c3 * grid.coef[k + three])
+        )
+        k += stride
+        value += row_weight[1, i] * (
+            (c0 * grid.coef[k] + c1 * grid.coef[k + one]) + (c2 * grid.coef[k + two] + c3 * grid.coef[k + three])
+        )
+        k += stride
+        value += row_weight[2, i] * (
+            (c0 * grid.coef[k] + c1 * grid.coef[k + one]) + (c2 * grid.coef[k + two] + c3 * grid.coef[k + three])
+        )
+        k += stride
+        value += row_weight[3, i] * (
+            (c0 * grid.coef[k] + c1 * grid.coef[k + one]) + (c2 * grid.coef[k + two] + c3 * grid.coef[k + three])
+        )
+        out[i] = value
+
+
+@kernel
+def add_band(flux, ln_omega, block, star, j, prior, total, product):
+    """Add one detected band: all of it but a logarithm, whose argument is gathered in ``product``.
+
+    With q = (residual / total sigma)^2, v = total variance / error^2, fraction f and width w, the
+    mixture (1-f) N(0, v) + f N(0, w^2 v) is exp(-q/2w^2) [(1-f) exp(-q/2 (1 - 1/w^2)) + f/w] / sqrt(v).
+    The bracket never falls below f/w, so a product of four of them needs one logarithm.
+    """
+    observed = block.scaled_flux[star, j]
+    inverse_error = block.inverse_error[star, j]
+    floor = block.floor[star, j]
+    f = prior.outlier_fraction
+    if f > 0.0:
+        wide = 1.0 / (prior.outlier_width * prior.outlier_width)
+        far = f / prior.outlier_width
+        for i in range(flux.size):
+            model = min(exp(flux[i] + ln_omega[i]) * inverse_error, 1e30)
+            spread = floor * model
+            residual = observed - model
+            inverse_variance = 1.0 / (1.0 + spread * spread)
+            q = residual * residual * inverse_variance
+            bracket = (1.0 - f) * exp(-0.5 * q * (1.0 - wide)) + far
+            total[i] -= 0.5 * q * wide
+            product[i] *= bracket * bracket * inverse_variance
+    else:
+        for i in range(flux.size):
+            model = min(exp(flux[i] + ln_omega[i]) * inverse_error, 1e30)
+            spread = floor * model
+            residual = observed - model
+            inverse_variance = 1.0 / (1.0 + spread * spread)
+            total[i] -= 0.5 * residual * residual * inverse_variance
+            product[i] *= inverse_variance
+
+
+@kernel
+def add_limit(flux, ln_omega, block, star, j, total):
+    """Add one upper limit, ln Phi((limit - model) / total sigma)."""
+    for i in range(flux.size):
+        model = min(exp(flux[i] + ln_omega[i]) * block.inverse_error[star, j], 1e30)
+        spread = block.floor[star, j] * model
+        total[i] += log_normal_cdf((block.scaled_flux[star, j] - model) / np.sqrt(1.0 + spread * spread))

@@ -1,0 +1,365 @@
+"""Where each star's walkers begin: a grid in (T, A_V), Levenberg-Marquardt from its best peaks, and a Laplace fit."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from starkiln.inference.arithmetic import exp, log, log_normal_cdf
+from starkiln.inference.compile import kernel
+from starkiln.inference.posterior import (
+    LN_HEAT_K,
+    Block,
+    Grid,
+    Prior,
+    log_posterior,
+    spline_value,
+    spline_weights,
+)
+
+MAX_MODES = 3
+LN_TEFF_STRIDE = 0.06
+AV_NODES = (0.0, 0.1, 0.3, 0.6, 1.0, 1.5, 2.25, 3.0, 4.0, 6.0, 9.0)
+
+
+class Modes(NamedTuple):
+    """Up to MAX_MODES separate peaks of each star's posterior, best first.
+
+    Attributes
+    ----------
+    count
+        (S,) int64.
+    coords
+        (S, MAX_MODES, ndim).
+    log_density
+        (S, MAX_MODES).
+    covariance
+        (S, MAX_MODES, ndim, ndim), the inverse of the Gauss-Newton curvature.
+    """
+
+    count: NDArray[np.int64]
+    coords: NDArray[np.float64]
+    log_density: NDArray[np.float64]
+    covariance: NDArray[np.float64]
+
+
+def find_modes(block: Block, grid: Grid, prior: Prior) -> Modes:
+    """Find the separate peaks of every star's posterior."""
+    n_stars = block.n_bands.size
+    ndim = 3 if prior.fit_av else 2
+    n_nodes = int(np.ceil((prior.ln_teff_max - prior.ln_teff_min) / LN_TEFF_STRIDE)) + 1
+    ln_teff = np.linspace(prior.ln_teff_min, prior.ln_teff_max, n_nodes)
+    av = np.array([a for a in AV_NODES if a <= prior.av_max]) if prior.fit_av else np.zeros(1)
+    modes = Modes(
+        np.zeros(n_stars, np.int64),
+        np.zeros((n_stars, MAX_MODES, ndim)),
+        np.full((n_stars, MAX_MODES), -np.inf),
+        np.zeros((n_stars, MAX_MODES, ndim, ndim)),
+    )
+    _search(block, grid, prior, ln_teff, av, modes)
+    return modes
+
+
+def climb(block: Block, grid: Grid, prior: Prior, coords: NDArray[np.float64]) -> None:
+    """Move each star's point (S, ndim) to the top of the peak it stands on, in place."""
+    _climb_all(block, grid, prior, coords)
+
+
+@kernel
+def _climb_all(block, grid, prior, coords):
+    ndim = coords.shape[1]
+    curvature = np.empty((ndim, ndim))
+    for star in range(coords.shape[0]):
+        _climb(_one_star(block, star), grid, prior, coords[star], curvature)
+
+
+@kernel
+def _search(block, grid, prior, ln_teff_nodes, av_nodes, modes):
+    n_nodes = ln_teff_nodes.size
+    profile = np.empty(n_nodes)
+    best_av = np.empty(n_nodes)
+    best_ln_omega = np.empty(n_nodes)
+    ndim = modes.coords.shape[2]
+    point = np.empty(ndim)
+    curvature = np.empty((ndim, ndim))
+    for star in range(block.n_bands.size):
+        one = _one_star(block, star)
+        _profile(one, grid, prior, ln_teff_nodes, av_nodes, profile, best_av, best_ln_omega)
+        for _ in range(MAX_MODES + 1):
+            peak = _highest_peak(profile)
+            if peak < 0:
+                break
+            point[0] = exp(LN_HEAT_K - ln_teff_nodes[peak])
+            point[1] = best_ln_omega[peak] + ln_teff_nodes[peak]
+            if prior.fit_av:
+                point[2] = best_av[peak]
+            value = _climb(one, grid, prior, point, curvature)
+            profile[peak] = np.nan
+            if value > -np.inf:
+                _keep(modes, star, point, value, curvature)
+
+
+@kernel
+def _one_star(block, star):
+    rows = slice(star, star + 1)
+    return Block(
+        block.n_bands[rows],
+        block.band[rows],
+        block.scaled_flux[rows],
+        block.inverse_error[rows],
+        block.floor[rows],
+        block.limit[rows],
+        block.av_mean[rows],
+        block.av_inverse_variance[rows],
+        block.av_rate[rows],
+        block.av_fixed[rows],
+        block.log_norm[rows],
+    )
+
+
+@kernel
+def _profile(one, grid, prior, ln_teff, av_nodes, profile, best_av, best_ln_omega):
+    """Log-likelihood maximised over Omega (linear least squares) and A_V at every temperature node."""
+    n = ln_teff.size
+    flux = np.empty(n)
+    av = np.empty(n)
+    sum_ff = 0.0
+    sum_ft = np.empty(n)
+    sum_tt = np.empty(n)
+    row_weight = np.empty((4, n))
+    column_weight = np.empty((4, n))
+    corner = np.empty(n, dtype=np.uint64)
+    profile[:] = -np.inf
+    for a in range(av_nodes.size):
+        av[:] = av_nodes[a] if prior.fit_av else one.av_fixed[0]
+        spline_weights(ln_teff, av, grid, row_weight, column_weight, corner)
+        sum_ff = 0.0
+        sum_ft[:] = 0.0
+        sum_tt[:] = 1e-300
+        for j in range(one.n_bands[0]):
+            if one.limit[0, j]:
+                continue
+            spline_value(grid, one.band[0, j], row_weight, column_weight, corner, flux)
+            observed = one.scaled_flux[0, j]
+            spread = one.floor[0, j] * observed
+            weight = 1.0 / (1.0 + spread * spread)
+            sum_ff += weight * observed * observed
+            for i in range(n):
+                template = exp(flux[i]) * one.inverse_error[0, j]
+                sum_ft[i] += weight * observed * template
+                sum_tt[i] += weight * template * template
+        offset = av[0] - one.av_mean[0]
+        log_prior = -0.5 * offset * offset * one.av_inverse_variance[0] - av[0] * one.av_rate[0]
+        for i in range(n):
+            projected = max(sum_ft[i], 0.0)
+            value = -0.5 * (sum_ff - projected * projected / sum_tt[i]) + log_prior
+            if value > profile[i]:
+                profile[i] = value
+                best_av[i] = av[0]
+                omega = max(sum_ft[i] / sum_tt[i], 0.1 / np.sqrt(sum_tt[i]))
+                best_ln_omega[i] = min(max(np.log(omega), prior.ln_omega_min), prior.ln_omega_max)
+
+
+@kernel
+def _highest_peak(profile):
+    """Return the highest node no lower than its neighbours, or -1; visited peaks are NaN."""
+    best = -1
+    for i in range(profile.size):
+        if np.isnan(profile[i]):
+            continue
+        left = profile[i - 1] if i > 0 else -np.inf
+        right = profile[i + 1] if i + 1 < profile.size else -np.inf
+        if np.isnan(left) or np.isnan(right):
+            continue
+        if profile[i] >= left and profile[i] >= right and (best < 0 or profile[i] > profile[best]):
+            best = i
+    return best
+
+
+@kernel
+def _climb(one, grid, prior, point, curvature):
+    """Levenberg-Marquardt with the mixture as reweighting; moves ``point`` and returns its log density."""
+    ndim = point.size
+    gradient = np.empty(ndim)
+    trial = np.empty((1, ndim))
+    value = np.empty(1)
+    trial[0] = point
+    log_posterior(trial, one, grid, prior, value)
+    best = value[0]
+    damping = 1e-3
+    _slopes(one, grid, prior, point, gradient, curvature)
+    for _ in range(40):
+        damped = curvature.copy()
+        for k in range(ndim):
+            damped[k, k] *= 1.0 + damping
+        step = solve_positive(damped, gradient)
+        for k in range(ndim):
+            trial[0, k] = point[k] + step[k]
+        _clamp(prior, trial[0])
+        log_posterior(trial, one, grid, prior, value)
+        if value[0] > best or (best == -np.inf and value[0] > -np.inf):
+            gain = value[0] - best
+            best = value[0]
+            point[:] = trial[0]
+            _slopes(one, grid, prior, point, gradient, curvature)
+            damping = max(damping * 0.2, 1e-9)
+            if gain < 1e-4:
+                break
+        else:
+            damping *= 8.0
+            if damping > 1e8:
+                break
+    return best
+
+
+@kernel
+def _clamp(prior, point):
+    heat_low = exp(LN_HEAT_K - prior.ln_teff_max) * (1.0 + 1e-9)
+    heat_high = exp(LN_HEAT_K - prior.ln_teff_min) * (1.0 - 1e-9)
+    point[0] = min(max(point[0], heat_low), heat_high)
+    ln_teff = LN_HEAT_K - log(point[0])
+    point[1] = min(max(point[1], prior.ln_omega_min + ln_teff + 1e-9), prior.ln_omega_max + ln_teff - 1e-9)
+    if prior.fit_av:
+        point[2] = min(max(point[2], 0.0), prior.av_max)
+
+
+@kernel
+def _slopes(one, grid, prior, point, gradient, curvature):
+    """Write the gradient of the log density and its Gauss-Newton curvature, by differences of ln flux."""
+    ndim = point.size
+    ln_teff = np.empty(3)
+    av = np.empty(3)
+    step_t, step_a = 1e-4, 1e-3
+    ln_teff[:] = LN_HEAT_K - log(point[0])
+    av[:] = point[2] if prior.fit_av else one.av_fixed[0]
+    ln_omega = point[1] - ln_teff[0]
+    ln_teff[1] += step_t
+    av[2] += step_a
+    row_weight = np.empty((4, 3))
+    column_weight = np.empty((4, 3))
+    corner = np.empty(3, dtype=np.uint64)
+    spline_weights(ln_teff, av, grid, row_weight, column_weight, corner)
+    flux = np.empty(3)
+    jacobian = np.empty(ndim)
+    gradient[:] = 0.0
+    curvature[:] = 0.0
+    heat_range = exp(LN_HEAT_K - prior.ln_teff_min)
+    gradient[0] = -1.0 / point[0]
+    curvature[0, 0] = 1.0 / (heat_range * heat_range)
+    curvature[1, 1] = 1e-3
+    if prior.fit_av:
+        offset = point[2] - one.av_mean[0]
+        gradient[2] = -offset * one.av_inverse_variance[0] - one.av_rate[0]
+        curvature[2, 2] = one.av_inverse_variance[0] + max(one.av_rate[0] ** 2, 1.0 / prior.av_max**2)
+    f = prior.outlier_fraction
+    wide = 1.0 / (prior.outlier_width * prior.outlier_width)
+    for j in range(one.n_bands[0]):
+        spline_value(grid, one.band[0, j], row_weight, column_weight, corner, flux)
+        model = min(exp(flux[0] + ln_omega) * one.inverse_error[0, j], 1e30)
+        spread = one.floor[0, j] * model
+        inverse_variance = 1.0 / (1.0 + spread * spread)
+        jacobian[0] = -((flux[1] - flux[0]) / step_t - 1.0) / point[0]
+        jacobian[1] = 1.0
+        if prior.fit_av:
+            jacobian[2] = (flux[2] - flux[0]) / step_a
+        if one.limit[0, j]:
+            sigma = 1.0 / np.sqrt(inverse_variance)
+            x = (one.scaled_flux[0, j] - model) / sigma
+            hazard = np.exp(-0.5 * x * x - 0.9189385332046727 - log_normal_cdf(x)) / sigma
+            force = -hazard * model
+            weight = max(hazard * (hazard + x / sigma), 0.0)
+        else:
+            residual = one.scaled_flux[0, j] - model
+            weight = inverse_variance
+            if f > 0.0:
+                q = residual * residual * inverse_variance
+                core = (1.0 - f) * exp(-0.5 * q * (1.0 - wide))
+                weight *= (core + f * wide / prior.outlier_width) / (core + f / prior.outlier_width)
+            force = weight * residual * model
+        for k in range(ndim):
+            gradient[k] += force * jacobian[k]
+            for m in range(ndim):
+                curvature[k, m] += weight * model * model * jacobian[k] * jacobian[m]
+
+
+@kernel
+def solve_positive(matrix, vector):
+    """Solve a positive definite system by a Cholesky factor."""
+    factor = cholesky(matrix)
+    n = vector.size
+    x = vector.copy()
+    for i in range(n):
+        for k in range(i):
+            x[i] -= factor[i, k] * x[k]
+        x[i] /= factor[i, i]
+    for i in range(n - 1, -1, -1):
+        for k in range(i + 1, n):
+            x[i] -= factor[k, i] * x[k]
+        x[i] /= factor[i, i]
+    return x
+
+
+@kernel
+def cholesky(matrix):
+    """Return the lower Cholesky factor; a pivot that rounding made too small is held up."""
+    n = matrix.shape[0]
+    factor = np.zeros((n, n))
+    for i in range(n):
+        for j in range(i + 1):
+            total = matrix[i, j]
+            for k in range(j):
+                total -= factor[i, k] * factor[j, k]
+            if i == j:
+                factor[i, i] = np.sqrt(max(total, 1e-12 * matrix[i, i] + 1e-300))
+            else:
+                factor[i, j] = total / factor[j, j]
+    return factor
+
+
+@kernel
+def inverse_positive(matrix):
+    """Return the inverse of a positive definite matrix."""
+    n = matrix.shape[0]
+    inverse = np.empty((n, n))
+    unit = np.zeros(n)
+    for i in range(n):
+        unit[:] = 0.0
+        unit[i] = 1.0
+        inverse[:, i] = solve_positive(matrix, unit)
+    return inverse
+
+
+@kernel
+def _keep(modes, star, point, value, curvature):
+    """Insert a peak in order of height, unless it is one already found or there are enough."""
+    count = modes.count[star]
+    for m in range(count):
+        if abs(np.log(point[0] / modes.coords[star, m, 0])) < 0.01:
+            if value <= modes.log_density[star, m]:
+                return
+            for k in range(m, count - 1):
+                _copy_mode(modes, star, k + 1, k)
+            count -= 1
+            break
+    place = count
+    for m in range(count):
+        if value > modes.log_density[star, m]:
+            place = m
+            break
+    if place >= MAX_MODES:
+        return
+    for m in range(min(count, MAX_MODES - 1), place, -1):
+        _copy_mode(modes, star, m - 1, m)
+    modes.coords[star, place] = point
+    modes.log_density[star, place] = value
+    modes.covariance[star, place] = inverse_positive(curvature)
+    modes.count[star] = min(count + 1, MAX_MODES)
+
+
+@kernel
+def _copy_mode(modes, star, source, target):
+    modes.coords[star, target] = modes.coords[star, source]
+    modes.log_density[star, target] = modes.log_density[star, source]
+    modes.covariance[star, target] = modes.covariance[star, source]

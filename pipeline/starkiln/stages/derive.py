@@ -1,0 +1,89 @@
+"""From draws of temperature, angular size and dust to radius, luminosity and distance."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from starkiln.inference.distances import GAUSSIAN, NONE, PARALLAX, DistanceData, draw_distances
+from starkiln.inference.ensemble import Draws
+from starkiln.inference.streams import star_streams
+from starkiln.physics.constants import LSUN_W, MAS_PER_RAD, RSUN_M, STEFAN_BOLTZMANN_W_PER_M2_K4
+from starkiln.settings import Settings
+from starkiln.stages.model import LN_RSUN_PC, FitModel
+from starkiln.stages.stars import Stars
+
+LN_LUM_COEFFICIENT = float(np.log(4.0 * np.pi * RSUN_M**2 * STEFAN_BOLTZMANN_W_PER_M2_K4 / LSUN_W))
+
+
+class Derived(NamedTuple):
+    """Joint draws (K, N) of every reported quantity, as natural logarithms but for A_V.
+
+    Attributes
+    ----------
+    kept_share
+        (K,): effective share of the draws left by the bounds on R.
+    """
+
+    ln_teff: NDArray[np.float64]
+    ln_radius: NDArray[np.float64]
+    ln_lum: NDArray[np.float64]
+    ln_dist: NDArray[np.float64]
+    av: NDArray[np.float64]
+    ln_ang_diam: NDArray[np.float64]
+    ln_fbol: NDArray[np.float64]
+    kept_share: NDArray[np.float64]
+
+
+def derive(stars: Stars, draws: Draws, model: FitModel, settings: Settings) -> Derived:
+    """Draw distances and compute every quantity of every joint draw.
+
+    Parameters
+    ----------
+    stars
+        The K stars of ``draws``, in its order.
+
+    Notes
+    -----
+    R = d sqrt(Omega); L = 4 pi R^2 sigma T^4 (Stefan-Boltzmann); F_bol = Omega sigma T^4; the angular diameter
+    is 2 sqrt(Omega).
+    """
+    streams = star_streams(stars.ids, settings.run.seed, b"distance")
+    distances = draw_distances(
+        np.ascontiguousarray(draws.chain[:, 1]),
+        distance_data(stars),
+        settings.model.distance.bounds_pc,
+        model.ln_radius_bounds_pc,
+        streams,
+    )
+    photometric = np.take_along_axis(draws.chain, distances.source[:, None], axis=2)
+    ln_teff, ln_omega = photometric[:, 0], photometric[:, 1]
+    if photometric.shape[1] > 2:
+        av = photometric[:, 2]
+    else:
+        av = np.broadcast_to(stars.av_mean[:, None], ln_teff.shape)
+    ln_radius = distances.ln_dist_pc + 0.5 * ln_omega - LN_RSUN_PC
+    return Derived(
+        ln_teff=ln_teff,
+        ln_radius=ln_radius,
+        ln_lum=LN_LUM_COEFFICIENT + 2.0 * ln_radius + 4.0 * ln_teff,
+        ln_dist=distances.ln_dist_pc,
+        av=av,
+        ln_ang_diam=np.log(2.0 * MAS_PER_RAD) + 0.5 * ln_omega,
+        ln_fbol=np.log(STEFAN_BOLTZMANN_W_PER_M2_K4) + ln_omega + 4.0 * ln_teff,
+        kept_share=distances.kept_share,
+    )
+
+
+def distance_data(stars: Stars) -> DistanceData:
+    """Return what is known of each star's distance: the user's own, else the parallax, else nothing."""
+    given = np.isfinite(stars.distance_pc)
+    measured = np.isfinite(stars.parallax_mas) & ~given
+    return DistanceData(
+        kind=np.select([given, measured], [GAUSSIAN, PARALLAX], NONE),
+        value=np.where(given, stars.distance_pc, stars.parallax_mas),
+        error=np.where(given, stars.distance_error_pc, stars.parallax_error_mas),
+        length_scale_pc=stars.length_scale_pc,
+    )

@@ -1,0 +1,109 @@
+"""The whole chain for the rows of a table: ingest, fit, derive, summarise."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+
+from starkiln.flags import BY_NAME
+from starkiln.settings import Settings
+from starkiln.stages.derive import derive
+from starkiln.stages.fit import fit
+from starkiln.stages.ingest import Ingested, ingest
+from starkiln.stages.model import FitModel
+from starkiln.stages.stars import Stars
+from starkiln.stages.summarise import kept_draws, summarise
+from starkiln.tables.columns import catalogue_schema, draws_schema, output_fields
+from starkiln.tables.hashes import row_hashes
+
+
+@dataclass(frozen=True)
+class PartTables:
+    """What a part leaves: its catalogue rows, its rejected rows and, if asked for, draws."""
+
+    catalogue: pa.Table
+    rejected: pa.Table
+    draws: pa.Table | None
+
+
+def process_part(table: pa.Table, settings: Settings, model: FitModel) -> PartTables:
+    """Fit the rows of a table that can be fitted, and set the others aside with the reason.
+
+    Parameters
+    ----------
+    table
+        The used columns with ``_input_file``, ``_input_row`` and ``_duplicate`` (0 unique, 1 first copy, 2 later).
+    """
+    ingested = ingest(table, settings, model)
+    columns, draws = _fit_columns(ingested.stars, model, settings)
+    if len(ingested.stars):
+        columns["row_hash"] = _kept_hashes(table, ingested, settings)
+        first_copy = ingested.kept["_duplicate"].to_numpy() == 1
+        columns["flags"] |= np.where(first_copy, BY_NAME["duplicate_id"].value, 0).astype(np.int32)
+    id_field, carry_fields = output_fields(table.schema, settings)
+    catalogue = _table(catalogue_schema(settings, id_field, carry_fields), ingested.kept, columns)
+    kept = None
+    if settings.sampling.keep_draws:
+        kept = _table(draws_schema(settings, id_field), ingested.kept, draws)
+    return PartTables(catalogue, ingested.rejected, kept)
+
+
+def _fit_columns(
+    stars: Stars, model: FitModel, settings: Settings
+) -> tuple[dict[str, np.ndarray], dict[str, np.ndarray]]:
+    """Return the fitted columns and the kept draws of every star, in the order of the stars."""
+    columns: dict[str, np.ndarray] = {}
+    draws: dict[str, np.ndarray] = {}
+    for fitted in fit(stars, model, settings):
+        rows = fitted.first + fitted.draws.stars
+        some = stars.at(rows)
+        derived = derive(some, fitted.draws, model, settings)
+        _place(columns, rows, len(stars), summarise(some, fitted, derived, model, settings))
+        if settings.sampling.keep_draws:
+            _place(draws, rows, len(stars), kept_draws(derived, settings))
+    return columns, draws
+
+
+def _place(target: dict[str, Any], rows: np.ndarray, n: int, values: dict[str, Any]) -> None:
+    for name, column in values.items():
+        if name not in target:
+            target[name] = np.zeros((n, *column.shape[1:]), column.dtype)
+        target[name][rows] = column
+
+
+def _kept_hashes(table: pa.Table, ingested: Ingested, settings: Settings) -> np.ndarray:
+    places = np.ones(table.num_rows, bool)
+    rejected = set(
+        zip(
+            ingested.rejected["input_file"].to_pylist(), ingested.rejected["input_row"].to_pylist(), strict=True
+        )
+    )
+    if rejected:
+        origins = zip(table["_input_file"].to_pylist(), table["_input_row"].to_pylist(), strict=True)
+        places = np.array([origin not in rejected for origin in origins])
+    return row_hashes(table.filter(pa.array(places)), settings)
+
+
+def _table(schema: pa.Schema, kept: pa.Table, columns: dict[str, np.ndarray]) -> pa.Table:
+    """Return a table of the schema: the input's own columns from ``kept``, the rest from ``columns``."""
+    arrays = []
+    for field in schema:
+        if field.name in kept.column_names and field.name not in columns:
+            arrays.append(kept[field.name].combine_chunks().cast(field.type))
+        elif field.name not in columns:
+            arrays.append(pa.nulls(0, field.type))
+        else:
+            arrays.append(_array(columns[field.name], field.type))
+    return pa.table(arrays, schema=schema)
+
+
+def _array(values: np.ndarray, kind: pa.DataType) -> pa.Array:
+    """Return an Arrow array of a type; NaN becomes null."""
+    if pa.types.is_fixed_size_list(kind):
+        return pa.FixedSizeListArray.from_arrays(pa.array(values.ravel(), kind.value_type), kind.list_size)
+    if values.dtype.kind == "f":
+        return pa.array(values.astype(kind.to_pandas_dtype()), kind, mask=np.isnan(values))
+    return pa.array(values, kind)

@@ -1,0 +1,227 @@
+"""From joint draws to the columns of the catalogue: quantiles, diagnostics and flags."""
+
+from __future__ import annotations
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+from scipy.special import gammaincc
+
+from starkiln.flags import BY_NAME
+from starkiln.inference.arithmetic import exp_array
+from starkiln.inference.checks import Agreement, compare
+from starkiln.inference.posterior import LN_HEAT_K, Block, Prior
+from starkiln.inference.start import climb
+from starkiln.inference.summaries import correlations, has_gap, means, quantiles
+from starkiln.physics.constants import LSUN_W, LUMINOSITY_MBOL_ZERO_W, WIEN_M_K
+from starkiln.settings import Settings
+from starkiln.stages.derive import Derived
+from starkiln.stages.fit import Fitted
+from starkiln.stages.model import FitModel
+from starkiln.stages.stars import Stars
+from starkiln.tables.columns import QUANTITIES
+
+QUANTILE_NAMES = ("lo95", "lo68", "p50", "hi68", "hi95")
+PREDICTIVE_DRAWS = 64
+DETECTION_SIGMA = 3.0
+FEW_BANDS = 5
+POOR_PARALLAX = 5.0
+POOR_FIT = 0.001
+OUTLIER = 0.9
+EXCESS_SIGMA = 3.0
+INFRARED_UM = 3.0
+ULTRAVIOLET_UM = 0.32
+NOT_WITHOUT_DETECTION = ("teff", "radius", "lum", "ang_diam", "fbol")
+
+Columns = dict[str, NDArray[np.generic]]
+
+
+def summarise(stars: Stars, fitted: Fitted, derived: Derived, model: FitModel, settings: Settings) -> Columns:
+    """Return the fitted columns of K stars, all but ``row_hash``, as float64, integer or string arrays.
+
+    Parameters
+    ----------
+    stars
+        The K stars of ``fitted.draws``, in its order.
+    """
+    columns: Columns = {}
+    no_detection = _detections(stars) < 2
+    for name, draws, logarithmic in _reported(derived):
+        values = quantiles(draws)
+        if logarithmic:
+            values = exp_array(values)
+        if name in NOT_WITHOUT_DETECTION:
+            values[no_detection] = np.nan
+        for place, suffix in enumerate(QUANTILE_NAMES):
+            columns[f"{name}_{suffix}"] = values[:, place]
+    columns["lambda_peak_p50"] = WIEN_M_K * 1e9 / columns["teff_p50"]
+    columns["mbol_p50"] = -2.5 * np.log10(columns["lum_p50"] * (LSUN_W / LUMINOSITY_MBOL_ZERO_W))
+    columns |= _correlations(derived, no_detection)
+    columns |= _agreement(fitted, derived, model, settings)
+    columns |= _diagnostics(fitted, derived)
+    columns["photosphere"] = np.full(len(stars), settings.model.photosphere)
+    columns["n_bands"] = stars.usable.sum(axis=1)
+    columns["n_limits"] = stars.limit.sum(axis=1)
+    columns["flags"] = _flags(stars, fitted, derived, columns, model, settings)
+    return columns
+
+
+def kept_draws(derived: Derived, settings: Settings) -> dict[str, NDArray[np.float32]]:
+    """Return evenly spaced joint draws (K, keep_draws) of each quantity, as they are reported."""
+    n = derived.ln_teff.shape[1]
+    places = np.linspace(0, n - 1, settings.sampling.keep_draws).astype(np.int64)
+    kept = {}
+    for name, draws, logarithmic in _reported(derived):
+        some = np.ascontiguousarray(draws[:, places])
+        kept[name] = (exp_array(some) if logarithmic else some).astype(np.float32)
+    return kept
+
+
+def _reported(derived: Derived) -> list[tuple[str, NDArray[np.float64], bool]]:
+    by_name = {
+        "teff": derived.ln_teff,
+        "radius": derived.ln_radius,
+        "lum": derived.ln_lum,
+        "dist": derived.ln_dist,
+        "av": derived.av,
+        "ang_diam": derived.ln_ang_diam,
+        "fbol": derived.ln_fbol,
+    }
+    return [(quantity.name, by_name[quantity.name], quantity.name != "av") for quantity in QUANTITIES]
+
+
+def _detections(stars: Stars) -> NDArray[np.int64]:
+    measured = stars.usable & ~stars.limit
+    return np.asarray((measured & (stars.flux_jy > DETECTION_SIGMA * stars.error_jy)).sum(axis=1))
+
+
+def _correlations(derived: Derived, no_detection: NDArray[np.bool_]) -> Columns:
+    pairs = {
+        "corr_teff_radius": correlations(derived.ln_teff, derived.ln_radius),
+        "corr_teff_lum": correlations(derived.ln_teff, derived.ln_lum),
+        "corr_teff_av": correlations(derived.ln_teff, np.ascontiguousarray(derived.av)),
+        "corr_radius_lum": correlations(derived.ln_radius, derived.ln_lum),
+    }
+    return {name: np.where(no_detection, np.nan, values) for name, values in pairs.items()}
+
+
+def mode_points(fitted: Fitted, derived: Derived, model: FitModel) -> NDArray[np.float64]:
+    """Return the posterior mode of each star, (K, 3, 1) of ln T, ln Omega and A_V: the best draw, climbed from."""
+    best = np.argmax(fitted.draws.log_prob, axis=1)
+    chain = np.take_along_axis(fitted.draws.chain, best[:, None, None], axis=2)[:, :, 0]
+    coords = chain.copy()
+    coords[:, 0] = exp_array(LN_HEAT_K - chain[:, 0])
+    coords[:, 1] = chain[:, 1] + chain[:, 0]
+    climb(fitted.block, model.grid, model.prior, coords)
+    return _points(coords, derived)[:, :, None]
+
+
+def _points(coords: NDArray[np.float64], derived: Derived) -> NDArray[np.float64]:
+    points = np.empty((len(coords), 3))
+    points[:, 0] = LN_HEAT_K - np.log(coords[:, 0])
+    points[:, 1] = coords[:, 1] - points[:, 0]
+    points[:, 2] = coords[:, 2] if coords.shape[1] > 2 else derived.av[:, 0]
+    return points
+
+
+def _thinned(fitted: Fitted, derived: Derived) -> NDArray[np.float64]:
+    """Return PREDICTIVE_DRAWS evenly spaced photometric draws, (K, 3, L)."""
+    chain = fitted.draws.chain
+    places = np.linspace(0, chain.shape[2] - 1, PREDICTIVE_DRAWS).astype(np.int64)
+    points = np.empty((len(chain), 3, PREDICTIVE_DRAWS))
+    points[:, : chain.shape[1]] = chain[:, :, places]
+    if chain.shape[1] == 2:
+        points[:, 2] = derived.av[:, places]
+    return points
+
+
+def _agreement(fitted: Fitted, derived: Derived, model: FitModel, settings: Settings) -> Columns:
+    n_bands = len(model.floor)
+    mode = compare(mode_points(fitted, derived, model), fitted.block, model.grid, model.prior, n_bands)
+    drawn: Agreement = compare(_thinned(fitted, derived), fitted.block, model.grid, model.prior, n_bands)
+    measured = _measured_bands(fitted.block)
+    with np.errstate(invalid="ignore"):
+        chance = gammaincc(np.maximum(measured, 1)[:, None] / 2.0, drawn.chi2 / 2.0)
+    columns: Columns = {
+        "chi2": mode.chi2[:, 0],
+        "ppp_value": np.where(measured > 0, means(chance), np.nan),
+    }
+    for place, label in enumerate(model.passbands):
+        columns[f"residual_{label}"] = mode.residual[:, place]
+        columns[f"outlier_{label}"] = drawn.outlier[:, place]
+    return columns
+
+
+def _measured_bands(block: Block) -> NDArray[np.int64]:
+    used = np.arange(block.band.shape[1]) < block.n_bands[:, None]
+    return np.asarray((used & ~block.limit).sum(axis=1))
+
+
+def _diagnostics(fitted: Fitted, derived: Derived) -> Columns:
+    draws, convergence = fitted.draws, fitted.draws.convergence
+    return {
+        "ess_bulk": convergence.ess_bulk.min(axis=1) * derived.kept_share,
+        "ess_tail": convergence.ess_tail.min(axis=1) * derived.kept_share,
+        "autocorr_steps": convergence.autocorr_steps.max(axis=1),
+        "rhat_max": convergence.rhat.max(axis=1),
+        "n_steps": np.full(len(draws.stars), draws.n_steps),
+        "accept_frac": draws.accept_frac,
+    }
+
+
+def _flags(
+    stars: Stars, fitted: Fitted, derived: Derived, columns: Columns, model: FitModel, settings: Settings
+) -> NDArray[np.int32]:
+    """Return the flags that the data and the sampling raise."""
+    given = np.isfinite(stars.distance_pc)
+    has_parallax = np.isfinite(stars.parallax_mas) & ~given
+    no_detection = _detections(stars) < 2
+    with np.errstate(invalid="ignore"):
+        raised = {
+            "few_bands": columns["n_bands"] < FEW_BANDS,
+            "poor_parallax": has_parallax & (stars.parallax_mas < POOR_PARALLAX * stars.parallax_error_mas),
+            "negative_parallax": has_parallax & (stars.parallax_mas < 0.0),
+            "no_parallax": ~has_parallax & ~given,
+            "not_converged": ~fitted.draws.converged,
+            "several_modes": _several_modes(derived) & ~no_detection,
+            "no_detection": no_detection,
+            "poor_fit": columns["ppp_value"] < POOR_FIT,
+            "band_outlier": _any_band(columns, "outlier", list(model.passbands), OUTLIER),
+            "infrared_excess": _excess(columns, model, lambda pivot_um: pivot_um > INFRARED_UM),
+            "ultraviolet_excess": _excess(columns, model, lambda pivot_um: pivot_um < ULTRAVIOLET_UM),
+            **_at_bounds(derived, model.prior, settings),
+        }
+    flags = np.zeros(len(stars), np.int32)
+    for name, rows in raised.items():
+        flags |= np.where(rows, np.int32(BY_NAME[name].value), np.int32(0))
+    return flags
+
+
+def _several_modes(derived: Derived) -> NDArray[np.bool_]:
+    interval = quantiles(derived.ln_teff)
+    return has_gap(derived.ln_teff, interval[:, 3] - interval[:, 1])
+
+
+def _at_bounds(derived: Derived, prior: Prior, settings: Settings) -> dict[str, NDArray[np.bool_]]:
+    ln_teff, av, ln_radius = quantiles(derived.ln_teff), quantiles(derived.av), quantiles(derived.ln_radius)
+    ln_radius_min, ln_radius_max = np.log(settings.model.radius_rsun)
+    return {
+        "temperature_at_bound": (ln_teff[:, 0] < prior.ln_teff_min + 0.01)
+        | (ln_teff[:, 4] > prior.ln_teff_max - 0.01),
+        "extinction_at_bound": (av[:, 4] > 0.98 * prior.av_max) & prior.fit_av,
+        "radius_at_bound": (ln_radius[:, 0] < ln_radius_min + 0.05)
+        | (ln_radius[:, 4] > ln_radius_max - 0.05)
+        | (derived.kept_share == 0.0),
+    }
+
+
+def _any_band(columns: Columns, prefix: str, labels: list[str], level: float) -> NDArray[np.bool_]:
+    values = np.stack([columns[f"{prefix}_{label}"] for label in labels])
+    return np.asarray((values > level).any(axis=0))
+
+
+def _excess(columns: Columns, model: FitModel, longward: object) -> NDArray[np.bool_]:
+    labels = [label for label, passband in model.passbands.items() if longward(passband.pivot_um)]  # type: ignore[operator]
+    if not labels:
+        return np.zeros(len(columns["n_bands"]), bool)
+    return _any_band(columns, "residual", labels, EXCESS_SIGMA)
