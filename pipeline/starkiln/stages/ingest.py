@@ -1,4 +1,4 @@
-"""From columns to what a fit needs: fluxes in Jy, parallaxes in mas, prior parameters; other rows are rejected."""
+"""From columns to what a fit needs: fluxes in Jy, parallaxes in mas, priors; other rows are rejected."""
 
 from __future__ import annotations
 
@@ -160,7 +160,7 @@ def _marks(table: pa.Table, column: str | None) -> NDArray[np.bool_]:
 def _to_jy(
     value: NDArray[np.float64], error: NDArray[np.float64], band: PhotometryColumns, passband: Passband
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    if band.unit == "mag":
+    if band.system is not None:
         return magnitudes_to_jy(value, error, band.zero_point_jy or zero_point_jy(passband, band.system))
     factor = jy_per_unit(band.unit, passband.pivot_um)
     return value * factor, error * factor

@@ -76,7 +76,7 @@ def column_uses(settings: Settings) -> dict[str, list[Use]]:
 
 
 def handed_out_type(kind: pa.DataType) -> pa.DataType:
-    """Return the type a column is handed out as: dictionaries decoded, one kind of string, decimals as float64."""
+    """Return the type a column is handed out as: no dictionary, one kind of string, decimals as float64."""
     if pa.types.is_dictionary(kind):
         return handed_out_type(kind.value_type)
     if pa.types.is_large_string(kind) or pa.types.is_string_view(kind):
@@ -85,7 +85,9 @@ def handed_out_type(kind: pa.DataType) -> pa.DataType:
 
 
 def _is_carried(kind: pa.DataType) -> bool:
-    return is_id(kind) or pa.types.is_floating(kind) or pa.types.is_boolean(kind) or pa.types.is_timestamp(kind)
+    return (
+        is_id(kind) or pa.types.is_floating(kind) or pa.types.is_boolean(kind) or pa.types.is_timestamp(kind)
+    )
 
 
 def is_id(kind: pa.DataType) -> bool:
@@ -126,11 +128,11 @@ def column_problem(field: pa.Field, uses: list[Use]) -> str | None:
         fits, wanted = _WANTED[use.kind]
         exact = field.type if use.kind in ("id", "carry") else handed_out_type(field.type)
         if not fits(handed_out_type(field.type)) or pa.types.is_decimal(exact):
-            return f"column {field.name!r} holds {field.type}, but {use.key} needs {wanted}: cast it in the table"
+            return f"column {field.name!r} holds {field.type}, but {use.key} needs {wanted}: cast it"
         if unit and use.unit and not _is_stated_unit(unit, use.unit, use.system):
             return (
-                f"column {field.name!r} is in {unit!r} by the file's metadata, but {use.key} has {use.unit!r}: "
-                "correct the one that is wrong"
+                f"column {field.name!r} is in {unit!r} by the file's metadata, "
+                f"but {use.key} has {use.unit!r}: correct the one that is wrong"
             )
     return None
 
@@ -154,7 +156,7 @@ def _is_stated_unit(found: str, stated: str, system: str | None) -> bool:
 
 @lru_cache(maxsize=1024)
 def same_unit(first: str, second: str) -> bool:
-    """Tell whether two texts name one unit, in dimension and in scale; unknown units must agree to the letter."""
+    """Tell whether two texts name one unit, in dimension and in scale; unknown ones must be the same text."""
     if first == second:
         return True
     units = known_unit(first), known_unit(second)

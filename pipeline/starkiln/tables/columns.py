@@ -69,37 +69,91 @@ _QUANTILES = (
 _CORRELATION = "Correlation of ln({0}) and {1} over the posterior draws"
 
 _SINGLE = (
-    Column("lambda_peak_p50", pa.float32(), "nm", "em.wl;stat.median",
-           "Wien peak wavelength of the spectrum per unit wavelength, posterior median"),
-    Column("mbol_p50", pa.float32(), "mag", "phys.magAbs.bol;stat.median",
-           "Absolute bolometric magnitude on the IAU 2015 scale, posterior median"),
-    Column("corr_teff_radius", pa.float32(), None, "stat.correlation", _CORRELATION.format("teff", "ln(radius)")),
+    Column(
+        "lambda_peak_p50",
+        pa.float32(),
+        "nm",
+        "em.wl;stat.median",
+        "Wien peak wavelength of the spectrum per unit wavelength, posterior median",
+    ),
+    Column(
+        "mbol_p50",
+        pa.float32(),
+        "mag",
+        "phys.magAbs.bol;stat.median",
+        "Absolute bolometric magnitude on the IAU 2015 scale, posterior median",
+    ),
+    Column(
+        "corr_teff_radius", pa.float32(), None, "stat.correlation", _CORRELATION.format("teff", "ln(radius)")
+    ),
     Column("corr_teff_lum", pa.float32(), None, "stat.correlation", _CORRELATION.format("teff", "ln(lum)")),
-    Column("corr_teff_av", pa.float32(), None, "stat.correlation",
-           _CORRELATION.format("teff", "av (av itself, not its logarithm)")),
-    Column("corr_radius_lum", pa.float32(), None, "stat.correlation", _CORRELATION.format("radius", "ln(lum)")),
+    Column(
+        "corr_teff_av",
+        pa.float32(),
+        None,
+        "stat.correlation",
+        _CORRELATION.format("teff", "av (av itself, not its logarithm)"),
+    ),
+    Column(
+        "corr_radius_lum", pa.float32(), None, "stat.correlation", _CORRELATION.format("radius", "ln(lum)")
+    ),
     Column("photosphere", pa.string(), None, "meta.code.class", "Photosphere model that was fitted"),
-    Column("chi2", pa.float32(), None, "stat.fit.chi2",
-           "Chi squared over the measured bands at the posterior mode, with the total variance (errors and floors)"),
+    Column(
+        "chi2",
+        pa.float32(),
+        None,
+        "stat.fit.chi2",
+        "Chi squared of the measured bands at the posterior mode, total variance (errors and floors)",
+    ),
     Column("n_bands", pa.int16(), None, "meta.number", "Number of bands fitted, upper limits included"),
     Column("n_limits", pa.int16(), None, "meta.number", "Number of bands fitted as upper limits"),
-    Column("ppp_value", pa.float32(), None, "stat.probability",
-           "Posterior predictive p-value: mean over posterior draws of the chance of a chi squared at least as large"),
+    Column(
+        "ppp_value",
+        pa.float32(),
+        None,
+        "stat.probability",
+        "Posterior predictive p-value: mean over posterior draws of the chance "
+        "of a chi squared at least as large",
+    ),
 )
 
 _SAMPLING = (
-    Column("ess_bulk", pa.float32(), None, "stat.value",
-           "Rank-normalised bulk effective sample size, the least over the parameters"),
-    Column("ess_tail", pa.float32(), None, "stat.value",
-           "Rank-normalised tail effective sample size, the least over the parameters"),
-    Column("autocorr_steps", pa.float32(), None, "stat.value",
-           "Integrated autocorrelation time in steps, the largest over the parameters"),
-    Column("rhat_max", pa.float32(), None, "stat.value",
-           "Rank-normalised split R-hat, the largest over the parameters"),
+    Column(
+        "ess_bulk",
+        pa.float32(),
+        None,
+        "stat.value",
+        "Rank-normalised bulk effective sample size, the least over the parameters",
+    ),
+    Column(
+        "ess_tail",
+        pa.float32(),
+        None,
+        "stat.value",
+        "Rank-normalised tail effective sample size, the least over the parameters",
+    ),
+    Column(
+        "autocorr_steps",
+        pa.float32(),
+        None,
+        "stat.value",
+        "Integrated autocorrelation time in steps, the largest over the parameters",
+    ),
+    Column(
+        "rhat_max",
+        pa.float32(),
+        None,
+        "stat.value",
+        "Rank-normalised split R-hat, the largest over the parameters",
+    ),
     Column("n_steps", pa.int32(), None, "meta.number", "Steps each walker took after the burn-in"),
-    Column("accept_frac", pa.float32(), None, "stat.value", "Fraction of proposals accepted after the burn-in"),
+    Column(
+        "accept_frac", pa.float32(), None, "stat.value", "Fraction of proposals accepted after the burn-in"
+    ),
     Column("flags", pa.int32(), None, "meta.code.qual", "Quality flags, one bit each"),
-    Column("row_hash", pa.int64(), None, "meta.checksum", "Hash of the input values this row was fitted from"),
+    Column(
+        "row_hash", pa.int64(), None, "meta.checksum", "Hash of the input values this row was fitted from"
+    ),
 )
 
 
@@ -118,14 +172,24 @@ def _band_columns(settings: Settings) -> list[Column]:
     columns = []
     if per_band in ("residual", "both"):
         columns += [
-            Column(f"residual_{label}", pa.float32(), None, "stat.fit.residual",
-                   f"Observed minus model flux in {label} at the posterior mode, in sigmas of the total variance")
+            Column(
+                f"residual_{label}",
+                pa.float32(),
+                None,
+                "stat.fit.residual",
+                f"Observed minus model flux in {label} at the posterior mode, in sigmas of the total variance",
+            )
             for label in labels
         ]
     if per_band == "both" and settings.model.outliers:
         columns += [
-            Column(f"outlier_{label}", pa.float32(), None, "stat.probability",
-                   f"Posterior probability that the flux in {label} is an outlier")
+            Column(
+                f"outlier_{label}",
+                pa.float32(),
+                None,
+                "stat.probability",
+                f"Posterior probability that the flux in {label} is an outlier",
+            )
             for label in labels
         ]
     return columns
@@ -136,8 +200,10 @@ def fitted_columns(settings: Settings) -> list[Column]:
     return [*_quantile_columns(), *_SINGLE, *_band_columns(settings), *_SAMPLING]
 
 
-def catalogue_columns(settings: Settings, id_field: pa.Field, carry_fields: Sequence[pa.Field]) -> list[Column]:
-    """Return every catalogue column in file order: the id, the carried columns, the fitted ones.
+def catalogue_columns(
+    settings: Settings, id_field: pa.Field, carry_fields: Sequence[pa.Field]
+) -> list[Column]:
+    """Return every catalogue column in order: the id, the carried ones, the fitted ones.
 
     Raises
     ------
@@ -178,11 +244,15 @@ def catalogue_schema(settings: Settings, id_field: pa.Field, carry_fields: Seque
 
 
 REJECTED = (
-    Column("input_file", pa.string(), None, "meta.dataset", "Input file, relative to the folder of the tables"),
+    Column(
+        "input_file", pa.string(), None, "meta.dataset", "Input file, relative to the folder of the tables"
+    ),
     Column("input_row", pa.int64(), None, "meta.record", "Row in the input file, counted from 0"),
     Column("reason", pa.string(), None, "meta.code.error", "Why the row was not fitted"),
     Column("detail", pa.string(), None, "meta.note", "The columns and values behind the reason"),
-    Column("kind", pa.string(), None, "meta.code.class", "data: the row itself; fault: the row made the fit fail"),
+    Column(
+        "kind", pa.string(), None, "meta.code.class", "data: the row itself; fault: the row made the fit fail"
+    ),
 )
 
 
@@ -208,20 +278,26 @@ def draws_schema(settings: Settings, id_field: pa.Field) -> pa.Schema:
     """
     _refuse_collisions([id_field], {quantity.name for quantity in DRAWN}, "the table of draws")
     draws = pa.list_(pa.float32(), settings.sampling.keep_draws)
-    return _versioned([
-        id_field,
-        *(Column(q.name, draws, q.unit, q.ucd, f"{q.title}, posterior draws").field() for q in DRAWN),
-    ])
+    return _versioned(
+        [
+            id_field,
+            *(Column(q.name, draws, q.unit, q.ucd, f"{q.title}, posterior draws").field() for q in DRAWN),
+        ]
+    )
 
 
 def index_schema() -> pa.Schema:
     """Return the schema of the index: how an unchanged row finds its result."""
-    return _versioned([
-        Column("id_hash", pa.int64(), None, "meta.checksum", "Hash of the id").field(),
-        Column("row_hash", pa.int64(), None, "meta.checksum", "Hash of the input values").field(),
-        Column("file", pa.string(), None, "meta.dataset", "File of the result, relative to the generation").field(),
-        Column("row", pa.int64(), None, "meta.record", "Row in that file, counted from 0").field(),
-    ])
+    return _versioned(
+        [
+            Column("id_hash", pa.int64(), None, "meta.checksum", "Hash of the id").field(),
+            Column("row_hash", pa.int64(), None, "meta.checksum", "Hash of the input values").field(),
+            Column(
+                "file", pa.string(), None, "meta.dataset", "File of the result, relative to the generation"
+            ).field(),
+            Column("row", pa.int64(), None, "meta.record", "Row in that file, counted from 0").field(),
+        ]
+    )
 
 
 def _versioned(fields: Sequence[pa.Field]) -> pa.Schema:

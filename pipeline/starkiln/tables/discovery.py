@@ -21,8 +21,8 @@ _NULL_PARTITION = "__HIVE_DEFAULT_PARTITION__"
 def find_files(tables: str) -> tuple[Path, list[Path]]:
     """Return the folder that names are relative to, and the files in order of their names.
 
-    Folders are searched to any depth for files with one of `SUFFIXES`; names below the folder that begin with "." or
-    "_" are passed by.
+    Folders are searched to any depth for files with one of `SUFFIXES`; names below the folder that begin
+    with "." or "_" are passed by.
 
     Raises
     ------
@@ -67,9 +67,13 @@ def _is_hidden(name: str) -> bool:
 
 
 def partition_values(root: Path, paths: Sequence[Path]) -> list[dict[str, PartitionValue]]:
-    """Return what the `key=value` folders above each file say; all values of a key are integers, or all strings."""
+    """Return what the `key=value` folders above each file say.
+
+    The values of a key are integers if every one is, else strings.
+    """
     texts = [
-        dict(part.split("=", 1) for part in path.relative_to(root).parts[:-1] if "=" in part) for path in paths
+        dict(part.split("=", 1) for part in path.relative_to(root).parts[:-1] if "=" in part)
+        for path in paths
     ]
     strings = {
         key

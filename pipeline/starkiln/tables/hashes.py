@@ -1,4 +1,4 @@
-"""Hashes of ids and of the values a fit uses, the same on every machine and for every way to store the values."""
+"""Hashes of ids and of the values a fit uses, the same on every machine and however the values are stored."""
 
 from __future__ import annotations
 
@@ -29,16 +29,18 @@ def id_hashes(ids: pa.Array | pa.ChunkedArray) -> tuple[NDArray[np.int64], NDArr
     """Return the 64-bit BLAKE2b hash of each canonical id, and whether the row has an id (0 where not)."""
     canonical = canonical_ids(ids)
     has_id = np.array([star_id is not None for star_id in canonical], bool)
-    digests = b"".join(hashlib.blake2b(star_id or b"", digest_size=_HASH_BYTES).digest() for star_id in canonical)
+    digests = b"".join(
+        hashlib.blake2b(star_id or b"", digest_size=_HASH_BYTES).digest() for star_id in canonical
+    )
     return np.where(has_id, np.frombuffer(digests, "<i8"), 0).astype(np.int64), has_id
 
 
 def row_hashes(table: pa.Table, settings: Settings) -> NDArray[np.int64]:
     """Return a 64-bit hash of what each row gives the fit: its id, its used values, and their units.
 
-    Values enter as float64, so a column stored as float32 or as integers hashes as its float64 copy does: the fit
-    sees the same number. Null and NaN are one value, 0.0 and -0.0 another; a null mark is False. Names of columns
-    and carried columns do not enter.
+    Values enter as float64, so a column stored as float32 or as integers hashes as its float64 copy does: the
+    fit sees the same number. Null and NaN are one value, 0.0 and -0.0 another; a null mark is False. Names of
+    columns and carried columns do not enter.
 
     Parameters
     ----------
@@ -95,13 +97,18 @@ def marked(column: pa.Array | pa.ChunkedArray) -> NDArray[np.bool_]:
 
 
 def value_columns(settings: Settings) -> list[str]:
-    """Return the columns of numbers a fit uses, in the order of the settings; one used twice appears twice."""
+    """Return the columns of numbers a fit uses, in settings order; one used twice is there twice."""
     model, data = settings.model, settings.input
-    columns = []
+    columns: list[float | str] = []
     for band in data.photometry:
         columns += [band.value, band.error]
     if data.parallax is not None:
-        columns += [data.parallax.value, data.parallax.error, data.parallax.zero_point, data.parallax.error_scale]
+        columns += [
+            data.parallax.value,
+            data.parallax.error,
+            data.parallax.zero_point,
+            data.parallax.error_scale,
+        ]
     if data.distance is not None:
         columns += [data.distance.value, data.distance.error]
     columns += [model.extinction.mean, model.extinction.scale, model.distance.length_scale_pc]

@@ -59,6 +59,9 @@ class BadFile:
     name: str
     reason: str
 
+    def __str__(self) -> str:
+        return f"{self.name}: {self.reason}"
+
 
 @dataclass(frozen=True)
 class Source:
@@ -69,8 +72,8 @@ class Source:
     files
         In order of their names.
     schema
-        The columns that the settings use, as they are handed out: dictionaries decoded, strings as `string`, decimals
-        as float64; units and descriptions as field metadata.
+        The columns that the settings use, as they are handed out: dictionaries decoded, strings as `string`,
+        decimals as float64; units and descriptions as field metadata.
     skipped
         Files left out with on_bad_file = "skip".
     """
@@ -96,7 +99,7 @@ class SourceBatch:
     table
         The columns asked for, then `_input_file` and `_input_row`.
     read, filtered
-        Rows looked at, and those of them that the filters turned away; the rows of a pruned row group count as both.
+        Rows looked at, and those of them that the filters turned away; a pruned row group counts as both.
     """
 
     file_index: int
@@ -107,20 +110,20 @@ class SourceBatch:
 
 @dataclass(frozen=True)
 class _Footer:
-    """The end of a file: its columns, with the units of a VOTable header as field metadata, and its row groups."""
+    """The end of a file: its columns, units of a VOTable header among the metadata, and its row groups."""
 
     schema: pa.Schema
     row_group_rows: tuple[int, ...]
 
 
 def open_source(settings: Settings) -> Source:
-    """Find the input files and check the footer of each against the settings and against the files before it.
+    """Find the input files and check the footer of each against the settings and the files before it.
 
     Raises
     ------
     InputError
-        If there is no file; if files cannot be used (all are listed) and `on_bad_file` is not "skip"; if there is no
-        row; if `where` or `only` do not fit the columns.
+        If there is no file; if files cannot be used (all are listed) and `on_bad_file` is not "skip"; if there
+        is no row; if `where` or `only` do not fit the columns.
     """
     root, paths = find_files(settings.input.tables)
     with ThreadPoolExecutor(FOOTER_THREADS) as threads:
@@ -154,15 +157,19 @@ def _read_footer(path: Path) -> _Footer | str:
             return "is a broken link, or has vanished"
         first_line = str(problem).partition("\n")[0]
         return f"is no whole Parquet file ({first_line[:120]}): write it again"
-    return _Footer(schema, tuple(metadata.row_group(group).num_rows for group in range(metadata.num_row_groups)))
+    return _Footer(
+        schema, tuple(metadata.row_group(group).num_rows for group in range(metadata.num_row_groups))
+    )
 
 
 def _with_units(schema: pa.Schema, units: Mapping[str, str]) -> pa.Schema:
     """Return the schema with units from a VOTable header where a field has none of its own."""
-    return pa.schema([
-        field if field_unit(field) or field.name not in units else _with_unit(field, units[field.name])
-        for field in schema
-    ])
+    return pa.schema(
+        [
+            field if field_unit(field) or field.name not in units else _with_unit(field, units[field.name])
+            for field in schema
+        ]
+    )
 
 
 def _with_unit(field: pa.Field, unit: str) -> pa.Field:
@@ -215,8 +222,12 @@ class _Columns:
     def _agree(self, found: pa.Field, name: str) -> None:
         agreed = self._agreed.get(found.name)
         if agreed is None or pa.types.is_null(agreed.type):
-            metadata = {key: text for key, text in (found.metadata or {}).items() if not key.startswith(b"PARQUET:")}
-            self._agreed[found.name] = pa.field(found.name, handed_out_type(found.type), metadata=metadata or None)
+            metadata = {
+                key: text for key, text in (found.metadata or {}).items() if not key.startswith(b"PARQUET:")
+            }
+            self._agreed[found.name] = pa.field(
+                found.name, handed_out_type(found.type), metadata=metadata or None
+            )
             self._from[found.name] = name
         elif field_unit(found) and not field_unit(agreed):
             self._agreed[found.name] = _with_unit(agreed, str(field_unit(found)))
@@ -232,14 +243,14 @@ class _Columns:
         untyped = [name for name, field in self._agreed.items() if pa.types.is_null(field.type)]
         if untyped:
             raise InputError(
-                f"column {', '.join(map(repr, untyped))} has the type null in every file, with no value at all: "
+                f"column {', '.join(map(repr, untyped))} has no value in any file, and the type null: "
                 "remove it from the settings, or give it a type in the tables"
             )
         return pa.schema(list(self._agreed.values()))
 
 
 def _with_partition(schema: pa.Schema, partition: Mapping[str, PartitionValue]) -> pa.Schema:
-    """Return the schema with the partition's columns; a column of the file's own goes before one of a folder."""
+    """Return the schema with the partition's columns; a column of the file's own comes first."""
     for key, value in partition.items():
         if key not in schema.names:
             schema = schema.append(pa.field(key, pa.scalar(value).type))
@@ -301,9 +312,12 @@ def _read_file(
     origin = source.files[file_index]
     wanted = list(dict.fromkeys([*columns, *rows.columns()]))
     first_row = [0, *accumulate(origin.row_group_rows)]
-    with _read_trouble(origin), pq.ParquetFile(
-        origin.path, pre_buffer=False, buffer_size=BUFFER_BYTES, page_checksum_verification=True
-    ) as file:
+    with (
+        _read_trouble(origin),
+        pq.ParquetFile(
+            origin.path, pre_buffer=False, buffer_size=BUFFER_BYTES, page_checksum_verification=True
+        ) as file,
+    ):
         stored = [name for name in wanted if name in file.schema_arrow.names]
         kept_groups = _unpruned(source, file_index, file.schema_arrow, rows)
         for group in groups:
@@ -324,7 +338,7 @@ def _read_file(
 def _handed_out(
     read: pa.Table, source: Source, origin: SourceFile, columns: Sequence[str], first_row: int, count: int
 ) -> pa.Table:
-    """Return `count` rows in the types of the source's schema, with the partition's values and the rows' origin."""
+    """Return `count` rows in the source's types, with the partition's values and the origin of each row."""
     fields = [source.schema.field(name) for name in columns]
     arrays = [
         _decoded(read[field.name], field.type)
@@ -359,7 +373,9 @@ def _unpruned(source: Source, file_index: int, stored: pa.Schema, rows: RowFilte
     for name in rows.columns():
         if name not in stored.names:
             value = pa.scalar(origin.partition[name], source.schema.field(name).type)
-            expression &= pc.equal(pc.field(name), pc.scalar(value)) if value.is_valid else pc.field(name).is_null()
+            expression &= (
+                pc.equal(pc.field(name), pc.scalar(value)) if value.is_valid else pc.field(name).is_null()
+            )
     fragment = ds.ParquetFileFormat().make_fragment(str(origin.path))
     return {group.id for group in fragment.subset(expression, schema=pa.schema(fields)).row_groups}
 
@@ -371,7 +387,9 @@ def _read_trouble(origin: SourceFile) -> Iterator[None]:
         yield
     except OSError as problem:
         if problem.errno is not None:
-            raise EnvironmentTrouble(f"input file {origin.path}: {problem.strerror}; run again when it is back") from problem
+            raise EnvironmentTrouble(
+                f"input file {origin.path}: {problem.strerror}; run again when it is back"
+            ) from problem
         raise InputError(f"input file {origin.path} is damaged ({problem}): write it again") from problem
     except pa.ArrowException as problem:
         raise InputError(f"input file {origin.path} is damaged ({problem}): write it again") from problem

@@ -22,8 +22,8 @@ WIDTH_PREFIX = b"table::len::"
 _WIDTH_OF_NONE = 4
 """astropy's reader writes the word None for a null string; a narrower column would cut it."""
 
-# No entry for bool, uint64 and timestamps: astropy joins the header's columns to the data's, and for these the
-# types would clash or (uint64) pass through float64. The Parquet schema describes them all the same.
+# No entry for bool, uint64, timestamps and lists: astropy joins the header's columns to the data's, and these
+# would clash or (uint64) pass through float64. Their fields in the Parquet schema describe them all the same.
 _DATATYPES = {
     pa.int8(): "short",
     pa.int16(): "short",

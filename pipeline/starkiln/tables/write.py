@@ -17,7 +17,8 @@ from starkiln.errors import EnvironmentTrouble
 from starkiln.tables.votable import stored_widths, string_widths, with_header
 
 ROW_GROUP_ROWS = 50_000
-"""Rows of a row group in a packed file, whatever the parts were: about 20 MB of memory for the catalogue."""
+ROW_GROUP_BYTES = 32_000_000
+"""Rows of a row group, and bytes of its fixed-width values: the lesser of the two, whatever the parts were."""
 
 
 @dataclass(frozen=True)
@@ -60,7 +61,9 @@ def write_part(table: pa.Table, path: Path) -> WrittenFile:
     tmp_path = _temporary_name(path)
     with _disk_trouble(path), _removed_on_failure(tmp_path):
         with _open_writer(tmp_path, schema) as writer:
-            writer.write_table(table.replace_schema_metadata(schema.metadata), row_group_size=ROW_GROUP_ROWS)
+            writer.write_table(
+                table.replace_schema_metadata(schema.metadata), row_group_size=group_rows(schema)
+            )
         return _finish(tmp_path, table.num_rows)
 
 
@@ -95,8 +98,8 @@ def file_sha256(path: Path) -> str:
 class Packer:
     """Packs tables, in the order they come, into part-000000.parquet, part-000001.parquet ... of a folder.
 
-    The bytes depend on the rows and their order only, not on how the rows were cut into tables. Memory holds one
-    row group. Use as a context manager: leaving it by an exception publishes nothing more.
+    The bytes depend on the rows and their order only, not on how the rows were cut into tables. Memory holds
+    one row group. Use as a context manager: leaving it by an exception publishes nothing more.
 
     Parameters
     ----------
@@ -117,6 +120,7 @@ class Packer:
         self.schema = with_header(schema, widths or {})
         self.rows_per_file = rows_per_file
         self.files: list[PackedFile] = []
+        self._group_rows = group_rows(schema)
         self._waiting: list[pa.Table] = []
         self._waiting_rows = 0
         self._file_rows = 0
@@ -158,7 +162,7 @@ class Packer:
 
     def _group_room(self) -> int:
         """Return the rows still to come before the row group or the file is full."""
-        return min(ROW_GROUP_ROWS, self.rows_per_file - self._file_rows) - self._waiting_rows
+        return min(self._group_rows, self.rows_per_file - self._file_rows) - self._waiting_rows
 
     def _write_group(self) -> None:
         # One contiguous chunk a group: page boundaries would otherwise follow the chunks, so the parts.
@@ -167,14 +171,15 @@ class Packer:
             if self._writer is None:
                 self._tmp_path = _temporary_name(self._next_path())
                 self._writer = _open_writer(self._tmp_path, self.schema)
-            self._writer.write_table(group, row_group_size=ROW_GROUP_ROWS)
+            self._writer.write_table(group, row_group_size=self._group_rows)
         self._waiting, self._waiting_rows = [], 0
         self._file_rows += group.num_rows
         if self._file_rows == self.rows_per_file:
             self._publish_file()
 
     def _publish_file(self) -> None:
-        assert self._writer is not None and self._tmp_path is not None
+        assert self._writer is not None
+        assert self._tmp_path is not None
         path = self._next_path()
         with self._abandoned_on_failure():
             self._writer.close()
@@ -203,6 +208,18 @@ class Packer:
         self._writer = self._tmp_path = None
 
 
+def group_rows(schema: pa.Schema) -> int:
+    """Return the rows of a row group of a schema: fewer the wider its rows are."""
+    row_bytes = sum(_value_bytes(field.type) for field in schema)
+    return max(1, min(ROW_GROUP_ROWS, ROW_GROUP_BYTES // max(1, row_bytes)))
+
+
+def _value_bytes(kind: pa.DataType) -> int:
+    if pa.types.is_fixed_size_list(kind):
+        return kind.list_size * _value_bytes(kind.value_type)
+    return 8 if pa.types.is_string(kind) or pa.types.is_boolean(kind) else kind.bit_width // 8
+
+
 def pack(paths: Sequence[Path], folder: Path, schema: pa.Schema, rows_per_file: int) -> list[PackedFile]:
     """Stream part files, in order, into files of `rows_per_file` rows; no part at all gives one empty file.
 
@@ -224,7 +241,7 @@ def pack(paths: Sequence[Path], folder: Path, schema: pa.Schema, rows_per_file: 
     """
     widths: dict[str, int] = {}
     for path in paths:
-        with _disk_trouble(path):
+        with _disk_trouble(path, pa.ArrowInvalid):
             for name, width in stored_widths(pq.read_schema(path)).items():
                 widths[name] = max(width, widths.get(name, 0))
     with Packer(folder, schema, rows_per_file, widths) as packer:
@@ -242,13 +259,16 @@ def read_groups(path: Path) -> Iterator[pa.Table]:
     EnvironmentTrouble
         If the file is gone or damaged.
     """
-    with _disk_trouble(path), pq.ParquetFile(path, pre_buffer=False, page_checksum_verification=True) as file:
+    with (
+        _disk_trouble(path, pa.ArrowInvalid),
+        pq.ParquetFile(path, pre_buffer=False, page_checksum_verification=True) as file,
+    ):
         for group in range(file.num_row_groups):
             yield file.read_row_group(group, use_threads=False)
 
 
 def _open_writer(path: Path, schema: pa.Schema) -> pq.ParquetWriter:
-    """Open a writer: zstd, page checksums, floats split into byte streams, everything else as dictionaries."""
+    """Open a writer: zstd, page checksums, floats as split byte streams, everything else as dictionaries."""
     floats = [_leaf(field) for field in schema if _is_float(field.type)]
     others = [_leaf(field) for field in schema if not _is_float(field.type)]
     return pq.ParquetWriter(
@@ -256,7 +276,7 @@ def _open_writer(path: Path, schema: pa.Schema) -> pq.ParquetWriter:
         schema,
         compression="zstd",
         use_dictionary=others,
-        column_encoding={name: "BYTE_STREAM_SPLIT" for name in floats},
+        column_encoding=dict.fromkeys(floats, "BYTE_STREAM_SPLIT"),
         write_page_checksum=True,
     )
 
@@ -284,7 +304,9 @@ def _finish(tmp_path: Path, rows: int) -> WrittenFile:
         os.close(descriptor)
     found = pq.read_metadata(tmp_path).num_rows
     if found != rows:
-        raise EnvironmentTrouble(f"{tmp_path}: {rows} rows were written but {found} are in the file; check the disk")
+        raise EnvironmentTrouble(
+            f"{tmp_path}: {rows} rows were written but {found} are in the file; check the disk"
+        )
     return WrittenFile(tmp_path, rows, file_sha256(tmp_path))
 
 
@@ -306,9 +328,10 @@ def _removed_on_failure(tmp_path: Path) -> Iterator[None]:
 
 
 @contextmanager
-def _disk_trouble(path: Path) -> Iterator[None]:
-    """Turn a failure of the disk into EnvironmentTrouble that names the file."""
+def _disk_trouble(path: Path, *signs: type[Exception]) -> Iterator[None]:
+    """Turn a failure of the disk, for which other exceptions can stand, into trouble that names the file."""
     try:
         yield
-    except OSError as problem:
-        raise EnvironmentTrouble(f"{path}: {problem.strerror or problem}; mend it and run again") from problem
+    except (OSError, *signs) as problem:
+        reason = getattr(problem, "strerror", None) or problem
+        raise EnvironmentTrouble(f"{path}: {reason}; mend it and run again") from problem
