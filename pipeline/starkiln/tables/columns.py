@@ -177,7 +177,7 @@ def _band_columns(settings: Settings) -> list[Column]:
                 pa.float32(),
                 None,
                 "stat.fit.residual",
-                f"Observed minus model flux in {label} at the posterior mode, in sigmas of the total variance",
+                f"Observed minus model flux in {label} at the posterior mode, in sigmas (total variance)",
             )
             for label in labels
         ]

@@ -15,6 +15,7 @@ import pyarrow as pa
 import pyarrow.compute as pc
 import pyarrow.dataset as ds
 import pyarrow.parquet as pq
+from pyarrow.fs import LocalFileSystem
 
 from starkiln.errors import EnvironmentTrouble, InputError, nearest
 from starkiln.settings import Settings
@@ -122,7 +123,7 @@ def open_source(settings: Settings) -> Source:
     Raises
     ------
     InputError
-        If there is no file; if files cannot be used (all are listed) and `on_bad_file` is not "skip"; if there
+        If there is no file; if files cannot be used (all are listed) and `on_bad_file` is "stop"; if there
         is no row; if `where` or `only` do not fit the columns.
     """
     root, paths = find_files(settings.input.tables)
@@ -376,7 +377,7 @@ def _unpruned(source: Source, file_index: int, stored: pa.Schema, rows: RowFilte
             expression &= (
                 pc.equal(pc.field(name), pc.scalar(value)) if value.is_valid else pc.field(name).is_null()
             )
-    fragment = ds.ParquetFileFormat().make_fragment(str(origin.path))
+    fragment = ds.ParquetFileFormat().make_fragment(str(origin.path), LocalFileSystem())
     return {group.id for group in fragment.subset(expression, schema=pa.schema(fields)).row_groups}
 
 

@@ -18,7 +18,9 @@ from starkiln.tables.votable import stored_widths, string_widths, with_header
 
 ROW_GROUP_ROWS = 50_000
 ROW_GROUP_BYTES = 32_000_000
-"""Rows of a row group, and bytes of its fixed-width values: the lesser of the two, whatever the parts were."""
+"""Most rows of a row group, and most bytes of its fixed-width values, whatever the parts were."""
+
+_READ_FAILURES = (OSError, pa.ArrowInvalid)
 
 
 @dataclass(frozen=True)
@@ -241,7 +243,7 @@ def pack(paths: Sequence[Path], folder: Path, schema: pa.Schema, rows_per_file: 
     """
     widths: dict[str, int] = {}
     for path in paths:
-        with _disk_trouble(path, pa.ArrowInvalid):
+        with _disk_trouble(path, _READ_FAILURES):
             for name, width in stored_widths(pq.read_schema(path)).items():
                 widths[name] = max(width, widths.get(name, 0))
     with Packer(folder, schema, rows_per_file, widths) as packer:
@@ -260,7 +262,7 @@ def read_groups(path: Path) -> Iterator[pa.Table]:
         If the file is gone or damaged.
     """
     with (
-        _disk_trouble(path, pa.ArrowInvalid),
+        _disk_trouble(path, _READ_FAILURES),
         pq.ParquetFile(path, pre_buffer=False, page_checksum_verification=True) as file,
     ):
         for group in range(file.num_row_groups):
@@ -328,10 +330,10 @@ def _removed_on_failure(tmp_path: Path) -> Iterator[None]:
 
 
 @contextmanager
-def _disk_trouble(path: Path, *signs: type[Exception]) -> Iterator[None]:
-    """Turn a failure of the disk, for which other exceptions can stand, into trouble that names the file."""
+def _disk_trouble(path: Path, kinds: tuple[type[Exception], ...] = (OSError,)) -> Iterator[None]:
+    """Turn failures of the disk into EnvironmentTrouble that names the file."""
     try:
         yield
-    except (OSError, *signs) as problem:
+    except kinds as problem:
         reason = getattr(problem, "strerror", None) or problem
         raise EnvironmentTrouble(f"{path}: {reason}; mend it and run again") from problem
