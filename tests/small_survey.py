@@ -71,5 +71,7 @@ def read_in(table: pa.Table) -> pa.Table:
     """The table as it comes out of the input: with the origin of each row."""
     origin = {"_input_file": ["stars.parquet"] * len(table), "_input_row": np.arange(len(table))}
     for name, values in origin.items():
-        table = table.append_column(name, pa.array(values, pa.string() if name == "_input_file" else pa.int64()))
+        table = table.append_column(
+            name, pa.array(values, pa.string() if name == "_input_file" else pa.int64())
+        )
     return table

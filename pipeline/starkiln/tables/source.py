@@ -156,8 +156,7 @@ def _read_footer(path: Path) -> _Footer | str:
     except (OSError, ValueError, pa.ArrowException) as problem:
         if not path.exists():
             return "is a broken link, or has vanished"
-        first_line = str(problem).partition("\n")[0]
-        return f"is no whole Parquet file ({first_line[:120]}): write it again"
+        return f"is no whole Parquet file ({_first_line(problem)}): write it again"
     return _Footer(
         schema, tuple(metadata.row_group(group).num_rows for group in range(metadata.num_row_groups))
     )
@@ -391,6 +390,15 @@ def _read_trouble(origin: SourceFile) -> Iterator[None]:
             raise EnvironmentTrouble(
                 f"input file {origin.path}: {problem.strerror}; run again when it is back"
             ) from problem
-        raise InputError(f"input file {origin.path} is damaged ({problem}): write it again") from problem
+        raise InputError(_damage_text(origin, problem)) from problem
     except pa.ArrowException as problem:
-        raise InputError(f"input file {origin.path} is damaged ({problem}): write it again") from problem
+        raise InputError(_damage_text(origin, problem)) from problem
+
+
+def _damage_text(origin: SourceFile, problem: Exception) -> str:
+    return f"input file {origin.path} is damaged ({_first_line(problem)}): write it again"
+
+
+def _first_line(problem: Exception) -> str:
+    """Return the beginning of what Arrow says, which can run over many lines."""
+    return str(problem).partition("\n")[0][:120]
