@@ -46,7 +46,23 @@ def _normal_scores(n: int) -> NDArray[np.float64]:
     return np.asarray(ndtri((np.clip(twice_rank, 2, 2 * n) / 2.0 - 0.375) / (n + 0.25)))
 
 
-def diagnose(chain: NDArray[np.float64], order: NDArray[np.int64]) -> Convergence:
+def autocorrelation_times(chain: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the walkers' integrated autocorrelation time in steps, (S, P), of chains (S, P, n, W)."""
+    out = np.empty(chain.shape[:2])
+    _autocorrelation_times(chain, out)
+    return out
+
+
+@kernel
+def _autocorrelation_times(chain, out):
+    for star in range(out.shape[0]):
+        for p in range(out.shape[1]):
+            out[star, p] = autocorrelation_time(chain[star, p])
+
+
+def diagnose(
+    chain: NDArray[np.float64], order: NDArray[np.int64], autocorr_steps: NDArray[np.float64]
+) -> Convergence:
     """Diagnose the chains of a block of stars.
 
     Parameters
@@ -55,11 +71,13 @@ def diagnose(chain: NDArray[np.float64], order: NDArray[np.int64]) -> Convergenc
         (S, P, n, W): n steps of W walkers, n even.
     order
         (S, P, n * W): the order that sorts each parameter's draws.
+    autocorr_steps
+        (S, P), as `autocorrelation_times` gives it.
     """
     n_stars, n_parameters, n_steps, walkers = chain.shape
     shape = (n_stars, n_parameters)
     result = Convergence(
-        np.empty(shape), np.empty(shape), np.empty(shape), np.empty(shape), np.zeros(n_stars, dtype=np.bool_)
+        np.empty(shape), np.empty(shape), np.empty(shape), autocorr_steps, np.zeros(n_stars, dtype=np.bool_)
     )
     _diagnose(chain, order, _normal_scores(n_steps * walkers), result)
     return result
@@ -90,9 +108,7 @@ def _diagnose(chain, order, scores, result):
                 ess = split_ess(ranked)
                 tail = min(tail, ess) if not np.isnan(ess) else ess
             result.ess_tail[star, p] = tail
-            tau = autocorrelation_time(chain[star, p])
-            result.autocorr_steps[star, p] = tau
-            if _has_stray_walker(chain[star, p], tau):
+            if _has_stray_walker(chain[star, p], result.autocorr_steps[star, p]):
                 result.stray_walker[star] = True
 
 

@@ -12,13 +12,14 @@ from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import exp, log
 from starkiln.inference.compile import kernel
-from starkiln.inference.convergence import Convergence, diagnose
+from starkiln.inference.convergence import Convergence, autocorrelation_times, diagnose
 from starkiln.inference.moves import (
     INFLATION,
     BlockMove,
     Proposal,
     draw_independent,
     learn_proposal,
+    make_scratch,
     proposal_axes,
 )
 from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, log_posterior
@@ -55,8 +56,6 @@ class Draws(NamedTuple):
         (K,) int64, their places in the block.
     chain
         (K, P, N): ln T, ln Omega and, where it is fitted, A_V; N = n_steps * walkers draws.
-    order
-        (K, P, N): the order that sorts each.
     log_prob
         (K, N), in the sampler's coordinates.
     n_steps
@@ -69,7 +68,6 @@ class Draws(NamedTuple):
 
     stars: NDArray[np.int64]
     chain: NDArray[np.float64]
-    order: NDArray[np.int64]
     log_prob: NDArray[np.float64]
     n_steps: int
     accept_frac: NDArray[np.float64]
@@ -183,14 +181,14 @@ def _draw_walkers(proposal, modes, streams, coords):
     n_stars = streams.shape[0]
     walkers = coords.shape[0] // n_stars
     ndim = coords.shape[1]
-    x = np.empty(ndim)
+    scratch = make_scratch(ndim, walkers)
     for star in range(n_stars):
+        draw_independent(proposal, star, streams[star], scratch, coords[star * walkers : (star + 1) * walkers])
         total = 0.0
         for m in range(modes.count[star]):
             total += exp(modes.log_density[star, m] - modes.log_density[star, 0])
         for i in range(walkers):
             row = star * walkers + i
-            draw_independent(proposal, star, streams[star], x, coords[row])
             pick = uniform(streams[star]) * total
             mode = 0
             for m in range(modes.count[star]):
@@ -273,28 +271,33 @@ class _Run:
         n_steps = len(self.chain)
         chain = np.empty((self.n_stars, self.coords.shape[1], n_steps, self.walkers))
         _natural_parameters(self.chain, chain)
-        flat = chain.reshape(self.n_stars, chain.shape[1], -1)
-        order = np.argsort(flat, axis=-1)
-        convergence = diagnose(chain, order)
-        enough = _long_enough(convergence, n_steps, stopping)
+        # Autocorrelation is cheap to look at; the rest only where it has become short enough.
         last = n_steps >= stopping.lengths()[-1]
-        leaving = np.flatnonzero(enough | last)
-        if not len(leaving):
+        taus = autocorrelation_times(chain)
+        candidates = np.flatnonzero(last | (n_steps >= MIN_TAUS * taus).all(axis=1))
+        if not len(candidates):
             return None, self
-        some = Convergence(*(column[leaving] for column in convergence))
-        trusted = enough[leaving] & ~some.stray_walker & (some.rhat <= RHAT_LIMIT).all(axis=1)
+        flat = chain[candidates].reshape(len(candidates), chain.shape[1], -1)
+        order = np.argsort(flat, axis=-1)
+        convergence = diagnose(chain[candidates], order, taus[candidates])
+        enough = _long_enough(convergence, n_steps, stopping)
+        done = np.flatnonzero(enough | last)
+        if not len(done):
+            return None, self
+        leaving = candidates[done]
+        some = Convergence(*(column[done] for column in convergence))
+        trusted = enough[done] & ~some.stray_walker & (some.rhat <= RHAT_LIMIT).all(axis=1)
         log_prob = self.chain_log_prob.reshape(n_steps, self.n_stars, self.walkers)[:, leaving]
-        done = Draws(
+        draws = Draws(
             stars=self.stars[leaving],
-            chain=flat[leaving],
-            order=order[leaving],
+            chain=flat[done],
             log_prob=np.ascontiguousarray(log_prob.transpose(1, 0, 2)).reshape(len(leaving), -1),
             n_steps=n_steps,
             accept_frac=self.accepted[leaving] / (n_steps * self.walkers),
             convergence=some,
             converged=trusted,
         )
-        return done, self.taking(np.flatnonzero(~(enough | last)))
+        return draws, self.taking(np.setdiff1d(np.arange(self.n_stars), leaving))
 
     def taking(self, stars: NDArray[np.int64]) -> _Run:
         """Return the run of some of the stars, from where they are."""

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from starkiln.inference.arithmetic import log
 from starkiln.inference.compile import kernel
 from starkiln.inference.start import cholesky
-from starkiln.inference.streams import below, normal_pair, uniform
+from starkiln.inference.streams import below, fill_normal, fill_uniform, uniform
 
 TAIL = 4.0  # degrees of freedom of the learnt proposal: heavier tails than any posterior here
 INFLATION = 1.3
@@ -150,58 +150,86 @@ def _learn(window, axes, centre, factor):
         factor[star] = cholesky(covariance * (INFLATION / (n_steps * lanes)))
 
 
-@kernel
-def student_scale(stream):
-    """Return sqrt(nu / chi2_nu) for nu = 4, whose chi-square is -2 ln of a product of two uniforms."""
-    return np.sqrt(TAIL / (-2.0 * log(uniform(stream) * uniform(stream))))
+class Scratch(NamedTuple):
+    """Buffers for one star's proposals, L lanes each; ``uniforms`` has two rows more than a draw takes normals, twice."""
+
+    uniforms: NDArray[np.float64]
+    normals: NDArray[np.float64]
+    x: NDArray[np.float64]
+    scale: NDArray[np.float64]
 
 
 @kernel
-def draw_independent(proposal, star, stream, x, out):
-    """Write one draw of a star's independence proposal; ``x`` is scratch of ndim."""
-    ndim = out.size
-    k = 0
-    while k < ndim:
-        x[k], spare = normal_pair(stream)
-        if k + 1 < ndim:
-            x[k + 1] = spare
-        k += 2
-    factor = proposal.factor[star]
-    x[0] *= student_scale(stream)
-    scale = student_scale(stream)
-    first = proposal.centre[star, 0] + factor[0, 0] * x[0]
-    if proposal.reflect and first < 0.0:
-        first = -first
-        x[0] = (first - proposal.centre[star, 0]) / factor[0, 0]
-    out[proposal.axes[0]] = first
+def make_scratch(ndim, lanes):
+    """Return the buffers for proposals of a star."""
+    even = ndim + ndim % 2
+    return Scratch(
+        np.empty((even + 4, lanes)), np.empty((even, lanes)), np.empty((ndim, lanes)), np.empty((2, lanes))
+    )
+
+
+@kernel
+def draw_independent(proposal, star, stream, scratch, out):
+    """Write L draws (L, ndim) of a star's independence proposal, leaving them standardised in ``scratch.x``.
+
+    A Student t with four degrees of freedom is a normal times sqrt(4 / chi2), whose chi-square is -2 ln of a
+    product of two uniforms.
+    """
+    lanes, ndim = out.shape
+    even = scratch.normals.shape[0]
+    factor, centre = proposal.factor[star], proposal.centre[star]
+    x = scratch.x
+    fill_uniform(stream, scratch.uniforms)
+    fill_normal(scratch.uniforms[:even], scratch.normals)
+    for k in range(2):
+        for i in range(lanes):
+            product = scratch.uniforms[even + 2 * k, i] * scratch.uniforms[even + 2 * k + 1, i]
+            scratch.scale[k, i] = np.sqrt(TAIL / (-2.0 * log(product)))
+    for i in range(lanes):
+        first = centre[0] + factor[0, 0] * scratch.normals[0, i] * scratch.scale[0, i]
+        if proposal.reflect:
+            first = abs(first)
+        x[0, i] = (first - centre[0]) / factor[0, 0]
+        out[i, proposal.axes[0]] = first
     for k in range(1, ndim):
-        x[k] *= scale
-        value = proposal.centre[star, k]
-        for m in range(k + 1):
-            value += factor[k, m] * x[m]
-        out[proposal.axes[k]] = value
+        axis = proposal.axes[k]
+        for i in range(lanes):
+            x[k, i] = scratch.normals[k, i] * scratch.scale[1, i]
+            value = centre[k]
+            for m in range(k + 1):
+                value += factor[k, m] * x[m, i]
+            out[i, axis] = value
 
 
 @kernel
-def log_independent(proposal, star, coords, x):
-    """Return the log density of a star's independence proposal, less a constant; ``x`` is scratch."""
-    ndim = coords.size
-    factor = proposal.factor[star]
-    distance2 = 0.0
-    for k in range(ndim):
-        x[k] = coords[proposal.axes[k]] - proposal.centre[star, k]
-        for m in range(k):
-            x[k] -= factor[k, m] * x[m]
-        x[k] /= factor[k, k]
-        if k > 0:
-            distance2 += x[k] * x[k]
-    p = 1.0 / (1.0 + x[0] * x[0] / TAIL)
-    density = p * p * np.sqrt(p)
-    if proposal.reflect:
-        mirrored = (-coords[proposal.axes[0]] - proposal.centre[star, 0]) / factor[0, 0]
-        p = 1.0 / (1.0 + mirrored * mirrored / TAIL)
-        density += p * p * np.sqrt(p)
-    return log(density) - 0.5 * (TAIL + ndim - 1) * log(1.0 + distance2 / TAIL)
+def standardise(proposal, star, coords, x):
+    """Write positions (L, ndim) as standardised proposal coordinates (ndim, L)."""
+    factor, centre = proposal.factor[star], proposal.centre[star]
+    for k in range(x.shape[0]):
+        axis = proposal.axes[k]
+        for i in range(x.shape[1]):
+            value = coords[i, axis] - centre[k]
+            for m in range(k):
+                value -= factor[k, m] * x[m, i]
+            x[k, i] = value / factor[k, k]
+
+
+@kernel
+def add_log_independent(proposal, star, x, sign, out):
+    """Add ``sign`` times the log density of the proposal, less a constant, at standardised coordinates."""
+    ndim, lanes = x.shape
+    mirror = -2.0 * proposal.centre[star, 0] / proposal.factor[star, 0, 0]
+    for i in range(lanes):
+        p = 1.0 / (1.0 + x[0, i] * x[0, i] / TAIL)
+        density = p * p * np.sqrt(p)
+        if proposal.reflect:
+            mirrored = mirror - x[0, i]
+            p = 1.0 / (1.0 + mirrored * mirrored / TAIL)
+            density += p * p * np.sqrt(p)
+        distance2 = 0.0
+        for k in range(1, ndim):
+            distance2 += x[k, i] * x[k, i]
+        out[i] += sign * (log(density) - 0.5 * (TAIL + ndim - 1) * log(1.0 + distance2 / TAIL))
 
 
 @kernel
@@ -211,28 +239,29 @@ def propose_half(coords, half, streams, proposal, independence, trial, log_facto
     ndim = coords.shape[1]
     walkers = coords.shape[0] // n_stars
     lanes = walkers // 2
-    x = np.empty(ndim)
+    scratch = make_scratch(ndim, lanes)
     for star in range(n_stars):
         stream = streams[star]
         mine = star * walkers + half * lanes
         partners = star * walkers + (1 - half) * lanes
+        rows = slice(star * lanes, (star + 1) * lanes)
+        log_factor[rows] = 0.0
         if uniform(stream) < independence:
-            for i in range(lanes):
-                row = star * lanes + i
-                draw_independent(proposal, star, stream, x, trial[row])
-                log_factor[row] = log_independent(proposal, star, coords[mine + i], x)
-                log_factor[row] -= log_independent(proposal, star, trial[row], x)
+            draw_independent(proposal, star, stream, scratch, trial[rows])
+            add_log_independent(proposal, star, scratch.x, -1.0, log_factor[rows])
+            standardise(proposal, star, coords[mine : mine + lanes], scratch.x)
+            add_log_independent(proposal, star, scratch.x, 1.0, log_factor[rows])
         else:
             scale = 2.38 / np.sqrt(2.0 * ndim) if uniform(stream) < 0.9 else 1.0
             for i in range(lanes):
-                row = star * lanes + i
                 a = below(stream, lanes)
                 b = below(stream, lanes - 1)
                 b += b >= a
                 reach = scale * (1.0 + 0.02 * (uniform(stream) - 0.5))
                 for k in range(ndim):
-                    trial[row, k] = coords[mine + i, k] + reach * (coords[partners + a, k] - coords[partners + b, k])
-                log_factor[row] = 0.0
+                    trial[star * lanes + i, k] = coords[mine + i, k] + reach * (
+                        coords[partners + a, k] - coords[partners + b, k]
+                    )
 
 
 @kernel
@@ -242,13 +271,15 @@ def accept_half(coords, log_prob, half, streams, trial, trial_log_prob, log_fact
     ndim = coords.shape[1]
     walkers = coords.shape[0] // n_stars
     lanes = walkers // 2
+    threshold = np.empty((1, lanes))
     for star in range(n_stars):
-        stream = streams[star]
+        fill_uniform(streams[star], threshold)
+        for i in range(lanes):
+            threshold[0, i] = log(threshold[0, i])
         for i in range(lanes):
             row = star * lanes + i
             walker = star * walkers + half * lanes + i
-            threshold = log(uniform(stream))
-            if threshold < trial_log_prob[row] - log_prob[walker] + log_factor[row]:
+            if threshold[0, i] < trial_log_prob[row] - log_prob[walker] + log_factor[row]:
                 for k in range(ndim):
                     coords[walker, k] = trial[row, k]
                 log_prob[walker] = trial_log_prob[row]

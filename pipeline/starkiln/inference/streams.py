@@ -10,7 +10,7 @@ import hashlib
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.inference.arithmetic import log
+from starkiln.inference.arithmetic import log, sine_cosine_turns
 from starkiln.inference.compile import inlined, kernel
 
 
@@ -72,12 +72,19 @@ def below(state, n):
 
 
 @kernel
-def normal_pair(state):
-    """Return two independent standard normal draws, by Marsaglia's polar method."""
-    while True:
-        u = 2.0 * uniform(state) - 1.0
-        v = 2.0 * uniform(state) - 1.0
-        s = u * u + v * v
-        if 0.0 < s < 1.0:
-            factor = np.sqrt(-2.0 * log(s) / s)
-            return u * factor, v * factor
+def fill_uniform(state, out):
+    """Fill a (k, L) array with uniform draws, lane by lane within each row."""
+    for k in range(out.shape[0]):
+        for i in range(out.shape[1]):
+            out[k, i] = uniform(state)
+
+
+@kernel
+def fill_normal(uniforms, out):
+    """Turn uniform draws (2m, L) into standard normal ones (2m, L), by Box & Muller's transform."""
+    for k in range(0, out.shape[0], 2):
+        for i in range(out.shape[1]):
+            radius = np.sqrt(-2.0 * log(uniforms[k, i]))
+            sine, cosine = sine_cosine_turns(uniforms[k + 1, i])
+            out[k, i] = radius * cosine
+            out[k + 1, i] = radius * sine
