@@ -67,15 +67,6 @@ def test_rayleigh_jeans_limit():
     assert exitance_jy(1e6, 2000.0) / exitance_jy(1e6, 1000.0) == pytest.approx(2.0, rel=1e-5)
 
 
-@given(
-    wavelength_um=st.floats(0.09, 30.0),
-    teff_k=st.floats(1500.0, 59_000.0),
-    factor=st.floats(1.0001, 2.0),
-)
-def test_a_hotter_blackbody_is_brighter_at_every_wavelength(wavelength_um, teff_k, factor):
-    assert ln_exitance_jy(wavelength_um, teff_k * factor) > ln_exitance_jy(wavelength_um, teff_k)
-
-
 @given(lambda_t=st.floats(200.0, 1e6))
 def test_fraction_below_agrees_with_quadrature(lambda_t):
     x_end = 14_387.768775 / lambda_t  # hc/k in um K, CODATA 2018
