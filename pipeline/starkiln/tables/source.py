@@ -370,14 +370,23 @@ def _unpruned(source: Source, file_index: int, stored: pa.Schema, rows: RowFilte
     fields = [source.schema.field(name) for name in rows.columns()]
     if any(field.name in stored.names and stored.field(field.name).type != field.type for field in fields):
         return everything
-    for name in rows.columns():
-        if name not in stored.names:
-            value = pa.scalar(origin.partition[name], source.schema.field(name).type)
-            expression &= (
-                pc.equal(pc.field(name), pc.scalar(value)) if value.is_valid else pc.field(name).is_null()
-            )
-    fragment = ds.ParquetFileFormat().make_fragment(str(origin.path), LocalFileSystem())
+    fragment = ds.ParquetFileFormat().make_fragment(
+        str(origin.path),
+        LocalFileSystem(),
+        partition_expression=_partition_expression(
+            origin, source.schema, set(rows.columns()) - set(stored.names)
+        ),
+    )
     return {group.id for group in fragment.subset(expression, schema=pa.schema(fields)).row_groups}
+
+
+def _partition_expression(origin: SourceFile, schema: pa.Schema, keys: set[str]) -> pc.Expression:
+    """Return what the folders above a file say of all its rows."""
+    expression = pc.scalar(True)
+    for key in sorted(keys):
+        value = pa.scalar(origin.partition[key], schema.field(key).type)
+        expression &= pc.field(key) == pc.scalar(value) if value.is_valid else pc.field(key).is_null()
+    return expression
 
 
 @contextmanager
