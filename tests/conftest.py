@@ -3,7 +3,11 @@
 import os
 from pathlib import Path
 
+import hypothesis
 import pytest
+
+hypothesis.settings.register_profile("untimed", deadline=None)  # a busy machine is no failure
+hypothesis.settings.load_profile("untimed")
 
 REPOSITORY = Path(__file__).parents[1]
 

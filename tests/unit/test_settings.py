@@ -58,6 +58,26 @@ def only_problem(**changes) -> str:
     return line
 
 
+ANYTHING = st.recursive(
+    st.booleans()
+    | st.integers()
+    | st.floats()
+    | st.text()
+    | st.dates()
+    | st.sampled_from(["mag", "Jy", "in"]),
+    lambda inner: st.lists(inner, max_size=3) | st.dictionaries(st.text(max_size=5), inner, max_size=3),
+    max_leaves=5,
+)
+
+
+def holders(tree):
+    """Every dictionary or list of a tree, with each of its keys or places."""
+    for key, value in tree.items() if isinstance(tree, dict) else enumerate(tree):
+        yield tree, key
+        if isinstance(value, dict | list):
+            yield from holders(value)
+
+
 class TestReading:
     def test_the_template_loads(self):
         settings = load_settings(TEMPLATE)
@@ -259,6 +279,26 @@ class TestProblems:
         curve = {"name": "blue", "curve": "blue.ecsv", "detector": "photon"}
         assert "passband[1].name 'blue' is the name of two passbands" in only_problem(passband=[curve, curve])
         assert "should be 'photon' or 'energy'" in only_problem(passband=[curve | {"detector": "ccd"}])
+
+    @given(st.data())
+    def test_whatever_stands_in_the_file_is_told_or_comes_back(self, data):
+        tree = example(
+            model={"outliers": {}, "extinction": {"scale": 0.1}, "distance": {}},
+            compute={"workers": 2, "memory_per_worker": "1GB"},
+            input__where=[["field", "==", 1]],
+            input__parallax={"value": "plx", "error": "plx_error", "unit": "mas"},
+            passband=[{"name": "blue", "curve": "blue.ecsv", "detector": "photon"}],
+        )
+        places = list(holders(tree))
+        for holder, key in data.draw(st.lists(st.sampled_from(places), min_size=1, max_size=3)):
+            if data.draw(st.booleans()) and isinstance(holder, dict):
+                key = data.draw(st.text())
+            holder[key] = data.draw(ANYTHING)
+        try:
+            settings = build_settings(tree)
+        except SettingsError:
+            return
+        assert repr(build_settings(tomllib.loads(dump_toml(settings)))) == repr(settings)
 
 
 class TestFilters:
@@ -513,7 +553,7 @@ def test_memory(text, size):
     assert memory_bytes(text) == size
 
 
-@pytest.mark.parametrize("text", ["2", "0GB", "-1GB", "two GB", "2gb", ""])
+@pytest.mark.parametrize("text", ["2", "0GB", "-1GB", "two GB", "2gb", "", "9" * 400 + "GB"])
 def test_no_memory(text):
     with pytest.raises(ValueError, match="not an amount of memory"):
         memory_bytes(text)

@@ -131,7 +131,7 @@ def _describe(item: Any, data: Mapping[str, Any]) -> str:
 
 
 def _visible(loc: Loc) -> Loc:
-    return tuple(part for part in loc if not str(part).startswith("<"))
+    return tuple(part for part in loc if part not in ("<table>", "<false>"))
 
 
 def _dotted(loc: Loc) -> str:

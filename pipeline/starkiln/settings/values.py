@@ -21,7 +21,7 @@ _FLUX_REMEDY = (
     'give a flux density per frequency ("nJy", "erg / (s cm2 Hz)") '
     'or per wavelength ("W / (m2 um)"), or "mag"'
 )
-_MEMORY = re.compile(r"(\d+(?:\.\d+)?) ?([kMGT]?)(i?)B")
+_MEMORY = re.compile(r"(\d{1,9}(?:\.\d{1,9})?) ?([kMGT]?)(i?)B")
 _OPERATORS = ("=", "==", "!=", "<", ">", "<=", ">=", "in", "not in")
 
 
@@ -55,7 +55,7 @@ def flux_kind(unit: str) -> FluxKind:
         parsed = parse_unit(unit)
     except ValueError as error:
         raise ValueError(f"{error}; {_FLUX_REMEDY}") from None
-    if isinstance(parsed, u.function.FunctionUnitBase):
+    if _logarithmic(parsed):
         raise ValueError(f'{unit!r} is logarithmic: write unit = "mag" with system = "AB" or "Vega"')
     if parsed.is_equivalent(_F_NU):
         return "f_nu"
@@ -88,10 +88,16 @@ def conditions(where: list[Any]) -> Iterator[Any]:
             yield from entry
 
 
+def _logarithmic(unit: u.UnitBase) -> bool:
+    return isinstance(unit, u.function.FunctionUnitBase)
+
+
 def _unit_of(what: str, example: str) -> BeforeValidator:
     def check(text: object) -> object:
-        if isinstance(text, str) and not parse_unit(text).is_equivalent(u.Unit(example)):
-            raise ValueError(f"{text!r} is not a unit of {what}: write for example {example!r}")
+        if isinstance(text, str):
+            unit = parse_unit(text)
+            if _logarithmic(unit) or not unit.is_equivalent(u.Unit(example)):
+                raise ValueError(f"{text!r} is not a unit of {what}: write for example {example!r}")
         return text
 
     return BeforeValidator(check)
