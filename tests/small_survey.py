@@ -19,7 +19,7 @@ def band(label: str, **keys: Any) -> dict[str, Any]:
     return {"passband": label, "value": label, "error": f"{label}_error", "unit": "nJy"} | keys
 
 
-def settings_for(tables: str | Path, output: str | Path = "/survey/run", **changes: Any) -> Settings:
+def settings_for(tables: str | Path, output: str | Path = "/results/run", **changes: Any) -> Settings:
     """Settings for three bands in nJy and a parallax; `input__carry=["ra"]` sets input.carry."""
     data: dict[str, Any] = {
         "run": {"name": "tamarin", "output": str(output)},

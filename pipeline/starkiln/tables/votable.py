@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import re
 import xml.etree.ElementTree as ElementTree
 from collections.abc import Mapping
 from functools import lru_cache
@@ -10,6 +11,7 @@ from functools import lru_cache
 import pyarrow as pa
 import pyarrow.compute as pc
 from astropy.io.votable.tree import Field, Resource, TableElement, VOTableFile
+from astropy.io.votable.ucd import check_ucd
 from astropy.units import Unit, UnitBase, UnrecognizedUnit
 
 from starkiln.tables.columns import Column
@@ -22,8 +24,10 @@ WIDTH_PREFIX = b"table::len::"
 _WIDTH_OF_NONE = 4
 """astropy's reader writes the word None for a null string; a narrower column would cut it."""
 
-# No entry for bool, uint64, timestamps and lists: astropy joins the header's columns to the data's, and these
-# would clash or (uint64) pass through float64. Their fields in the Parquet schema describe them all the same.
+# astropy's reader joins the columns of the header to those of the data, by ID. Left out of the header, though
+# not of the Parquet schema, is what would clash there: bool, timestamps, lists; uint64, which would pass
+# through float64; and names that cannot be an XML ID, such as "2mass_name".
+_XML_ID = re.compile(r"[A-Za-z_][A-Za-z0-9_.-]*")
 _DATATYPES = {
     pa.int8(): "short",
     pa.int16(): "short",
@@ -84,7 +88,7 @@ def _votable_xml(columns: tuple[Column, ...], widths: tuple[tuple[str, int], ...
     document.resources.append(resource)
     resource.tables.append(table)
     for column in columns:
-        if column.type in _DATATYPES:
+        if column.type in _DATATYPES and _XML_ID.fullmatch(column.name):
             table.fields.append(_votable_field(document, column, dict(widths).get(column.name)))
     buffer = io.BytesIO()
     document.to_xml(buffer)
@@ -98,7 +102,7 @@ def _votable_field(document: VOTableFile, column: Column, width: int | None) -> 
         datatype=_DATATYPES[column.type],
         arraysize=None if width is None else str(width),
         unit=_vounit(column.unit),
-        ucd=column.ucd,
+        ucd=column.ucd if column.ucd and check_ucd(column.ucd, has_colon=True) else None,
     )
     if column.description:
         field.description = column.description
