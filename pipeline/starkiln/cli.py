@@ -1,0 +1,182 @@
+"""The command line: parse, call, print."""
+
+from __future__ import annotations
+
+import sys
+import traceback
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Annotated, Any
+
+import typer
+
+from starkiln.errors import SettingsError, StarkilnError
+
+app = typer.Typer(
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+    help="Effective temperatures, radii and luminosities of stars from survey photometry, by the million.",
+)
+
+Config = Annotated[Path, typer.Argument(metavar="CONFIG", help="Settings file (TOML).", show_default=False)]
+RunDir = Annotated[Path, typer.Argument(metavar="RUN_DIR", help="A run's output folder.", show_default=False)]
+Debug = Annotated[bool, typer.Option("--debug", help="Show the traceback of an error.")]
+
+EXIT_BUG = 1
+EXIT_STOPPED = 5
+EXIT_ENVIRONMENT = 74
+EXIT_INTERRUPTED = 130
+
+
+def main() -> None:
+    """Run the command line."""
+    app(prog_name="starkiln")
+
+
+@contextmanager
+def _errors_told(debug: bool, quiet: bool = False) -> Iterator[None]:
+    """Turn an error into one or two lines on standard error and its exit code."""
+    try:
+        yield
+    except StarkilnError as error:
+        if debug:
+            traceback.print_exc()
+        if not (quiet and error.exit_code == EXIT_STOPPED):
+            _tell(str(error))
+        raise typer.Exit(error.exit_code) from None
+    except KeyboardInterrupt:
+        _tell("interrupted: nothing was published")
+        raise typer.Exit(EXIT_INTERRUPTED) from None
+    except (typer.Exit, typer.Abort, BrokenPipeError):
+        raise
+    except OSError as error:
+        if debug:
+            traceback.print_exc()
+        _tell(f"{error}; mend it and run again")
+        raise typer.Exit(EXIT_ENVIRONMENT) from None
+    except Exception as error:
+        if debug:
+            traceback.print_exc()
+        first_line = str(error).partition("\n")[0]
+        hint = "" if debug else "; --debug shows where"
+        _tell(f"unexpected {type(error).__name__}: {first_line} (a bug, please report it{hint})")
+        raise typer.Exit(EXIT_BUG) from None
+
+
+def _tell(text: str) -> None:
+    print(f"starkiln: {text}", file=sys.stderr)
+
+
+def _print_version(wanted: bool) -> None:
+    if wanted:
+        import starkiln
+
+        print(f"starkiln {starkiln.__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def _starkiln(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_print_version, is_eager=True, help="Show the version.")
+    ] = False,
+) -> None:
+    pass
+
+
+@app.command(epilog="Example: starkiln check configs/demo.toml")
+def check(config: Config, debug: Debug = False) -> None:
+    """Check settings, passbands and the footers of the input tables, and print the plan."""
+    with _errors_told(debug):
+        from starkiln.engine.check import describe_plan
+        from starkiln.engine.run import fitting_stages
+        from starkiln.settings import load_settings
+        from starkiln.tables.source import open_source
+
+        settings = load_settings(config)
+        source = open_source(settings)
+        fitting_stages().build_model(settings)
+        print(describe_plan(source, settings))
+
+
+@app.command(epilog="Example: starkiln run configs/demo.toml --workers 4")
+def run(
+    config: Config,
+    workers: Annotated[
+        int | None,
+        typer.Option(min=1, help="Worker processes, instead of compute.workers.", show_default=False),
+    ] = None,
+    quiet: Annotated[bool, typer.Option("--quiet", help="Print nothing if all is well.")] = False,
+    debug: Debug = False,
+) -> None:
+    """Fit every star of the input tables and publish the catalogue."""
+    with _errors_told(debug, quiet):
+        from starkiln.engine.preview import first_rows
+        from starkiln.engine.progress import open_progress
+        from starkiln.engine.run import run_settings
+        from starkiln.settings import load_settings
+
+        settings = load_settings(config)
+        if workers is not None:
+            compute = settings.compute.model_copy(update={"workers": workers})
+            settings = settings.model_copy(update={"compute": compute})
+        with open_progress(quiet) as progress:
+            result = run_settings(settings, progress=progress)
+        if not quiet or result.exit_code:
+            print(result.message)
+        if not quiet and result.path is not None:
+            print(first_rows(result.path))
+        raise typer.Exit(result.exit_code)
+
+
+@app.command(epilog="Example: starkiln path runs/demo")
+def path(run_dir: RunDir, debug: Debug = False) -> None:
+    """Print the folder of the published generation, which stays as it is when a later run publishes."""
+    with _errors_told(debug):
+        current = run_dir / "current"
+        if not current.is_dir():
+            raise SettingsError(
+                f"{run_dir} holds no published catalogue: name the run.output of a finished run"
+            )
+        print(current.resolve())
+
+
+@app.command(epilog="Example: starkiln passbands gaia_dr3_g")
+def passbands(
+    name: Annotated[
+        str | None, typer.Argument(metavar="[NAME]", help="Only this one, in full.", show_default=False)
+    ] = None,
+    debug: Debug = False,
+) -> None:
+    """List the built-in passbands: pivot wavelength, zero points and source."""
+    with _errors_told(debug):
+        from starkiln.physics.passbands import describe_passbands, load_passband
+
+        if name is None:
+            print(_band_table(describe_passbands()))
+        else:
+            known = load_passband(name).name
+            print(_band_in_full(next(band for band in describe_passbands() if band["name"] == known)))
+
+
+def _band_table(bands: list[dict[str, Any]]) -> str:
+    lines = ["name            pivot [um]  detector  system  AB zero [Jy]  Vega zero [Jy]  error"]
+    for band in bands:
+        vega = band["zero_point_vega_jy"]
+        lines.append(
+            f"{band['name']:<16}{band['pivot_um']:<12.4f}{band['detector']:<10}{band['system']:<8}"
+            f"{band['zero_point_ab_jy']:<14g}{'-' if vega is None else f'{vega:.6g}':<16}"
+            f"{band['zero_point_error']:.3g}"
+        )
+    return "\n".join([*lines, "Sources: starkiln passbands NAME"])
+
+
+def _band_in_full(band: dict[str, Any]) -> str:
+    lines = [
+        f"{key:<19}{value:.6g}" if isinstance(value, float) else f"{key:<19}{value}"
+        for key, value in band.items()
+    ]
+    return "\n".join(lines)

@@ -1,0 +1,37 @@
+"""The log of a run: one JSON line for each event."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator
+from contextlib import contextmanager
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import Any, TextIO
+
+LOGS_KEPT = 30
+
+
+class EventLog:
+    """Writes events to one open file, each line complete on disk's page cache as soon as it is written."""
+
+    def __init__(self, file: TextIO) -> None:
+        self._file = file
+
+    def write(self, event: str, **fields: Any) -> None:
+        """Append an event with the time it happened and its fields."""
+        line = {"time": datetime.now(UTC).isoformat(timespec="milliseconds"), "event": event, **fields}
+        self._file.write(json.dumps(line) + "\n")
+        self._file.flush()
+
+
+@contextmanager
+def open_log(run_dir: Path, start: datetime) -> Iterator[EventLog]:
+    """Open the log of a run that starts now, and remove the oldest ones beyond the number kept."""
+    folder = run_dir / "logs"
+    folder.mkdir(exist_ok=True)
+    path = folder / f"{start:%Y%m%dT%H%M%S}.{start.microsecond // 1000:03d}Z.jsonl"
+    with path.open("w") as file:
+        for old in sorted(folder.glob("*.jsonl"))[:-LOGS_KEPT]:
+            old.unlink()
+        yield EventLog(file)

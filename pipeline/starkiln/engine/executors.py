@@ -1,0 +1,198 @@
+"""Where tasks run: in this process, or on a cluster of worker processes of this machine."""
+
+from __future__ import annotations
+
+import asyncio
+import logging
+import os
+import queue
+import signal
+from collections import deque
+from collections.abc import Callable, Iterator
+from contextlib import ExitStack, contextmanager
+from dataclasses import dataclass
+from multiprocessing import resource_tracker
+from pathlib import Path
+from typing import Any, Protocol
+
+from starkiln.errors import EnvironmentTrouble
+
+SMALL_RUN_ROWS = 500
+"""Up to so many rows a cluster would take longer to start than the work."""
+
+WORKER_DEATHS_ALLOWED = 3
+
+POLL_SECONDS = 0.5
+KILL_SECONDS = 0.1
+
+
+class WorkerDied(Exception):
+    """The worker processes that had a task died, again and again."""
+
+
+@dataclass(frozen=True)
+class Finished:
+    """A task that has ended: its key, and its result or its error."""
+
+    key: str
+    result: Any
+    error: BaseException | None
+
+
+class Executor(Protocol):
+    """Runs plain functions of small arguments, each under a key of its own."""
+
+    workers: int
+
+    def submit(self, key: str, function: Callable[..., Any], *args: Any, urgent: bool = False) -> None:
+        """Take a task; urgent ones go before the others."""
+
+    def next_finished(self) -> Finished | None:
+        """Return a task that has ended, or None if none did within a short while."""
+
+
+class SerialExecutor:
+    """Runs each task in this process, when its result is asked for."""
+
+    workers = 1
+
+    def __init__(self) -> None:
+        self._tasks: deque[tuple[str, Callable[..., Any], tuple[Any, ...]]] = deque()
+
+    def submit(self, key: str, function: Callable[..., Any], *args: Any, urgent: bool = False) -> None:
+        """Take a task; urgent ones go before the others."""
+        task = (key, function, args)
+        if urgent:
+            self._tasks.appendleft(task)
+        else:
+            self._tasks.append(task)
+
+    def next_finished(self) -> Finished | None:
+        """Run the next task."""
+        if not self._tasks:
+            return None
+        key, function, args = self._tasks.popleft()
+        try:
+            return Finished(key, function(*args), None)
+        except Exception as error:
+            return Finished(key, None, error)
+
+
+class ClusterExecutor:
+    """Runs tasks on the workers of a dask client."""
+
+    def __init__(self, client: Any, workers: int) -> None:
+        self.workers = workers
+        from distributed import KilledWorker
+
+        self._killed = KilledWorker
+        self._client = client
+        self._futures: dict[str, Any] = {}
+        self._done: queue.SimpleQueue[Any] = queue.SimpleQueue()
+
+    def submit(self, key: str, function: Callable[..., Any], *args: Any, urgent: bool = False) -> None:
+        """Take a task; urgent ones go before the others."""
+        future = self._client.submit(function, *args, key=key, pure=False, priority=int(urgent))
+        self._futures[key] = future
+        future.add_done_callback(self._done.put)
+
+    def next_finished(self) -> Finished | None:
+        """Wait a short while for a task to end, and return it."""
+        try:
+            future = self._done.get(timeout=POLL_SECONDS)
+        except queue.Empty:
+            return None
+        del self._futures[future.key]
+        error = future.exception()
+        result = None if error is not None else future.result()
+        if isinstance(error, self._killed):
+            error = WorkerDied(f"its worker died {WORKER_DEATHS_ALLOWED + 1} times")
+        # An erred future stays in the scheduler until it is released.
+        future.release()
+        return Finished(future.key, result, error)
+
+
+@contextmanager
+def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterator[ClusterExecutor]:
+    """Start worker processes on the loopback interface, encrypted, and end them afterwards.
+
+    Parameters
+    ----------
+    workers
+        How many processes, of one thread each.
+    memory_per_worker
+        Bytes at which a worker is restarted.
+    scratch
+        A folder for dask's own files.
+
+    Raises
+    ------
+    EnvironmentTrouble
+        If the workers do not start.
+    """
+    import dask
+    from distributed import Client, LocalCluster
+    from distributed.security import Security
+
+    one_thread = dict.fromkeys(
+        ("OMP_NUM_THREADS", "MKL_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS"), "1"
+    )
+    options = {
+        "distributed.scheduler.allowed-failures": WORKER_DEATHS_ALLOWED,
+        "distributed.nanny.pre-spawn-environ": {**one_thread, "MALLOC_TRIM_THRESHOLD_": "65536"},
+        "distributed.comm.require-encryption": True,
+        # What goes wrong comes back with the task; dask's own lines would only repeat it.
+        "logging": {"distributed": "critical"},
+    }
+    with dask.config.set(options), ExitStack() as stack:
+        try:
+            with _interrupts_blocked():
+                cluster = stack.enter_context(
+                    LocalCluster(
+                        n_workers=workers,
+                        threads_per_worker=1,
+                        processes=True,
+                        memory_limit=memory_per_worker,
+                        protocol="tls://",
+                        security=Security.temporary(),
+                        host="127.0.0.1",
+                        dashboard_address="127.0.0.1:0",
+                        local_directory=os.fspath(scratch),
+                        silence_logs=logging.CRITICAL,
+                    )
+                )
+                client = stack.enter_context(Client(cluster))
+        except (RuntimeError, OSError) as error:
+            raise EnvironmentTrouble(
+                f"cannot start {workers} worker processes ({error}); try fewer with --workers"
+            ) from error
+        try:
+            yield ClusterExecutor(client, workers)
+        except BaseException:
+            _kill_workers(cluster)
+            raise
+
+
+@contextmanager
+def _interrupts_blocked() -> Iterator[None]:
+    """Keep Ctrl-C from the threads and processes that are started here, for as long as they live.
+
+    A terminal sends it to every process of a command; only the main thread of this one is to act upon it.
+    """
+    # Whatever thread starts Python's resource tracker is left with SIGINT unblocked.
+    resource_tracker.ensure_running()
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    try:
+        yield
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, before)
+
+
+def _kill_workers(cluster: Any) -> None:
+    """End workers in the middle of a task, which a cluster that is closed would wait for."""
+
+    async def kill() -> None:
+        nannies = cluster.workers.values()
+        await asyncio.gather(*(nanny.close(timeout=KILL_SECONDS, reason="stopped") for nanny in nannies))
+
+    cluster.sync(kill)
