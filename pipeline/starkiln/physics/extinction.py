@@ -44,7 +44,8 @@ def extinction_ratio(law: str, rv: float, wavelength_um: ArrayLike) -> FloatArra
     """Return A(lambda)/A_V of an extinction law.
 
     Outside the wavelengths that a law was published for, it goes on with the shape of G23
-    (0.0912 to 32 um), scaled to join at the end; outside those of G23 it holds the value at the end.
+    (0.0912 to 32 um; at the nearest R_V that it was published for), scaled to join at the end; outside
+    those of G23 it holds the value at the end.
 
     Parameters
     ----------

@@ -228,10 +228,9 @@ def _unknown(name: str) -> str:
 
 
 def _speclite_file(band: BuiltinBand) -> Path:
-    from importlib.resources import as_file, files
+    from importlib.resources import files
 
-    with as_file(files("speclite") / "data" / "filters" / f"{band.curve}.ecsv") as path:
-        return Path(path)
+    return Path(str(files("speclite") / "data" / "filters" / f"{band.curve}.ecsv"))
 
 
 def _read_curve(
