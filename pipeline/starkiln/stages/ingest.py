@@ -46,11 +46,14 @@ class Ingested:
         Their id, carried columns, `_input_file`, `_input_row` and, where given, `_duplicate`; in input order.
     rejected
         The other rows, as `rejected_schema` lays down; in input order.
+    is_kept
+        For each row of the table, whether it is kept.
     """
 
     stars: Stars
     kept: pa.Table
     rejected: pa.Table
+    is_kept: NDArray[np.bool_]
 
 
 @dataclass(frozen=True)
@@ -128,9 +131,8 @@ def ingest(table: pa.Table, settings: Settings, model: FitModel) -> Ingested:
         distance_error_pc=distance_error[kept],
         **{name: values[kept] for name, values in priors.items()},
     )
-    return Ingested(
-        stars, _kept_rows(table, settings, kept), _rejected_rows(table, settings, first, rejections)
-    )
+    rejected = _rejected_rows(table, settings, first, rejections)
+    return Ingested(stars, _kept_rows(table, settings, kept), rejected, kept)
 
 
 def read_band(table: pa.Table, band: PhotometryColumns, passband: Passband) -> BandValues:
