@@ -375,5 +375,5 @@ def test_five_thousand_stars_in_thirteen_bands_are_quick():
     ingest(table, settings, model)
     started = time.perf_counter()
     ingest(table, settings, model)
-    # About 15 ms on one core of 2024; the bound leaves room for a busy machine.
+    # About 15 ms where it was measured; the bound leaves room for a busy machine.
     assert time.perf_counter() - started < 0.5

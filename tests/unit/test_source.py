@@ -221,6 +221,7 @@ def test_column_that_is_there_twice_is_refused(tmp_path):
         ("ra", [[1.0], [2.0]], {"input__carry": ["ra"]}, "input.carry needs integers, floats"),
         ("ra", [1.0, 2.0], {"input__photometry": "bad"}, "panstarrs_g bad needs booleans"),
         ("star_id", pa.array([1, 2], pa.decimal128(20, 0)), {}, "input.id needs integers or strings"),
+        ("ra", pa.array([1, 2], pa.decimal128(9, 4)), {"input__carry": ["ra"]}, "input.carry needs integers"),
     ],
 )
 def test_types_that_a_column_cannot_have(tmp_path, column, values, changes, message):
@@ -416,7 +417,8 @@ def test_not_equal_never_prunes_nan(tmp_path):
 
 @pytest.mark.parametrize("kind", [pa.int64(), pa.int32(), pa.uint64()])
 def test_only(tmp_path, kind):
-    write(tmp_path / "tables" / "a.parquet", stars(9), row_group_size=3)
+    ids = pa.array([1, 2, 3, None, 5, 6, 7, 8, None])
+    write(tmp_path / "tables" / "a.parquet", with_column(stars(9), "star_id", ids), row_group_size=3)
     write(tmp_path / "targets.parquet", pa.table({"star_id": pa.array([8, 2, None, 2, 77], kind)}))
     settings = settings_for(tmp_path / "tables", input__only=str(tmp_path / "targets.parquet"))
     assert read_all(settings)["star_id"].to_pylist() == [2, 8]
