@@ -9,7 +9,6 @@ from __future__ import annotations
 import os
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
-from itertools import pairwise
 from pathlib import Path, PurePosixPath
 
 import numpy as np
@@ -184,9 +183,9 @@ def mark_repeats(hashes: NDArray[np.int64], rows: NDArray[np.int64]) -> NDArray[
     """Return 2 * row for the first copy and 2 * row + 1 for each later copy of a repeated id, ascending."""
     order = np.lexsort((rows, hashes))
     hashes, rows = hashes[order], rows[order]
-    same = hashes[1:] == hashes[:-1]
-    later = np.concatenate([[False], same])
-    repeated = later | np.concatenate([same, [False]])
+    later, repeated = np.zeros(len(rows), bool), np.zeros(len(rows), bool)
+    later[1:] = repeated[:-1] = hashes[1:] == hashes[:-1]
+    repeated |= later
     return np.sort(2 * rows[repeated] + later[repeated])
 
 
@@ -267,5 +266,4 @@ def rows_per_part(rows: int, workers: int, most: int) -> int:
 def even_parts(rows: int, rows_per_part: int) -> tuple[int, ...]:
     """Divide rows into the fewest parts of at most `rows_per_part`, as evenly as can be."""
     count = -(-rows // rows_per_part)
-    edges = [rows * part // count for part in range(count + 1)]
-    return tuple(last - first for first, last in pairwise(edges))
+    return tuple(rows * (part + 1) // count - rows * part // count for part in range(count))

@@ -47,12 +47,12 @@ class Lines:
         """Count the rows, and write a line if the last one is long enough ago."""
         self._done += rows
         now = time.monotonic()
-        if now - self._last_line >= SECONDS_BETWEEN_LINES:
+        if now - self._last_line >= SECONDS_BETWEEN_LINES and self._done and now > self._started:
             self._last_line = now
             rate = self._done / (now - self._started)
             left = (self._rows - self._done) / rate / 60
             print(
-                f"starkiln: {self._what}: {self._done} of {self._rows} rows, {rate:.0f} a second, "
+                f"starkiln: {self._what}: {self._done} of {self._rows} rows, {rate:.3g} a second, "
                 f"{left:.0f} minutes left",
                 file=sys.stderr,
                 flush=True,

@@ -251,7 +251,7 @@ class _Run:
         tables = ["catalogue", "rejected", "index"] + ["draws"] * bool(self._settings.sampling.keep_draws)
         for table in tables:
             (parts / table).mkdir(parents=True)
-        job = Job(
+        job_path = Job(
             source=source,
             settings=self._settings,
             process=self._stages.process_part,
@@ -259,12 +259,11 @@ class _Run:
             stamps=plan.stamps,
             scratch=scratch,
             parts=parts,
-        )
-        job.save(scratch / "job.pickle")
+        ).save()
         self._progress.begin("fitting", plan.selected)
         with self._executor(plan, workers, scratch) as executor:
             self._lap("start workers")
-            work = Work(plan, scratch / "job.pickle", parts, executor, self._stop.check)
+            work = Work(plan, job_path, parts, executor, self._stop.check)
             work.run(self._tally.add_cut, self._part_done)
             self._lap("work")
         return executor.workers

@@ -27,7 +27,7 @@ from starkiln.tables.source import Source, read_rows
 from starkiln.tables.write import WrittenFile, write_part
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, kw_only=True)
 class Job:
     """What every task of a run needs; kept in a file that each worker reads once.
 
@@ -51,9 +51,12 @@ class Job:
     scratch: Path
     parts: Path
 
-    def save(self, path: Path) -> None:
-        """Write the job where `load_job` finds it."""
+    def save(self) -> Path:
+        """Write the job into the scratch folder, and return where."""
+        # Processes remember the job by its path, so no two jobs ever share one.
+        path = self.scratch / f"job.{uuid.uuid4().hex}.pickle"
         path.write_bytes(pickle.dumps(self))
+        return path
 
 
 @lru_cache(maxsize=1)

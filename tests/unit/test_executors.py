@@ -1,0 +1,118 @@
+import os
+import signal
+import time
+
+import psutil
+import pytest
+
+from starkiln.engine.executors import Finished, SerialExecutor, WorkerDied, open_cluster
+from starkiln.errors import EnvironmentTrouble
+
+MEMORY = 1_000_000_000
+
+
+def add(first, second):
+    return first + second
+
+
+def fail(text):
+    raise ArithmeticError(text)
+
+
+def die():
+    os.kill(os.getpid(), signal.SIGKILL)
+
+
+def thread_settings():
+    return {name: os.environ.get(name) for name in ("OMP_NUM_THREADS", "NUMBA_NUM_THREADS")}
+
+
+def next_of(executor, tries=100):
+    for _ in range(tries):
+        if (finished := executor.next_finished()) is not None:
+            return finished
+    raise AssertionError("no task has ended")
+
+
+def test_serial_tasks_run_in_order_but_for_urgent_ones():
+    executor = SerialExecutor()
+    executor.submit("a", add, 1, 1)
+    executor.submit("b", add, 2, 2)
+    executor.submit("c", add, 3, 3, urgent=True)
+    ended = [executor.next_finished() for _ in range(4)]
+    assert ended == [Finished("c", 6, None), Finished("a", 2, None), Finished("b", 4, None), None]
+
+
+def test_a_serial_error_is_handed_over():
+    executor = SerialExecutor()
+    executor.submit("a", fail, "no")
+    finished = executor.next_finished()
+    assert str(finished.error) == "no"
+
+
+@pytest.fixture(scope="module")
+def cluster(tmp_path_factory):
+    with open_cluster(2, MEMORY, tmp_path_factory.mktemp("scratch")) as executor:
+        yield executor
+
+
+def test_a_cluster_hands_over_results_and_errors(cluster):
+    cluster.submit("a", add, 1, 1)
+    assert next_of(cluster) == Finished("a", 2, None)
+    cluster.submit("b", fail, "no")
+    finished = next_of(cluster)
+    assert (finished.key, type(finished.error), str(finished.error)) == ("b", ArithmeticError, "no")
+
+
+def test_a_task_that_kills_its_workers_ends_and_others_go_on(cluster):
+    cluster.submit("killer", die)
+    assert isinstance(next_of(cluster).error, WorkerDied)
+    cluster.submit("other", add, 2, 3)
+    assert next_of(cluster).result == 5
+
+
+def test_workers_have_one_thread(cluster):
+    cluster.submit("threads", thread_settings)
+    assert next_of(cluster).result == {"OMP_NUM_THREADS": "1", "NUMBA_NUM_THREADS": "1"}
+
+
+def test_nothing_listens_beyond_this_machine(cluster):
+    me = psutil.Process()
+    listening = [
+        connection.laddr.ip
+        for process in (me, *me.children(recursive=True))
+        for connection in process.net_connections("inet")
+        if connection.status == psutil.CONN_LISTEN
+    ]
+    assert listening
+    assert set(listening) == {"127.0.0.1"}
+
+
+def test_closing_in_the_middle_of_a_task_is_quick_and_leaves_no_worker(tmp_path):
+    before = set(psutil.Process().children(recursive=True))
+    started = time.monotonic()
+    with pytest.raises(KeyError):
+        leave_in_the_middle_of_a_task(tmp_path)
+    assert time.monotonic() - started < 10
+    left = set(psutil.Process().children(recursive=True)) - before
+    assert [process for process in left if process.status() != psutil.STATUS_ZOMBIE] == []
+
+
+def leave_in_the_middle_of_a_task(scratch):
+    with open_cluster(1, MEMORY, scratch) as executor:
+        executor.submit("long", time.sleep, 60)
+        time.sleep(1)
+        raise KeyError
+
+
+def test_workers_that_do_not_start_are_trouble(tmp_path, monkeypatch):
+    monkeypatch.setattr("distributed.LocalCluster", refuse)
+    with (
+        pytest.raises(EnvironmentTrouble, match=r"cannot start 3 worker processes \(no\)"),
+        open_cluster(3, MEMORY, tmp_path),
+    ):
+        pass
+
+
+def refuse(**options):
+    raise RuntimeError("no")
