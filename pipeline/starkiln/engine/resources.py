@@ -6,7 +6,6 @@ import resource
 import sys
 
 from dask.system import cpu_count
-from dask.utils import parse_bytes
 from distributed.system import memory_limit
 
 from starkiln.settings import Settings
@@ -17,12 +16,7 @@ def worker_count(settings: Settings) -> int:
     wanted = settings.compute.workers
     if wanted != "auto":
         return int(wanted)
-    return max(1, min(cpu_count(), memory_limit() // worker_memory(settings)))
-
-
-def worker_memory(settings: Settings) -> int:
-    """Return the memory of one worker in bytes."""
-    return int(parse_bytes(settings.compute.memory_per_worker))
+    return max(1, min(cpu_count(), memory_limit() // settings.compute.memory_per_worker_bytes))
 
 
 def peak_memory() -> int:

@@ -1,0 +1,153 @@
+import os
+import signal
+import subprocess
+import sys
+import time
+
+import pyarrow.parquet as pq
+import pytest
+from typer.testing import CliRunner
+
+import starkiln
+from fake_stages import stages
+from small_survey import settings_for, stars
+from starkiln import cli
+from starkiln.engine import run as engine_run
+from starkiln.settings import dump_toml
+
+
+@pytest.fixture
+def command(monkeypatch):
+    """Call the command line in this process, with stages that know no physics."""
+    monkeypatch.setattr(engine_run, "fitting_stages", stages)
+    return lambda *arguments: CliRunner().invoke(cli.app, [str(argument) for argument in arguments])
+
+
+@pytest.fixture
+def config(tmp_path):
+    """Settings of a run of twenty stars."""
+    (tmp_path / "input").mkdir()
+    pq.write_table(stars(20), tmp_path / "input" / "a.parquet")
+    path = tmp_path / "run.toml"
+    path.write_text(dump_toml(settings_for(tmp_path / "input", tmp_path / "run")))
+    return path
+
+
+@pytest.mark.parametrize("name", ["check", "run", "path", "passbands"])
+def test_help_has_an_example(command, name):
+    shown = command(name, "--help")
+    assert shown.exit_code == 0
+    assert f"Example: starkiln {name}" in shown.output
+
+
+def test_help_is_quick():
+    started = time.monotonic()
+    subprocess.run([sys.executable, "-m", "starkiln", "--help"], check=True, capture_output=True)
+    assert time.monotonic() - started < 2
+
+
+def test_the_command_line_loads_nothing_heavy():
+    heavy = ["numpy", "pandas", "pyarrow", "pydantic", "dask", "distributed", "numba", "astropy", "rich"]
+    code = f"import sys, starkiln.cli; print([name for name in {heavy} if name in sys.modules])"
+    shown = subprocess.run([sys.executable, "-c", code], check=True, capture_output=True, text=True)
+    assert shown.stdout == "[]\n"
+
+
+def test_version(command):
+    assert command("--version").output == f"starkiln {starkiln.__version__}\n"
+
+
+def test_a_run_tells_where_the_catalogue_is_and_shows_its_first_rows(command, config, tmp_path):
+    shown = command("run", config)
+    assert shown.exit_code == 0
+    lines = shown.stdout.splitlines()
+    assert lines[0] == f"20 of 20 stars are in {tmp_path}/run/catalogue"
+    assert len(lines) == 1 + 1 + 5
+    assert shown.stderr == ""
+    assert command("path", tmp_path / "run").output == f"{tmp_path}/run/generations/000001\n"
+
+
+def test_quiet_is_silent_if_all_is_well(command, config):
+    shown = command("run", config, "--quiet")
+    assert (shown.exit_code, shown.output) == (0, "")
+
+
+def test_files_left_out_end_with_4_and_a_line_even_if_quiet(command, config, tmp_path):
+    (tmp_path / "input" / "b.parquet").write_bytes(b"PAR1")
+    settings = settings_for(tmp_path / "input", tmp_path / "run", input__on_bad_file="skip")
+    config.write_text(dump_toml(settings))
+    shown = command("run", config, "--quiet")
+    assert shown.exit_code == 4
+    assert "1 unusable input files left out" in shown.stdout
+    assert len(shown.stdout.splitlines()) == 1
+
+
+def test_workers_are_taken_from_the_command_line(command, config, tmp_path):
+    assert command("run", config, "--workers", 7).exit_code == 0
+    assert "workers = 7" in (tmp_path / "run" / "current" / "settings.toml").read_text()
+    assert command("run", config, "--workers", 0).exit_code == 2
+
+
+def test_check_prints_the_plan_and_makes_nothing(command, config, tmp_path):
+    shown = command("check", config)
+    assert shown.exit_code == 0
+    assert "20 rows, 1 file(s), 1 row group(s)" in shown.stdout
+    assert not (tmp_path / "run").exists()
+
+
+def test_an_error_is_a_line_and_its_code_and_debug_adds_the_traceback(command, config, tmp_path):
+    config.write_text(config.read_text().replace("star_id", "starid"))
+    shown = command("run", config)
+    assert shown.exit_code == 3
+    assert shown.stderr.startswith("starkiln: ")
+    assert "did you mean 'star_id'?" in shown.stderr
+    assert "Traceback" not in shown.stderr
+    assert "Traceback" in command("run", config, "--debug").stderr
+
+
+def test_a_bug_is_one_line_with_a_hint_and_code_1(command, config, monkeypatch):
+    monkeypatch.setattr(engine_run, "make_plan", None)
+    shown = command("run", config)
+    assert shown.exit_code == 1
+    assert shown.stderr == (
+        "starkiln: unexpected TypeError: 'NoneType' object is not callable "
+        "(a bug, please report it; --debug shows where)\n"
+    )
+
+
+def test_a_path_without_a_catalogue_is_an_error_of_the_command_line(command, tmp_path):
+    shown = command("path", tmp_path)
+    assert (shown.exit_code, shown.stderr) == (
+        2,
+        f"starkiln: {tmp_path} holds no published catalogue: name the run.output of a finished run\n",
+    )
+
+
+def test_passbands_are_listed_and_told_in_full(command):
+    assert "\n2mass_j " in command("passbands").stdout
+    shown = command("passbands", "2mass_j").stdout
+    assert "zero_point_vega_jy 1594" in shown
+    assert "Cohen" in shown
+
+
+def test_a_passband_with_editions_is_refused_by_its_bare_name(command):
+    shown = command("passbands", "gaia_g")
+    assert shown.exit_code == 2
+    assert "gaia_dr3_g or gaia_dr2_g" in shown.stderr
+
+
+@pytest.mark.parametrize("quiet", [True, False])
+def test_a_signal_ends_with_5_and_no_word_if_quiet(command, config, monkeypatch, tmp_path, quiet):
+    monkeypatch.setattr(engine_run, "fitting_stages", lambda: stages(signal_this_process))
+    shown = command("run", config, *(["--quiet"] if quiet else []))
+    assert shown.exit_code == 5
+    assert shown.stdout == ""
+    assert shown.stderr.startswith("" if quiet else "starkiln: stopped by SIGTERM: nothing was published")
+    assert not quiet or shown.stderr == ""
+    assert sorted(path.name for path in (tmp_path / "run").iterdir()) == ["generations", "lock", "logs"]
+    assert not list((tmp_path / "run" / "generations").iterdir())
+
+
+def signal_this_process(*arguments):
+    os.kill(os.getpid(), signal.SIGTERM)
+    raise ArithmeticError
