@@ -1,0 +1,76 @@
+"""Stopping a run whose workers are busy: as a scheduler of jobs does, and as Ctrl-C on a terminal does."""
+
+import os
+import signal
+import subprocess
+import sys
+import time
+
+import psutil
+import pytest
+
+from pipeline_survey import write
+from small_survey import settings_for, stars
+from starkiln.settings import dump_toml
+
+RUN = """
+import sys
+from fake_stages import stages, take_long
+from starkiln import cli
+from starkiln.engine import run
+if __name__ == "__main__":
+    run.SMALL_RUN_ROWS = 0
+    run.fitting_stages = lambda: stages(take_long)
+    cli.main()
+"""
+
+
+@pytest.fixture
+def busy_run(tmp_path):
+    """A run in a process group of its own, whose two workers are in the middle of a part."""
+    folder = write(tmp_path / "survey", a=stars(100))
+    settings = settings_for(folder, tmp_path / "run", compute__workers=2, compute__rows_per_part=10)
+    (tmp_path / "run.toml").write_text(dump_toml(settings))
+    (tmp_path / "main.py").write_text(RUN)
+    process = subprocess.Popen(
+        [sys.executable, tmp_path / "main.py", "run", tmp_path / "run.toml"],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+        start_new_session=True,
+        env=os.environ | {"PYTHONPATH": os.pathsep.join(sys.path)},
+    )
+    with process:
+        deadline = time.monotonic() + 60
+        while not list((tmp_path / "run").glob("scratch/*.arrow")):
+            assert process.poll() is None, process.stderr.read()
+            assert time.monotonic() < deadline
+            time.sleep(0.1)
+        time.sleep(1)
+        yield process
+        process.kill()
+
+
+@pytest.mark.parametrize(
+    ("number", "to_group"), [(signal.SIGTERM, False), (signal.SIGTERM, True), (signal.SIGINT, True)]
+)
+def test_a_stopped_run_leaves_nothing_running_and_nothing_behind(busy_run, tmp_path, number, to_group):
+    children = psutil.Process(busy_run.pid).children(recursive=True)
+    assert len(children) >= 2
+    if to_group:
+        os.killpg(busy_run.pid, number)
+    else:
+        busy_run.send_signal(number)
+    out, err = busy_run.communicate(timeout=20)
+    assert busy_run.returncode == 5
+    name = signal.Signals(number).name
+    assert (out, err) == (
+        "",
+        f"starkiln: stopped by {name}: nothing was published; run again to start over\n",
+    )
+    psutil.wait_procs(children, timeout=5)
+    assert [
+        child for child in children if child.is_running() and child.status() != psutil.STATUS_ZOMBIE
+    ] == []
+    assert sorted(path.name for path in (tmp_path / "run").iterdir()) == ["generations", "lock", "logs"]
+    assert list((tmp_path / "run" / "generations").iterdir()) == []
