@@ -21,7 +21,11 @@ class Flag:
 
 FLAGS: tuple[Flag, ...] = (
     Flag(0, "few_bands", "Fewer than five usable bands were fitted."),
-    Flag(1, "poor_parallax", "The parallax is below five times its error, so the distance prior shapes R and L."),
+    Flag(
+        1,
+        "poor_parallax",
+        "The parallax is below five times its error, so the distance prior shapes R and L.",
+    ),
     Flag(2, "negative_parallax", "The parallax, zero point removed, is negative."),
     Flag(3, "no_parallax", "No usable parallax or distance: radius, luminosity and distance are null."),
     Flag(4, "not_converged", "The sampler stopped at max_steps, or its walkers disagree (see rhat_max)."),
@@ -34,7 +38,11 @@ FLAGS: tuple[Flag, ...] = (
     Flag(12, "band_outlier", "At least one band has an outlier probability above 0.9."),
     Flag(14, "infrared_excess", "A band longward of 3 micron lies more than 3 sigma above the model."),
     Flag(15, "ultraviolet_excess", "A band shortward of 0.32 micron lies more than 3 sigma above the model."),
-    Flag(17, "duplicate_id", "The id occurs more than once in the input; this is the first copy, the one fitted."),
+    Flag(
+        17,
+        "duplicate_id",
+        "The id occurs more than once in the input; this is the first copy, the one fitted.",
+    ),
 )
 
 BY_NAME: dict[str, Flag] = {flag.name: flag for flag in FLAGS}

@@ -27,8 +27,7 @@ _TWO_52_BITS = np.int64(0x4330000000000000)
 _SQRT2 = 1.4142135623730951
 
 
-@intrinsic
-def float_bits(typing_context: Any, value: Any) -> Any:
+def _float_bits(typing_context: Any, value: Any) -> Any:
     """Return the bits of a float64 as int64."""
 
     def codegen(context: Any, builder: Any, signature: Any, args: Any) -> Any:
@@ -37,14 +36,17 @@ def float_bits(typing_context: Any, value: Any) -> Any:
     return types.int64(types.float64), codegen
 
 
-@intrinsic
-def bits_float(typing_context: Any, value: Any) -> Any:
+def _bits_float(typing_context: Any, value: Any) -> Any:
     """Return the float64 whose bits are an int64."""
 
     def codegen(context: Any, builder: Any, signature: Any, args: Any) -> Any:
         return builder.bitcast(args[0], ir.DoubleType())
 
     return types.float64(types.int64), codegen
+
+
+float_bits: Any = intrinsic(_float_bits)
+bits_float: Any = intrinsic(_bits_float)
 
 
 @inlined
@@ -96,7 +98,7 @@ def log(x):
 
 @inlined
 def sine_cosine_turns(u):
-    """sin and cos of 2 pi u for u between 0 and 1, error below 4e-16: Taylor series of half the angle."""
+    """Sin and cos of 2 pi u for u between 0 and 1, error below 4e-16: Taylor series of half the angle."""
     x = 3.141592653589793 * (u - 0.5)
     z = x * x
     s = -1.0 / 51090942171709440000.0

@@ -38,6 +38,11 @@ class Convergence(NamedTuple):
     autocorr_steps: NDArray[np.float64]
     stray_walker: NDArray[np.bool_]
 
+    def take(self, stars: NDArray[np.int64]) -> Convergence:
+        """Return the diagnostics of some of the stars."""
+        columns = {name: getattr(self, name)[stars] for name in self._fields}
+        return Convergence(**columns)
+
 
 @lru_cache(maxsize=8)
 def _normal_scores(n: int) -> NDArray[np.float64]:
@@ -60,9 +65,7 @@ def _autocorrelation_times(chain, out):
             out[star, p] = autocorrelation_time(chain[star, p])
 
 
-def diagnose(
-    chain: NDArray[np.float64], order: NDArray[np.int64], autocorr_steps: NDArray[np.float64]
-) -> Convergence:
+def diagnose(chain: NDArray[np.float64], order: NDArray[np.int64], autocorr_steps: NDArray[np.float64]) -> Convergence:
     """Diagnose the chains of a block of stars.
 
     Parameters

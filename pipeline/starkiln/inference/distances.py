@@ -93,10 +93,7 @@ def log_density_of_ln(s, kind, value, error, length_scale_pc):
 @kernel
 def _likely_ln(kind, value, error, low, high):
     """Return a point on the likelihood's own peak, which a coarse grid may miss when it is narrow."""
-    if kind == PARALLAX:
-        guess = 1e3 / max(value, 0.1 * error)
-    else:
-        guess = max(value, 0.1 * error)
+    guess = 1000.0 / max(value, 0.1 * error) if kind == PARALLAX else max(value, 0.1 * error)
     return min(max(np.log(guess), low), high)
 
 

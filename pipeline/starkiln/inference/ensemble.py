@@ -131,11 +131,6 @@ def chain_bytes(n_steps: int, walkers: int, ndim: int) -> int:
     return n_steps * walkers * 8 * (5 * ndim + 16)
 
 
-def take_stars(block: Block, stars: NDArray[np.int64]) -> Block:
-    """Return the block of some of a block's stars."""
-    return Block(*(column[stars] for column in block))
-
-
 def _first_walkers(
     block: Block, grid: Grid, prior: Prior, modes: Modes, streams: NDArray[np.uint64], walkers: int
 ) -> tuple[Proposal, NDArray[np.float64], NDArray[np.float64]]:
@@ -161,7 +156,7 @@ def _laplace_proposal(modes: Modes, fit_av: bool) -> Proposal:
     centre = np.ascontiguousarray(modes.coords[:, 0][:, axes])
     factor = np.empty((n_stars, ndim, ndim))
     _factor_modes(modes.covariance, axes, factor)
-    return Proposal(axes, fit_av, centre, factor)
+    return Proposal(axes, fit_av, centre, factor, np.zeros((n_stars, ndim)))
 
 
 @kernel
@@ -185,13 +180,13 @@ def _draw_walkers(proposal, modes, streams, coords):
     for star in range(n_stars):
         draw_independent(proposal, star, streams[star], scratch, coords[star * walkers : (star + 1) * walkers])
         total = 0.0
-        for m in range(modes.count[star]):
+        for m in range(modes.n_modes[star]):
             total += exp(modes.log_density[star, m] - modes.log_density[star, 0])
         for i in range(walkers):
             row = star * walkers + i
             pick = uniform(streams[star]) * total
             mode = 0
-            for m in range(modes.count[star]):
+            for m in range(modes.n_modes[star]):
                 pick -= exp(modes.log_density[star, m] - modes.log_density[star, 0])
                 mode = m
                 if pick <= 0.0:
@@ -203,7 +198,7 @@ def _draw_walkers(proposal, modes, streams, coords):
 @kernel
 def _pull_in(coords, lost, modes):
     """Move lost walkers most of the way to their star's highest peak."""
-    walkers = coords.shape[0] // modes.count.size
+    walkers = coords.shape[0] // modes.n_modes.size
     for row in range(coords.shape[0]):
         if lost[row]:
             for k in range(coords.shape[1]):
@@ -285,7 +280,7 @@ class _Run:
         if not len(done):
             return None, self
         leaving = candidates[done]
-        some = Convergence(*(column[done] for column in convergence))
+        some = convergence.take(done)
         trusted = enough[done] & ~some.stray_walker & (some.rhat <= RHAT_LIMIT).all(axis=1)
         log_prob = self.chain_log_prob.reshape(n_steps, self.n_stars, self.walkers)[:, leaving]
         draws = Draws(
@@ -302,14 +297,13 @@ class _Run:
     def taking(self, stars: NDArray[np.int64]) -> _Run:
         """Return the run of some of the stars, from where they are."""
         walkers = (stars[:, None] * self.walkers + np.arange(self.walkers)).ravel()
-        proposal = self.proposal._replace(centre=self.proposal.centre[stars], factor=self.proposal.factor[stars])
         run = _Run(
-            take_stars(self.block, stars),
+            self.block.take(stars),
             self.grid,
             self.prior,
             self.streams[stars],
             self.walkers,
-            proposal,
+            self.proposal.take(stars),
             self.coords[walkers],
             self.log_prob[walkers],
         )
@@ -320,12 +314,13 @@ class _Run:
 
 def _long_enough(convergence: Convergence, n_steps: int, stopping: Stopping) -> NDArray[np.bool_]:
     target = stopping.effective_samples
-    return (
+    enough = (
         (convergence.ess_bulk >= target).all(axis=1)
         & (convergence.ess_tail >= TAIL_SHARE * target).all(axis=1)
         & (n_steps >= MIN_TAUS * convergence.autocorr_steps).all(axis=1)
         & (n_steps >= MIN_STEPS)
     )
+    return np.asarray(enough)
 
 
 @kernel

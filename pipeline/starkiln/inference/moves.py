@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import log
 from starkiln.inference.compile import kernel
-from starkiln.inference.start import cholesky
+from starkiln.inference.start import cholesky, solve_positive
 from starkiln.inference.streams import below, fill_normal, fill_uniform, uniform
 
 TAIL = 4.0  # degrees of freedom of the learnt proposal: heavier tails than any posterior here
@@ -26,7 +26,7 @@ class Proposal(NamedTuple):
     """A frozen independence proposal for each star, in the order ``axes`` of the coordinates.
 
     The first coordinate in that order (A_V, where it is fitted) has a Student t of its own, reflected at
-    zero; the others have a multivariate t about their regression on it, so the reflection stays on the ridge.
+    zero; the others have a multivariate t about a parabola in it, so the reflection stays on the ridge.
 
     Attributes
     ----------
@@ -38,15 +38,22 @@ class Proposal(NamedTuple):
         (S, ndim), in the order of ``axes``.
     factor
         (S, ndim, ndim), lower Cholesky factors in that order.
+    bend
+        (S, ndim), coefficients of the parabola; the first is not used.
     """
 
     axes: NDArray[np.int64]
     reflect: bool
     centre: NDArray[np.float64]
     factor: NDArray[np.float64]
+    bend: NDArray[np.float64]
+
+    def take(self, stars: NDArray[np.int64]) -> Proposal:
+        """Return the proposal of some stars."""
+        return self._replace(centre=self.centre[stars], factor=self.factor[stars], bend=self.bend[stars])
 
 
-class BlockMove(Move):  # type: ignore[misc]
+class BlockMove(Move):
     """Differential evolution mixed with an independence proposal, for many stars side by side.
 
     Parameters
@@ -99,9 +106,8 @@ class BlockMove(Move):  # type: ignore[misc]
 
 
 def _no_proposal(n_stars: int, ndim: int) -> Proposal:
-    return Proposal(
-        np.arange(ndim), False, np.zeros((n_stars, ndim)), np.broadcast_to(np.eye(ndim), (n_stars, ndim, ndim)).copy()
-    )
+    unit = np.broadcast_to(np.eye(ndim), (n_stars, ndim, ndim)).copy()
+    return Proposal(np.arange(ndim), False, np.zeros((n_stars, ndim)), unit, np.zeros((n_stars, ndim)))
 
 
 def proposal_axes(ndim: int, fit_av: bool) -> NDArray[np.int64]:
@@ -119,39 +125,93 @@ def learn_proposal(window: NDArray[np.float64], n_stars: int, fit_av: bool) -> P
         (n, S * W, ndim) positions of the walkers.
     """
     ndim = window.shape[2]
-    axes = proposal_axes(ndim, fit_av)
-    centre = np.empty((n_stars, ndim))
-    factor = np.empty((n_stars, ndim, ndim))
-    _learn(window, axes, centre, factor)
-    return Proposal(axes, fit_av, centre, factor)
+    proposal = Proposal(
+        proposal_axes(ndim, fit_av),
+        fit_av,
+        np.zeros((n_stars, ndim)),
+        np.zeros((n_stars, ndim, ndim)),
+        np.zeros((n_stars, ndim)),
+    )
+    _learn(window, proposal)
+    return proposal
 
 
 @kernel
-def _learn(window, axes, centre, factor):
+def parabola(x):
+    """Return the curved term at a standardised first coordinate; flat beyond 3, where nothing was learnt."""
+    return min(x * x, 9.0) - 1.0
+
+
+@kernel
+def _learn(window, proposal):
     n_steps, n_walkers, ndim = window.shape
-    n_stars = centre.shape[0]
+    n_stars = proposal.centre.shape[0]
     lanes = n_walkers // n_stars
-    covariance = np.empty((ndim, ndim))
+    n = n_steps * lanes
+    samples = np.empty((ndim, n))
     for star in range(n_stars):
         for k in range(ndim):
-            total = 0.0
-            for n in range(n_steps):
-                for i in range(star * lanes, (star + 1) * lanes):
-                    total += window[n, i, axes[k]]
-            centre[star, k] = total / (n_steps * lanes)
-        covariance[:] = 0.0
-        for n in range(n_steps):
-            for i in range(star * lanes, (star + 1) * lanes):
-                for k in range(ndim):
-                    for m in range(k + 1):
-                        covariance[k, m] += (window[n, i, axes[k]] - centre[star, k]) * (
-                            window[n, i, axes[m]] - centre[star, m]
-                        )
-        factor[star] = cholesky(covariance * (INFLATION / (n_steps * lanes)))
+            axis = proposal.axes[k]
+            for t in range(n_steps):
+                for i in range(lanes):
+                    samples[k, t * lanes + i] = window[t, star * lanes + i, axis]
+        _learn_first(samples[0], proposal.centre[star], proposal.factor[star])
+        if ndim > 1:
+            _learn_others(samples, proposal.centre[star], proposal.factor[star], proposal.bend[star])
+
+
+@kernel
+def _learn_first(values, centre, factor):
+    """Fit the first coordinate, and leave its values standardised."""
+    mean = 0.0
+    for i in range(values.size):
+        mean += values[i]
+    mean /= values.size
+    variance = 0.0
+    for i in range(values.size):
+        variance += (values[i] - mean) ** 2
+    centre[0] = mean
+    factor[0, 0] = np.sqrt(INFLATION * variance / values.size + 1e-300)
+    for i in range(values.size):
+        values[i] = (values[i] - mean) / factor[0, 0]
+
+
+@kernel
+def _learn_others(samples, centre, factor, bend):
+    """Fit the other coordinates by parabolas in the first, and the covariance of what is left."""
+    ndim, n = samples.shape
+    normal = np.zeros((3, 3))
+    basis = np.empty(3)
+    right = np.zeros((ndim, 3))
+    for k in range(1, ndim):
+        centre[k] = samples[k, 0]
+    for i in range(n):
+        basis[0], basis[1], basis[2] = 1.0, samples[0, i], parabola(samples[0, i])
+        for a in range(3):
+            for b in range(3):
+                normal[a, b] += basis[a] * basis[b]
+            for k in range(1, ndim):
+                right[k, a] += basis[a] * (samples[k, i] - centre[k])
+    for a in range(3):
+        normal[a, a] += 1e-9 * n
+    residual = np.zeros((ndim - 1, ndim - 1))
+    for k in range(1, ndim):
+        solution = solve_positive(normal, right[k])
+        for i in range(n):
+            samples[k, i] -= centre[k] + solution[0] + solution[1] * samples[0, i]
+            samples[k, i] -= solution[2] * parabola(samples[0, i])
+        centre[k] += solution[0]
+        factor[k, 0] = solution[1]
+        bend[k] = solution[2]
+    for k in range(1, ndim):
+        for m in range(1, k + 1):
+            for i in range(n):
+                residual[k - 1, m - 1] += samples[k, i] * samples[m, i]
+    factor[1:, 1:] = cholesky(residual * (INFLATION / n))
 
 
 class Scratch(NamedTuple):
-    """Buffers for one star's proposals, L lanes each; ``uniforms`` has two rows more than a draw takes normals, twice."""
+    """Buffers for one star's proposals, L lanes each: the last four rows of ``uniforms`` make the two scales."""
 
     uniforms: NDArray[np.float64]
     normals: NDArray[np.float64]
@@ -163,9 +223,7 @@ class Scratch(NamedTuple):
 def make_scratch(ndim, lanes):
     """Return the buffers for proposals of a star."""
     even = ndim + ndim % 2
-    return Scratch(
-        np.empty((even + 4, lanes)), np.empty((even, lanes)), np.empty((ndim, lanes)), np.empty((2, lanes))
-    )
+    return Scratch(np.empty((even + 4, lanes)), np.empty((even, lanes)), np.empty((ndim, lanes)), np.empty((2, lanes)))
 
 
 @kernel
@@ -177,7 +235,7 @@ def draw_independent(proposal, star, stream, scratch, out):
     """
     lanes, ndim = out.shape
     even = scratch.normals.shape[0]
-    factor, centre = proposal.factor[star], proposal.centre[star]
+    factor, centre, bend = proposal.factor[star], proposal.centre[star], proposal.bend[star]
     x = scratch.x
     fill_uniform(stream, scratch.uniforms)
     fill_normal(scratch.uniforms[:even], scratch.normals)
@@ -195,7 +253,7 @@ def draw_independent(proposal, star, stream, scratch, out):
         axis = proposal.axes[k]
         for i in range(lanes):
             x[k, i] = scratch.normals[k, i] * scratch.scale[1, i]
-            value = centre[k]
+            value = centre[k] + bend[k] * parabola(x[0, i])
             for m in range(k + 1):
                 value += factor[k, m] * x[m, i]
             out[i, axis] = value
@@ -204,11 +262,13 @@ def draw_independent(proposal, star, stream, scratch, out):
 @kernel
 def standardise(proposal, star, coords, x):
     """Write positions (L, ndim) as standardised proposal coordinates (ndim, L)."""
-    factor, centre = proposal.factor[star], proposal.centre[star]
+    factor, centre, bend = proposal.factor[star], proposal.centre[star], proposal.bend[star]
     for k in range(x.shape[0]):
         axis = proposal.axes[k]
         for i in range(x.shape[1]):
             value = coords[i, axis] - centre[k]
+            if k > 0:
+                value -= bend[k] * parabola(x[0, i])
             for m in range(k):
                 value -= factor[k, m] * x[m, i]
             x[k, i] = value / factor[k, k]

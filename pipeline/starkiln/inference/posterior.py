@@ -77,6 +77,11 @@ class Block(NamedTuple):
     av_fixed: NDArray[np.float64]
     log_norm: NDArray[np.float64]
 
+    def take(self, stars: NDArray[np.int64]) -> Block:
+        """Return the block of some of the stars."""
+        columns = {name: getattr(self, name)[stars] for name in self._fields}
+        return Block(**columns)
+
 
 @kernel
 def log_posterior(coords, block, grid, prior, out):

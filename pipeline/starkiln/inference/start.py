@@ -29,7 +29,7 @@ class Modes(NamedTuple):
 
     Attributes
     ----------
-    count
+    n_modes
         (S,) int64.
     coords
         (S, MAX_MODES, ndim).
@@ -39,7 +39,7 @@ class Modes(NamedTuple):
         (S, MAX_MODES, ndim, ndim), the inverse of the Gauss-Newton curvature.
     """
 
-    count: NDArray[np.int64]
+    n_modes: NDArray[np.int64]
     coords: NDArray[np.float64]
     log_density: NDArray[np.float64]
     covariance: NDArray[np.float64]
@@ -334,7 +334,7 @@ def inverse_positive(matrix):
 @kernel
 def _keep(modes, star, point, value, curvature):
     """Insert a peak in order of height, unless it is one already found or there are enough."""
-    count = modes.count[star]
+    count = modes.n_modes[star]
     for m in range(count):
         if abs(np.log(point[0] / modes.coords[star, m, 0])) < 0.01:
             if value <= modes.log_density[star, m]:
@@ -355,7 +355,7 @@ def _keep(modes, star, point, value, curvature):
     modes.coords[star, place] = point
     modes.log_density[star, place] = value
     modes.covariance[star, place] = inverse_positive(curvature)
-    modes.count[star] = min(count + 1, MAX_MODES)
+    modes.n_modes[star] = min(count + 1, MAX_MODES)
 
 
 @kernel

@@ -60,10 +60,7 @@ def derive(stars: Stars, draws: Draws, model: FitModel, settings: Settings) -> D
     )
     photometric = np.take_along_axis(draws.chain, distances.source[:, None], axis=2)
     ln_teff, ln_omega = photometric[:, 0], photometric[:, 1]
-    if photometric.shape[1] > 2:
-        av = photometric[:, 2]
-    else:
-        av = np.broadcast_to(stars.av_mean[:, None], ln_teff.shape)
+    av = photometric[:, 2] if photometric.shape[1] > 2 else np.broadcast_to(stars.av_mean[:, None], ln_teff.shape)
     ln_radius = distances.ln_dist_pc + 0.5 * ln_omega - LN_RSUN_PC
     return Derived(
         ln_teff=ln_teff,

@@ -55,7 +55,7 @@ def fit(stars: Stars, model: FitModel, settings: Settings) -> Iterator[Fitted]:
         for draws in sample_block(
             block, model.grid, model.prior, streams, settings.sampling.walkers, stopping, memory_bytes
         ):
-            yield Fitted(first, Block(*(column[draws.stars] for column in block)), draws)
+            yield Fitted(first, block.take(draws.stars), draws)
 
 
 def pack_block(stars: Stars, model: FitModel, settings: Settings) -> Block:

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from starkiln.errors import SettingsError, UnknownPassband, nearest
 from starkiln.inference.posterior import Grid, Prior
-from starkiln.physics.bandtable import build_band_table
+from starkiln.physics.bandtable import BandTable, build_band_table
 from starkiln.physics.constants import PARSEC_M, RSUN_M
 from starkiln.physics.extinction import law_names
 from starkiln.physics.passbands import Passband, builtin_names, load_passband, read_passband, zero_point_jy
@@ -32,14 +32,17 @@ class FitModel:
         By label, in the order of the settings.
     floor
         (B,): each band's fractional floor with the error of its zero point, in quadrature.
+    table
+        Band fluxes against temperature and A_V.
     grid, prior
-        As the kernels take them.
+        The table and the priors, as the kernels take them.
     ln_radius_bounds_pc
         Bounds on ln R, R in parsecs.
     """
 
     passbands: dict[str, Passband]
     floor: NDArray[np.float64]
+    table: BandTable
     grid: Grid
     prior: Prior
     ln_radius_bounds_pc: tuple[float, float]
@@ -94,6 +97,7 @@ def build_model(settings: Settings) -> FitModel:
     return FitModel(
         passbands=passbands,
         floor=np.array([_floor(band, passbands[band.label]) for band in settings.input.photometry]),
+        table=table,
         grid=Grid(table.coef.ravel(), n_rows, n_columns, table.ln_teff_min, table.ln_teff_step, table.av_step),
         prior=prior,
         ln_radius_bounds_pc=(float(radius_min), float(radius_max)),

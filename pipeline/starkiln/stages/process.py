@@ -12,7 +12,7 @@ from starkiln.flags import BY_NAME
 from starkiln.settings import Settings
 from starkiln.stages.derive import derive
 from starkiln.stages.fit import fit
-from starkiln.stages.ingest import Ingested, ingest
+from starkiln.stages.ingest import ingest
 from starkiln.stages.model import FitModel
 from starkiln.stages.stars import Stars
 from starkiln.stages.summarise import kept_draws, summarise
@@ -40,7 +40,7 @@ def process_part(table: pa.Table, settings: Settings, model: FitModel) -> PartTa
     ingested = ingest(table, settings, model)
     columns, draws = _fit_columns(ingested.stars, model, settings)
     if len(ingested.stars):
-        columns["row_hash"] = _kept_hashes(table, ingested, settings)
+        columns["row_hash"] = row_hashes(table, settings)[ingested.is_kept]
         first_copy = ingested.kept["_duplicate"].to_numpy() == 1
         columns["flags"] |= np.where(first_copy, BY_NAME["duplicate_id"].value, 0).astype(np.int32)
     id_field, carry_fields = output_fields(table.schema, settings)
@@ -72,19 +72,6 @@ def _place(target: dict[str, Any], rows: np.ndarray, n: int, values: dict[str, A
         if name not in target:
             target[name] = np.zeros((n, *column.shape[1:]), column.dtype)
         target[name][rows] = column
-
-
-def _kept_hashes(table: pa.Table, ingested: Ingested, settings: Settings) -> np.ndarray:
-    places = np.ones(table.num_rows, bool)
-    rejected = set(
-        zip(
-            ingested.rejected["input_file"].to_pylist(), ingested.rejected["input_row"].to_pylist(), strict=True
-        )
-    )
-    if rejected:
-        origins = zip(table["_input_file"].to_pylist(), table["_input_row"].to_pylist(), strict=True)
-        places = np.array([origin not in rejected for origin in origins])
-    return row_hashes(table.filter(pa.array(places)), settings)
 
 
 def _table(schema: pa.Schema, kept: pa.Table, columns: dict[str, np.ndarray]) -> pa.Table:

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from typing import Any
+
 import numpy as np
-import pyarrow as pa
 from numpy.typing import NDArray
 from scipy.special import gammaincc
 
@@ -33,7 +35,7 @@ INFRARED_UM = 3.0
 ULTRAVIOLET_UM = 0.32
 NOT_WITHOUT_DETECTION = ("teff", "radius", "lum", "ang_diam", "fbol")
 
-Columns = dict[str, NDArray[np.generic]]
+Columns = dict[str, NDArray[Any]]
 
 
 def summarise(stars: Stars, fitted: Fitted, derived: Derived, model: FitModel, settings: Settings) -> Columns:
@@ -206,8 +208,7 @@ def _at_bounds(derived: Derived, prior: Prior, settings: Settings) -> dict[str, 
     ln_teff, av, ln_radius = quantiles(derived.ln_teff), quantiles(derived.av), quantiles(derived.ln_radius)
     ln_radius_min, ln_radius_max = np.log(settings.model.radius_rsun)
     return {
-        "temperature_at_bound": (ln_teff[:, 0] < prior.ln_teff_min + 0.01)
-        | (ln_teff[:, 4] > prior.ln_teff_max - 0.01),
+        "temperature_at_bound": (ln_teff[:, 0] < prior.ln_teff_min + 0.01) | (ln_teff[:, 4] > prior.ln_teff_max - 0.01),
         "extinction_at_bound": (av[:, 4] > 0.98 * prior.av_max) & prior.fit_av,
         "radius_at_bound": (ln_radius[:, 0] < ln_radius_min + 0.05)
         | (ln_radius[:, 4] > ln_radius_max - 0.05)
@@ -220,8 +221,8 @@ def _any_band(columns: Columns, prefix: str, labels: list[str], level: float) ->
     return np.asarray((values > level).any(axis=0))
 
 
-def _excess(columns: Columns, model: FitModel, longward: object) -> NDArray[np.bool_]:
-    labels = [label for label, passband in model.passbands.items() if longward(passband.pivot_um)]  # type: ignore[operator]
+def _excess(columns: Columns, model: FitModel, chosen: Callable[[float], bool]) -> NDArray[np.bool_]:
+    labels = [label for label, passband in model.passbands.items() if chosen(passband.pivot_um)]
     if not labels:
         return np.zeros(len(columns["n_bands"]), bool)
     return _any_band(columns, "residual", labels, EXCESS_SIGMA)
