@@ -28,7 +28,11 @@ FLAGS: tuple[Flag, ...] = (
     ),
     Flag(2, "negative_parallax", "The parallax, zero point removed, is negative."),
     Flag(3, "no_parallax", "No usable parallax or distance: radius, luminosity and distance are null."),
-    Flag(4, "not_converged", "The sampler stopped at max_steps, or its walkers disagree (see rhat_max)."),
+    Flag(
+        4,
+        "not_converged",
+        "The sampler stopped at max_steps, its walkers disagree (see rhat_max), or the bounds on R left few draws.",
+    ),
     Flag(5, "several_modes", "The posterior has more than one separate peak."),
     Flag(6, "temperature_at_bound", "More than 2.5 % of the posterior lies within 1 % of a temperature bound."),
     Flag(7, "extinction_at_bound", "More than 2.5 % of the posterior lies within 2 % of the largest A_V."),

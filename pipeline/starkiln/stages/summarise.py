@@ -29,6 +29,7 @@ DETECTION_SIGMA = 3.0
 FEW_BANDS = 5
 POOR_PARALLAX = 5.0
 POOR_FIT = 0.001
+LEAST_KEPT_SHARE = 0.1
 OUTLIER = 0.9
 EXCESS_SIGMA = 3.0
 INFRARED_UM = 3.0
@@ -184,7 +185,7 @@ def _flags(
             "poor_parallax": has_parallax & (stars.parallax_mas < POOR_PARALLAX * stars.parallax_error_mas),
             "negative_parallax": has_parallax & (stars.parallax_mas < 0.0),
             "no_parallax": ~has_parallax & ~given,
-            "not_converged": ~fitted.draws.converged,
+            "not_converged": ~fitted.draws.converged | (derived.kept_share < LEAST_KEPT_SHARE),
             "several_modes": _several_modes(derived) & ~no_detection,
             "no_detection": no_detection,
             "poor_fit": columns["ppp_value"] < POOR_FIT,
