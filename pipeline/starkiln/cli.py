@@ -138,9 +138,7 @@ def path(run_dir: RunDir, debug: Debug = False) -> None:
     with _errors_told(debug):
         current = run_dir / "current"
         if not current.is_dir():
-            raise SettingsError(
-                f"{run_dir} holds no published catalogue: name the run.output of a finished run"
-            )
+            raise SettingsError(f"{run_dir} holds no published catalogue: name the run.output of a finished run")
         print(current.resolve())
 
 
@@ -176,7 +174,6 @@ def _band_table(bands: list[dict[str, Any]]) -> str:
 
 def _band_in_full(band: dict[str, Any]) -> str:
     lines = [
-        f"{key:<19}{value:.6g}" if isinstance(value, float) else f"{key:<19}{value}"
-        for key, value in band.items()
+        f"{key:<19}{value:.6g}" if isinstance(value, float) else f"{key:<19}{value}" for key, value in band.items()
     ]
     return "\n".join(lines)

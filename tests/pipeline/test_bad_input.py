@@ -25,9 +25,7 @@ class Survey:
         self.folder = folder
         write(folder / "tables", a=blackbodies(20, 1), b=blackbodies(20, 21))
         self.config = folder / "run.toml"
-        self.config.write_text(
-            CONFIG.replace("/tables", f"{folder}/tables").replace("/output", f"{folder}/run")
-        )
+        self.config.write_text(CONFIG.replace("/tables", f"{folder}/tables").replace("/output", f"{folder}/run"))
 
     def change(self, old, new):
         text = self.config.read_text()

@@ -69,8 +69,6 @@ def test_a_stopped_run_leaves_nothing_running_and_nothing_behind(busy_run, tmp_p
         f"starkiln: stopped by {name}: nothing was published; run again to start over\n",
     )
     psutil.wait_procs(children, timeout=5)
-    assert [
-        child for child in children if child.is_running() and child.status() != psutil.STATUS_ZOMBIE
-    ] == []
+    assert [child for child in children if child.is_running() and child.status() != psutil.STATUS_ZOMBIE] == []
     assert sorted(path.name for path in (tmp_path / "run").iterdir()) == ["generations", "lock", "logs"]
     assert list((tmp_path / "run" / "generations").iterdir()) == []

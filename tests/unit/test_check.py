@@ -21,7 +21,7 @@ def test_the_plan_tells_what_a_run_will_take(tmp_path):
         "bands    3: panstarrs_g, panstarrs_r, panstarrs_i",
         "parts    about 5 of up to 250 rows",
         "workers  2, up to 2GB each",
-        "memory   up to 4.5 GB in all",
+        "memory   up to 4.7 GB in all",
     ]
     assert plan_text(tmp_path).endswith("about 3 seconds, if a worker fits 200 stars a second")
 

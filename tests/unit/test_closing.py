@@ -53,11 +53,7 @@ def test_the_index_leads_to_the_row_of_every_id(tmp_path, repeated):
     index = rows_of(generation, "index")
     hashes, has_id = id_hashes(repeated["star_id"])
     listed = has_id & (np.arange(30) != 10)
-    assert (
-        sorted(index["id_hash"].to_pylist())
-        == index["id_hash"].to_pylist()
-        == sorted(hashes[listed].tolist())
-    )
+    assert sorted(index["id_hash"].to_pylist()) == index["id_hash"].to_pylist() == sorted(hashes[listed].tolist())
     found = dict(zip(hashes[listed].tolist(), row_hashes(repeated, settings)[listed].tolist(), strict=True))
     for entry in index.to_pylist():
         table = pq.read_table(generation / entry["file"])

@@ -35,9 +35,7 @@ def test_a_held_directory_is_busy_and_the_holder_is_named_until_it_dies(tmp_path
 
 def test_a_folder_that_cannot_be_made_is_trouble_with_the_remedy(tmp_path):
     (tmp_path / "file").write_text("")
-    with pytest.raises(
-        EnvironmentTrouble, match=r"file/run as the run directory \(Not a directory\): set run\.output"
-    ):
+    with pytest.raises(EnvironmentTrouble, match=r"file/run as the run directory \(Not a directory\): set run\.output"):
         hold(tmp_path / "file" / "run").__enter__()
 
 

@@ -99,9 +99,7 @@ def test_no_row_at_all_gives_an_empty_catalogue(table):
 
 def test_missing_columns_are_all_named_with_the_nearest(table):
     changed = table.rename_columns({"panstarrs_g": "panstars_g"}).drop_columns("parallax")
-    with pytest.raises(
-        InputError, match=r"no column 'parallax'.*, 'panstarrs_g' \(did you mean 'panstars_g'\?\)"
-    ):
+    with pytest.raises(InputError, match=r"no column 'parallax'.*, 'panstarrs_g' \(did you mean 'panstars_g'\?\)"):
         fit(changed)
 
 

@@ -88,9 +88,7 @@ def test_an_error_that_passes_costs_nothing(tmp_path):
 
 
 def test_an_error_that_stays_is_a_bug_that_names_the_part(tmp_path):
-    with pytest.raises(
-        PartFailed, match=r"part 1 of 10 rows failed: ArithmeticError: the stage has a bug"
-    ) as caught:
+    with pytest.raises(PartFailed, match=r"part 1 of 10 rows failed: ArithmeticError: the stage has a bug") as caught:
         do_work(tmp_path, raise_at_failing_id)
     assert caught.value.exit_code == 1
 
@@ -113,9 +111,7 @@ def test_a_part_whose_worker_dies_tells_the_remedy(tmp_path):
                 return Finished(finished.key, None, WorkerDied("its worker died 4 times"))
             return finished
 
-    with pytest.raises(
-        PartFailed, match=r"worker died 4 times; if memory ran out, raise compute\.memory_per_worker"
-    ):
+    with pytest.raises(PartFailed, match=r"worker died 4 times; if memory ran out, raise compute\.memory_per_worker"):
         do_work(tmp_path, executor=Deadly())
 
 

@@ -13,7 +13,7 @@ from starkiln.tables.source import Source
 STARS_PER_SECOND = 200.0
 """Stars that one worker fits in a second: an assumption for the estimate of time, not a promise."""
 
-DRIVER_BYTES = 500e6
+DRIVER_BYTES = 700e6
 """About what the driver takes, whatever the number of rows."""
 
 STRING_BYTES = 16

@@ -135,10 +135,10 @@ def _collect(parts: Path, table: str, shelf: int, numbers: list[int], buckets: B
 
 
 def _index_table(records: np.ndarray, names: list[Shelf], rows_per_file: int) -> pa.Table:
-    file_number, row = np.divmod(records["row"], rows_per_file)
-    file = [
-        _file_name(names[shelf], number) for shelf, number in zip(records["shelf"], file_number, strict=True)
-    ]
+    number, row = np.divmod(records["row"], rows_per_file)
+    places, which = np.unique(np.stack([records["shelf"], number]), axis=1, return_inverse=True)
+    paths = [_file_name(names[shelf], number) for shelf, number in places.T]
+    file = pa.DictionaryArray.from_arrays(which.astype(np.int32), paths).cast(pa.string())
     return pa.table(
         {"id_hash": records["id_hash"], "row_hash": records["row_hash"], "file": file, "row": row},
         schema=index_schema(),

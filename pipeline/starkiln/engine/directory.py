@@ -42,8 +42,7 @@ def hold(run_dir: Path) -> Iterator[None]:
         raise DirectoryBusy(f"{run_dir} is in use by another run{_holder(run_dir)}; wait for it") from None
     except (OSError, NotImplementedError) as error:
         raise EnvironmentTrouble(
-            f"cannot use {run_dir} as the run directory ({_reason(error)}): "
-            "set run.output to a folder you can write to"
+            f"cannot use {run_dir} as the run directory ({_reason(error)}): set run.output to a folder you can write to"
         ) from error
     try:
         holder = {

@@ -134,9 +134,7 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
     from distributed import Client, LocalCluster
     from distributed.security import Security
 
-    one_thread = dict.fromkeys(
-        ("OMP_NUM_THREADS", "MKL_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS"), "1"
-    )
+    one_thread = dict.fromkeys(("OMP_NUM_THREADS", "MKL_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS"), "1")
     options = {
         "distributed.scheduler.allowed-failures": WORKER_DEATHS_ALLOWED,
         "distributed.nanny.pre-spawn-environ": {**one_thread, "MALLOC_TRIM_THRESHOLD_": "65536"},

@@ -138,8 +138,7 @@ def make_plan(
         between_batches(batch.read)
     if not selected.sum():
         raise InputError(
-            f"input.where and input.only leave none of the {starts[-1]} rows of {settings.input.tables}: "
-            "loosen them"
+            f"input.where and input.only leave none of the {starts[-1]} rows of {settings.input.tables}: loosen them"
         )
     duplicates = 0
     (scratch / "marks").mkdir()

@@ -94,9 +94,7 @@ def run(path: str | Path) -> RunResult:
         return RunResult(error.exit_code, {}, None, str(error))
 
 
-def run_settings(
-    settings: Settings, *, progress: Progress | None = None, stages: Stages | None = None
-) -> RunResult:
+def run_settings(settings: Settings, *, progress: Progress | None = None, stages: Stages | None = None) -> RunResult:
     """Do a run, and publish its catalogue as a new generation of the run directory.
 
     Parameters
@@ -243,9 +241,7 @@ class _Run:
         counts, code = facts["counts"], facts["exit_code"]
         return RunResult(code, counts, published, _summary(settings.run.output, counts, source))
 
-    def _work(
-        self, source: Source, model: Any, plan: Plan, workers: int, scratch: Path, partial: Path
-    ) -> int:
+    def _work(self, source: Source, model: Any, plan: Plan, workers: int, scratch: Path, partial: Path) -> int:
         """Do every part, and return how many workers did."""
         parts = partial / "parts"
         tables = ["catalogue", "rejected", "index"] + ["draws"] * bool(self._settings.sampling.keep_draws)

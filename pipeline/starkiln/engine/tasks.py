@@ -173,9 +173,7 @@ def fit_part(job_path: Path, part: Part) -> Fitted:
     started = time.perf_counter()
     tables = process_rows(job, table)
     processed = time.perf_counter()
-    written = {
-        name: write_part(made, part_path(job.parts, name, part.number)) for name, made in tables.items()
-    }
+    written = {name: write_part(made, part_path(job.parts, name, part.number)) for name, made in tables.items()}
     finished = time.perf_counter()
     summary = Fitted(
         number=part.number,
@@ -216,9 +214,7 @@ def index_rows(table: pa.Table, catalogue: pa.Table, rejected: pa.Table, setting
     kept = np.ones(table.num_rows, bool)
     kept[_places(table, rejected)] = False
     if kept.sum() != catalogue.num_rows or table.num_rows != catalogue.num_rows + rejected.num_rows:
-        raise RuntimeError(
-            f"{table.num_rows} rows went in, {catalogue.num_rows} + {rejected.num_rows} came out"
-        )
+        raise RuntimeError(f"{table.num_rows} rows went in, {catalogue.num_rows} + {rejected.num_rows} came out")
     hashes, has_id = id_hashes(table[settings.input.id])
     listed = has_id & (table["_duplicate"].to_numpy() != 2)
     row = np.where(kept, np.cumsum(kept), np.cumsum(~kept)) - 1
@@ -235,9 +231,7 @@ def index_rows(table: pa.Table, catalogue: pa.Table, rejected: pa.Table, setting
 
 def _places(table: pa.Table, rejected: pa.Table) -> list[int]:
     """Return the rows of the cut table that were rejected, found by input file and input row."""
-    place = {
-        key: row for row, key in enumerate(zip(*_origins(table, "_input_file", "_input_row"), strict=True))
-    }
+    place = {key: row for row, key in enumerate(zip(*_origins(table, "_input_file", "_input_row"), strict=True))}
     return [place[key] for key in zip(*_origins(rejected, "input_file", "input_row"), strict=True)]
 
 
