@@ -175,3 +175,4 @@ def test_the_log_of_a_failed_run_tells_why(survey):
     end = json.loads(log.read_text().splitlines()[-1])
     assert (end["event"], end["exit_code"]) == ("end", 3)
     assert "leave none of the 40 rows" in end["message"]
+    assert "traceback" not in end

@@ -23,11 +23,12 @@ if __name__ == "__main__":
     run.fitting_stages = lambda: stages(take_long)
     cli.main()
 """
+STOPPED = "starkiln: stopped by {}: nothing was published; run again to start over\n"
 
 
 @pytest.fixture
-def busy_run(tmp_path):
-    """A run in a process group of its own, whose two workers are in the middle of a part."""
+def started_run(tmp_path):
+    """A run with two workers, just started, in a process group of its own."""
     folder = write(tmp_path / "survey", a=stars(100))
     settings = settings_for(folder, tmp_path / "run", compute__workers=2, compute__rows_per_part=10)
     (tmp_path / "run.toml").write_text(dump_toml(settings))
@@ -41,14 +42,36 @@ def busy_run(tmp_path):
         env=os.environ | {"PYTHONPATH": os.pathsep.join(sys.path)},
     )
     with process:
-        deadline = time.monotonic() + 60
-        while not list((tmp_path / "run").glob("scratch/*.arrow")):
-            assert process.poll() is None, process.stderr.read()
-            assert time.monotonic() < deadline
-            time.sleep(0.1)
-        time.sleep(1)
         yield process
         process.kill()
+
+
+def wait_until(process, happens):
+    deadline = time.monotonic() + 60
+    while not happens():
+        assert process.poll() is None, process.stderr.read()
+        assert time.monotonic() < deadline
+        time.sleep(0.02)
+
+
+@pytest.fixture
+def busy_run(started_run, tmp_path):
+    """The run when both workers are in the middle of a part."""
+    wait_until(started_run, lambda: list((tmp_path / "run").glob("scratch/*.arrow")))
+    time.sleep(1)
+    return started_run
+
+
+@pytest.mark.parametrize("delay", [0.1, 0.3])
+def test_ctrl_c_while_workers_start_makes_no_noise(started_run, delay):
+    process = psutil.Process(started_run.pid)
+    # The first child is Python's resource tracker.
+    wait_until(started_run, lambda: len(process.children()) >= 2)
+    time.sleep(delay)
+    os.killpg(started_run.pid, signal.SIGINT)
+    out, err = started_run.communicate(timeout=20)
+    assert (started_run.returncode, out) == (5, "")
+    assert err == STOPPED.format("SIGINT")
 
 
 @pytest.mark.parametrize(
@@ -62,12 +85,8 @@ def test_a_stopped_run_leaves_nothing_running_and_nothing_behind(busy_run, tmp_p
     else:
         busy_run.send_signal(number)
     out, err = busy_run.communicate(timeout=20)
+    assert (out, err) == ("", STOPPED.format(signal.Signals(number).name))
     assert busy_run.returncode == 5
-    name = signal.Signals(number).name
-    assert (out, err) == (
-        "",
-        f"starkiln: stopped by {name}: nothing was published; run again to start over\n",
-    )
     psutil.wait_procs(children, timeout=5)
     assert [child for child in children if child.is_running() and child.status() != psutil.STATUS_ZOMBIE] == []
     assert sorted(path.name for path in (tmp_path / "run").iterdir()) == ["generations", "lock", "logs"]

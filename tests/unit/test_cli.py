@@ -1,3 +1,4 @@
+import json
 import os
 import signal
 import subprocess
@@ -9,7 +10,7 @@ import pytest
 from typer.testing import CliRunner
 
 import starkiln
-from fake_stages import stages
+from fake_stages import raise_at_failing_id, stages
 from small_survey import settings_for, stars
 from starkiln import cli
 from starkiln.engine import run as engine_run
@@ -113,6 +114,17 @@ def test_a_bug_is_one_line_with_a_hint_and_code_1(command, config, monkeypatch):
         "starkiln: unexpected TypeError: 'NoneType' object is not callable "
         "(a bug, please report it; --debug shows where)\n"
     )
+
+
+def test_the_log_of_a_bug_has_the_traceback(command, config, monkeypatch, tmp_path):
+    monkeypatch.setattr(engine_run, "fitting_stages", lambda: stages(raise_at_failing_id))
+    shown = command("run", config)
+    assert shown.exit_code == 1
+    assert "part 0 of 20 rows failed: ArithmeticError: the stage has a bug" in shown.stderr
+    (log,) = (tmp_path / "run" / "logs").iterdir()
+    end = json.loads(log.read_text().splitlines()[-1])
+    assert end["exit_code"] == 1
+    assert "in raise_at_failing_id" in end["traceback"]
 
 
 def test_a_path_without_a_catalogue_is_an_error_of_the_command_line(command, tmp_path):

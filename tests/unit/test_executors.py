@@ -1,6 +1,7 @@
 import os
 import signal
 import time
+import traceback
 
 import psutil
 import pytest
@@ -62,6 +63,7 @@ def test_a_cluster_hands_over_results_and_errors(cluster):
     cluster.submit("b", fail, "no")
     finished = next_of(cluster)
     assert (finished.key, type(finished.error), str(finished.error)) == ("b", ArithmeticError, "no")
+    assert "raise ArithmeticError(text)" in "".join(traceback.format_exception(finished.error))
 
 
 def test_a_task_that_kills_its_workers_ends_and_others_go_on(cluster):
@@ -93,7 +95,7 @@ def test_closing_in_the_middle_of_a_task_is_quick_and_leaves_no_worker(tmp_path)
     started = time.monotonic()
     with pytest.raises(KeyError):
         leave_in_the_middle_of_a_task(tmp_path)
-    assert time.monotonic() - started < 10
+    assert time.monotonic() - started < 4.5
     left = set(psutil.Process().children(recursive=True)) - before
     assert [process for process in left if process.status() != psutil.STATUS_ZOMBIE] == []
 

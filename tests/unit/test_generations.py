@@ -1,4 +1,6 @@
 import os
+import threading
+from concurrent.futures import ThreadPoolExecutor
 
 import pytest
 
@@ -40,6 +42,28 @@ def test_only_the_newest_generations_are_kept(tmp_path, keep):
     for text in ("one", "two", "three", "four"):
         publish(generations, text, keep)
     assert generations.numbers() == [1, 2, 3, 4][-keep:]
+
+
+def test_there_is_a_catalogue_at_every_moment(tmp_path):
+    generations = Generations(tmp_path)
+    publish(generations, "0")
+    done, missing, seen = threading.Event(), [], set()
+
+    def keep_reading():
+        while not done.is_set():
+            try:
+                seen.add(os.readlink(tmp_path / "current"))
+            except FileNotFoundError as error:
+                missing.append(error)
+
+    with ThreadPoolExecutor(1) as threads:
+        reader = threads.submit(keep_reading)
+        for number in range(100):
+            publish(generations, str(number))
+        done.set()
+        reader.result()
+    assert missing == []
+    assert len(seen) > 10
 
 
 def test_what_an_unfinished_run_left_is_removed(tmp_path):

@@ -28,7 +28,7 @@ def test_without_a_terminal_there_is_a_line_a_minute(clock, capsys):
     assert out == ""
     lines = err.splitlines()
     assert len(lines) == 4
-    assert lines[1] == "starkiln: fitting: 40 of 100 rows, 0.5 a second, 2 minutes left"
+    assert lines[1] == "starkiln: fitting: 40 of 100 rows, 0.5 a second, 2.0 minutes left"
 
 
 def test_a_step_without_a_row_done_is_no_news(clock, capsys):

@@ -9,7 +9,7 @@ import queue
 import signal
 from collections import deque
 from collections.abc import Callable, Iterator
-from contextlib import ExitStack, contextmanager
+from contextlib import ExitStack, contextmanager, suppress
 from dataclasses import dataclass
 from multiprocessing import resource_tracker
 from pathlib import Path
@@ -107,6 +107,8 @@ class ClusterExecutor:
         result = None if error is not None else future.result()
         if isinstance(error, self._killed):
             error = WorkerDied(f"its worker died {WORKER_DEATHS_ALLOWED + 1} times")
+        elif error is not None:
+            error = error.with_traceback(future.traceback())
         # An erred future stays in the scheduler until it is released.
         future.release()
         return Finished(future.key, result, error)
@@ -167,7 +169,9 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
         try:
             yield ClusterExecutor(client, workers)
         except BaseException:
-            _kill_workers(cluster)
+            # Workers may be dying already, of the same signal that ends this block.
+            with suppress(Exception):
+                _kill_workers(cluster)
             raise
 
 

@@ -53,7 +53,7 @@ class Lines:
             left = (self._rows - self._done) / rate / 60
             print(
                 f"starkiln: {self._what}: {self._done} of {self._rows} rows, {rate:.3g} a second, "
-                f"{left:.0f} minutes left",
+                f"{left:.1f} minutes left",
                 file=sys.stderr,
                 flush=True,
             )

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import time
+import traceback
 from collections import Counter
 from collections.abc import Callable, Iterator
 from contextlib import AbstractContextManager, contextmanager, nullcontext
@@ -81,7 +82,8 @@ class RunResult:
 def run(path: str | Path) -> RunResult:
     """Do the run that a settings file describes, and return how it ended; the process goes on.
 
-    What a user can cause is told by the result; an error that is a bug is raised.
+    What a user can cause is told by the result; an error that is a bug is raised. Workers are new processes that
+    import the calling script, so a script calls this below ``if __name__ == "__main__":``.
 
     Parameters
     ----------
@@ -120,7 +122,7 @@ def run_settings(settings: Settings, *, progress: Progress | None = None, stages
             one_run = _Run(settings, stages or fitting_stages(), progress or Silence(), stop, log, start)
             try:
                 result = one_run.do()
-            except StarkilnError:
+            except Exception:
                 # After a signal to the whole process group, workers that died are not the news.
                 stop.check()
                 raise
@@ -142,9 +144,18 @@ def _end_logged(log: EventLog) -> Iterator[None]:
     try:
         yield
     except BaseException as error:
-        code = 74 if isinstance(error, OSError) else getattr(error, "exit_code", 1)
-        log.write("end", exit_code=code, message=f"{type(error).__name__}: {error}")
+        foreseen = isinstance(error, StarkilnError) and error.__cause__ is None
+        details = {} if foreseen else {"traceback": "".join(traceback.format_exception(error))}
+        log.write("end", exit_code=_exit_code(error), message=str(error) or type(error).__name__, **details)
         raise
+
+
+def _exit_code(error: BaseException) -> int:
+    if isinstance(error, StarkilnError):
+        return error.exit_code
+    if isinstance(error, KeyboardInterrupt):
+        return 130
+    return EnvironmentTrouble.exit_code if isinstance(error, OSError) else 1
 
 
 @dataclass
