@@ -38,7 +38,7 @@ FLAGS: tuple[Flag, ...] = (
     Flag(7, "extinction_at_bound", "More than 2.5 % of the posterior lies within 2 % of the largest A_V."),
     Flag(8, "radius_at_bound", "More than 2.5 % of the posterior lies within 5 % of a radius bound."),
     Flag(9, "no_detection", "Fewer than two bands above 3 sigma: temperature, radius and luminosity are null."),
-    Flag(10, "poor_fit", "The posterior predictive p-value is below 0.001."),
+    Flag(10, "poor_fit", "The posterior predictive p-value, which allows for outlying bands, is below 0.001."),
     Flag(12, "band_outlier", "At least one band has an outlier probability above 0.9."),
     Flag(14, "infrared_excess", "A band longward of 3 micron lies more than 3 sigma above the model."),
     Flag(15, "ultraviolet_excess", "A band shortward of 0.32 micron lies more than 3 sigma above the model."),

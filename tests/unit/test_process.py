@@ -5,8 +5,8 @@ from dataclasses import replace
 import numpy as np
 import pyarrow as pa
 import pytest
-from simulated import make_settings, simulate
 
+from simulated import make_settings, simulate
 from starkiln.flags import BY_NAME
 from starkiln.inference import ensemble
 from starkiln.stages import fit as fit_stage

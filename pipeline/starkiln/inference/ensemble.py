@@ -26,8 +26,8 @@ from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, log_post
 from starkiln.inference.start import Modes, cholesky, find_modes
 from starkiln.inference.streams import uniform
 
-BURN_IN = (24, 16)  # steps before each learning of the proposal
-INDEPENDENCE = (0.5, 0.7, 0.85)  # share of independence steps in each stretch of burn-in, and after
+BURN_IN = (16, 16, 16, 24)
+INDEPENDENCE = (0.4, 0.5, 0.6, 0.7, 0.85)
 MIN_STEPS = 60
 MIN_TAUS = 50.0
 TAIL_SHARE = 0.4
@@ -63,7 +63,7 @@ class Draws(NamedTuple):
     accept_frac
         (K,).
     convergence, converged
-        Diagnostics and whether the stopping rule was met without doubt.
+        Diagnostics, and whether the stopping rule was met.
     """
 
     stars: NDArray[np.int64]
@@ -108,7 +108,7 @@ def sample_block(
     run = _Run(block, grid, prior, streams, walkers, *_first_walkers(block, grid, prior, modes, streams, walkers))
     for length, share in zip(BURN_IN, INDEPENDENCE, strict=False):
         window, _ = run.advance(length, share)
-        run.proposal = learn_proposal(window[length // 2 :], run.n_stars, prior.fit_av)
+        run.proposal = learn_proposal(window[length // 4 :], run.n_stars, prior.fit_av)
     run.forget()
     waiting = [(run, stopping.lengths())]
     while waiting:
@@ -280,8 +280,6 @@ class _Run:
         if not len(done):
             return None, self
         leaving = candidates[done]
-        some = convergence.take(done)
-        trusted = enough[done] & ~some.stray_walker & (some.rhat <= RHAT_LIMIT).all(axis=1)
         log_prob = self.chain_log_prob.reshape(n_steps, self.n_stars, self.walkers)[:, leaving]
         draws = Draws(
             stars=self.stars[leaving],
@@ -289,8 +287,8 @@ class _Run:
             log_prob=np.ascontiguousarray(log_prob.transpose(1, 0, 2)).reshape(len(leaving), -1),
             n_steps=n_steps,
             accept_frac=self.accepted[leaving] / (n_steps * self.walkers),
-            convergence=some,
-            converged=trusted,
+            convergence=convergence.take(done),
+            converged=enough[done],
         )
         return draws, self.taking(np.setdiff1d(np.arange(self.n_stars), leaving))
 
@@ -319,6 +317,8 @@ def _long_enough(convergence: Convergence, n_steps: int, stopping: Stopping) -> 
         & (convergence.ess_tail >= TAIL_SHARE * target).all(axis=1)
         & (n_steps >= MIN_TAUS * convergence.autocorr_steps).all(axis=1)
         & (n_steps >= MIN_STEPS)
+        & (convergence.rhat <= RHAT_LIMIT).all(axis=1)
+        & ~convergence.stray_walker
     )
     return np.asarray(enough)
 

@@ -20,6 +20,7 @@ from starkiln.inference.streams import below, fill_normal, fill_uniform, uniform
 
 TAIL = 4.0  # degrees of freedom of the learnt proposal: heavier tails than any posterior here
 INFLATION = 1.3
+WIDENING = 6.0
 
 
 class Proposal(NamedTuple):
@@ -138,8 +139,15 @@ def learn_proposal(window: NDArray[np.float64], n_stars: int, fit_av: bool) -> P
 
 @kernel
 def parabola(x):
-    """Return the curved term at a standardised first coordinate; flat beyond 3, where nothing was learnt."""
-    return min(x * x, 9.0) - 1.0
+    """Return the curved term at a standardised first coordinate; straight on beyond 3, where little was learnt."""
+    near = min(abs(x), 3.0)
+    return near * (2.0 * abs(x) - near) - 1.0
+
+
+@kernel
+def spread2(x):
+    """Return by how much the variance of the others grows at a standardised first coordinate."""
+    return 1.0 + x * x / WIDENING
 
 
 @kernel
@@ -206,7 +214,7 @@ def _learn_others(samples, centre, factor, bend):
     for k in range(1, ndim):
         for m in range(1, k + 1):
             for i in range(n):
-                residual[k - 1, m - 1] += samples[k, i] * samples[m, i]
+                residual[k - 1, m - 1] += samples[k, i] * samples[m, i] / spread2(samples[0, i])
     factor[1:, 1:] = cholesky(residual * (INFLATION / n))
 
 
@@ -253,9 +261,11 @@ def draw_independent(proposal, star, stream, scratch, out):
         axis = proposal.axes[k]
         for i in range(lanes):
             x[k, i] = scratch.normals[k, i] * scratch.scale[1, i]
-            value = centre[k] + bend[k] * parabola(x[0, i])
-            for m in range(k + 1):
+            value = 0.0
+            for m in range(1, k + 1):
                 value += factor[k, m] * x[m, i]
+            value = value * np.sqrt(spread2(x[0, i])) + factor[k, 0] * x[0, i] + bend[k] * parabola(x[0, i])
+            value += centre[k]
             out[i, axis] = value
 
 
@@ -268,8 +278,9 @@ def standardise(proposal, star, coords, x):
         for i in range(x.shape[1]):
             value = coords[i, axis] - centre[k]
             if k > 0:
-                value -= bend[k] * parabola(x[0, i])
-            for m in range(k):
+                value -= factor[k, 0] * x[0, i] + bend[k] * parabola(x[0, i])
+                value /= np.sqrt(spread2(x[0, i]))
+            for m in range(1, k):
                 value -= factor[k, m] * x[m, i]
             x[k, i] = value / factor[k, k]
 
@@ -278,6 +289,7 @@ def standardise(proposal, star, coords, x):
 def add_log_independent(proposal, star, x, sign, out):
     """Add ``sign`` times the log density of the proposal, less a constant, at standardised coordinates."""
     ndim, lanes = x.shape
+    # A draw and its mirror image share the others' part: they are placed by where the first coordinate ends.
     mirror = -2.0 * proposal.centre[star, 0] / proposal.factor[star, 0, 0]
     for i in range(lanes):
         p = 1.0 / (1.0 + x[0, i] * x[0, i] / TAIL)
@@ -289,7 +301,8 @@ def add_log_independent(proposal, star, x, sign, out):
         distance2 = 0.0
         for k in range(1, ndim):
             distance2 += x[k, i] * x[k, i]
-        out[i] += sign * (log(density) - 0.5 * (TAIL + ndim - 1) * log(1.0 + distance2 / TAIL))
+        log_others = (TAIL + ndim - 1) * log(1.0 + distance2 / TAIL) + (ndim - 1) * log(spread2(x[0, i]))
+        out[i] += sign * (log(density) - 0.5 * log_others)
 
 
 @kernel

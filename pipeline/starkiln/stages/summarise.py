@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import gammaincc
+from scipy.special import binom, gammaincc
 
 from starkiln.flags import BY_NAME
 from starkiln.inference.arithmetic import exp_array
@@ -29,6 +29,7 @@ DETECTION_SIGMA = 3.0
 FEW_BANDS = 5
 POOR_PARALLAX = 5.0
 POOR_FIT = 0.001
+MOST_OUTLIERS = 6
 LEAST_KEPT_SHARE = 0.1
 OUTLIER = 0.9
 EXCESS_SIGMA = 3.0
@@ -143,8 +144,7 @@ def _agreement(fitted: Fitted, derived: Derived, model: FitModel, settings: Sett
     mode = compare(mode_points(fitted, derived, model), fitted.block, model.grid, model.prior, n_bands)
     drawn: Agreement = compare(_thinned(fitted, derived), fitted.block, model.grid, model.prior, n_bands)
     measured = _measured_bands(fitted.block)
-    with np.errstate(invalid="ignore"):
-        chance = gammaincc(np.maximum(measured, 1)[:, None] / 2.0, drawn.chi2 / 2.0)
+    chance = predictive_chance(drawn.chi2, measured, model.prior)
     columns: Columns = {
         "chi2": mode.chi2[:, 0],
         "ppp_value": np.where(measured > 0, means(chance), np.nan),
@@ -153,6 +153,31 @@ def _agreement(fitted: Fitted, derived: Derived, model: FitModel, settings: Sett
         columns[f"residual_{label}"] = mode.residual[:, place]
         columns[f"outlier_{label}"] = drawn.outlier[:, place]
     return columns
+
+
+def predictive_chance(chi2: NDArray[np.float64], n_bands: NDArray[np.int64], prior: Prior) -> NDArray[np.float64]:
+    """Return the chance of a chi squared at least as large under the likelihood, outliers included.
+
+    Parameters
+    ----------
+    chi2
+        (K, L), each star's at L draws.
+    n_bands
+        (K,), measured bands.
+
+    Notes
+    -----
+    Without outliers this is the chi-square distribution's own. With them the number k of outlying bands is binomial;
+    for k > 0 their w^2 chi2_k is taken to outweigh the others, which count by their mean n - k.
+    """
+    n = n_bands[:, None].astype(np.float64)
+    none = gammaincc(np.maximum(n, 1.0) / 2.0, chi2 / 2.0)
+    total = (1.0 - prior.outlier_fraction) ** n * none
+    for k in range(1, MOST_OUTLIERS + 1):
+        rest = np.maximum(chi2 - (n - k), 0.0) / prior.outlier_width**2
+        weight = binom(n, k) * prior.outlier_fraction**k * (1.0 - prior.outlier_fraction) ** np.maximum(n - k, 0.0)
+        total += weight * gammaincc(k / 2.0, rest / 2.0)
+    return np.asarray(total)
 
 
 def _measured_bands(block: Block) -> NDArray[np.int64]:
