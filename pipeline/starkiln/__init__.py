@@ -11,9 +11,10 @@ _HOMES = {
     "RunResult": "starkiln.engine.run",
     "read": "starkiln.tables.read",
     "units": "starkiln.tables.read",
+    "descriptions": "starkiln.tables.read",
 }
 
-__all__ = ["RunResult", "__version__", "fit_table", "read", "run", "units"]
+__all__ = ["RunResult", "__version__", "descriptions", "fit_table", "read", "run", "units"]
 
 
 def __getattr__(name: str) -> Any:
