@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import os
+import shutil
 import tempfile
 from collections.abc import Callable
 from pathlib import Path
@@ -11,6 +12,7 @@ from typing import Any
 
 import numba
 from numba.core import config
+from numba.core.caching import FunctionCache
 
 
 def _source_hash() -> str:
@@ -23,35 +25,71 @@ def _source_hash() -> str:
 
 
 def _cache_folder() -> Path | None:
-    """Return a writable folder for compiled kernels, or None where there is none."""
-    candidates = [os.environ.get("STARKILN_KERNEL_CACHE"), os.environ.get("XDG_CACHE_HOME")]
+    """Return a private, writable folder for compiled kernels, or None where there is none."""
+    bases = [os.environ.get("STARKILN_KERNEL_CACHE"), os.environ.get("XDG_CACHE_HOME")]
     home = os.path.expanduser("~")
     if home != "~":
-        candidates.append(os.path.join(home, ".cache"))
-    for base in [*candidates, os.path.join(tempfile.gettempdir(), f"starkiln-{os.getuid()}")]:
-        if not base:
-            continue
-        folder = Path(base) / "starkiln" / f"kernels-{_source_hash()}"
+        bases.append(os.path.join(home, ".cache"))
+    parents = [Path(base) / "starkiln" for base in bases if base]
+    parents.append(Path(tempfile.gettempdir()) / f"starkiln-{os.getuid()}")
+    for parent in parents:
+        folder = parent / f"kernels-{_source_hash()}"
         try:
-            folder.mkdir(parents=True, exist_ok=True, mode=0o700)
+            parent.mkdir(parents=True, exist_ok=True, mode=0o700)
+            folder.mkdir(exist_ok=True, mode=0o700)
+            tempfile.TemporaryFile(dir=folder).close()
         except OSError:
             continue
-        # Compiled code is run without question, so a folder of somebody else's is never used.
-        if os.access(folder, os.W_OK) and folder.stat().st_uid == os.getuid():
+        if _is_private(parent) and _is_private(folder):
             return folder
     return None
+
+
+def _is_private(folder: Path) -> bool:
+    # Compiled code is run without question, so nobody else may be able to put any there.
+    status = folder.stat()
+    return status.st_uid == os.getuid() and not status.st_mode & 0o002
 
 
 CACHE_FOLDER = _cache_folder()
 if CACHE_FOLDER is not None:
     config.CACHE_DIR = str(CACHE_FOLDER)  # type: ignore[attr-defined]
 
+_KERNELS: list[Any] = []
+
+
+class _MendingCache(FunctionCache):
+    """Keeps machine code in files, starts over where they are damaged, and does without where the disk is full."""
+
+    def load_overload(self, sig: Any, target_context: Any) -> Any:
+        try:
+            return super().load_overload(sig, target_context)
+        except Exception:  # a damaged pickle raises anything
+            shutil.rmtree(self.cache_path, ignore_errors=True)
+            return None
+
+    def save_overload(self, sig: Any, data: Any) -> None:
+        try:
+            super().save_overload(sig, data)
+        except OSError:
+            return
+
 
 def kernel(function: Callable[..., Any]) -> Any:
     """Compile a function to machine code without the interpreter lock and without fast-math."""
-    return numba.njit(cache=CACHE_FOLDER is not None, nogil=True, error_model="numpy")(function)
+    dispatcher: Any = numba.njit(nogil=True, error_model="numpy")(function)
+    if CACHE_FOLDER is not None:
+        # What njit(cache=True) does, with a cache of our own.
+        dispatcher._cache = _MendingCache(function)
+    _KERNELS.append(dispatcher)
+    return dispatcher
 
 
 def inlined(function: Callable[..., Any]) -> Any:
     """Compile a small helper that kernels inline; it has no cache entry of its own."""
     return numba.njit(nogil=True, error_model="numpy", inline="always")(function)
+
+
+def compilations() -> int:
+    """Return how many times this process has compiled a kernel because it found no machine code of it."""
+    return sum(sum(each.stats.cache_misses.values()) for each in _KERNELS)
