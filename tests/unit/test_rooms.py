@@ -14,6 +14,7 @@ BELOW = {
     "flags": set(),
     "settings": {"errors"},
     "physics": {"errors"},
+    "calibration": {"errors", "physics"},
     "inference": {"errors", "flags", "physics"},
     "tables": {"errors", "flags", "settings"},
     "stages": {"errors", "flags", "settings", "tables", "physics", "inference"},
@@ -86,7 +87,7 @@ def test_only_the_engine_imports_dask(module):
     assert not found or room_of(module) == "engine"
 
 
-@modules("physics", "inference")
+@modules("physics", "calibration", "inference")
 def test_numbers_know_no_tables(module):
     assert not libraries(imports(ast.parse(module.read_text()), module)) & TABLE_LIBRARIES
 

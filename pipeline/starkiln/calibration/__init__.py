@@ -1,0 +1,1 @@
+"""Learning departures from reference stars."""
