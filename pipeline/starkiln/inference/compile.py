@@ -93,3 +93,8 @@ def inlined(function: Callable[..., Any]) -> Any:
 def compilations() -> int:
     """Return how many times this process has compiled a kernel because it found no machine code of it."""
     return sum(sum(each.stats.cache_misses.values()) for each in _KERNELS)
+
+
+def signatures() -> dict[str, list[str]]:
+    """Return the types that each kernel is compiled for, or loaded, in this process, by the kernel's name."""
+    return {f"{each.__module__}.{each.__name__}": [str(kind) for kind in each.signatures] for each in _KERNELS}

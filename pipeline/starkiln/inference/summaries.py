@@ -23,7 +23,7 @@ def quantiles(draws: NDArray[np.float64]) -> NDArray[np.float64]:
 def correlations(a: NDArray[np.float64], b: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return the Pearson correlation (K,) of draws (K, N); NaN where either does not vary."""
     out = np.empty(len(a))
-    _correlate(a, b, out)
+    _correlate(np.ascontiguousarray(a), np.ascontiguousarray(b), out)
     return out
 
 

@@ -103,7 +103,7 @@ def _correlations(derived: Derived, no_detection: NDArray[np.bool_]) -> Columns:
     pairs = {
         "corr_teff_radius": correlations(derived.ln_teff, derived.ln_radius),
         "corr_teff_lum": correlations(derived.ln_teff, derived.ln_lum),
-        "corr_teff_av": correlations(derived.ln_teff, np.ascontiguousarray(derived.av)),
+        "corr_teff_av": correlations(derived.ln_teff, derived.av),
         "corr_radius_lum": correlations(derived.ln_radius, derived.ln_lum),
     }
     return {name: np.where(no_detection, np.nan, values) for name, values in pairs.items()}
