@@ -9,7 +9,7 @@ from starkiln.stages.summarise import predictive_chance
 
 
 def prior(fraction):
-    return Prior(0.0, 1.0, 0.0, 1.0, 6.0, True, fraction, 10.0)
+    return Prior(0.0, 1.0, 0.0, 1.0, 6.0, True, fraction, 10.0, False, -7.0)
 
 
 @pytest.mark.parametrize("n", [3, 8, 15])

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import exp
 from starkiln.inference.compile import kernel
-from starkiln.inference.posterior import Block, Grid, Prior, spline_value, spline_weights
+from starkiln.inference.posterior import Block, Grid, Prior, band_model, make_lanes, spline_weights
 
 
 class Agreement(NamedTuple):
@@ -31,7 +31,7 @@ class Agreement(NamedTuple):
 
 
 def compare(points: NDArray[np.float64], block: Block, grid: Grid, prior: Prior, n_bands: int) -> Agreement:
-    """Compare stars with points (S, 3, L) of ln T, ln Omega and A_V."""
+    """Compare stars with points (S, 3 + K or one more, L): ln T, ln Omega, A_V, the factors, ln jitter if fitted."""
     n_stars, _, n_points = points.shape
     result = Agreement(
         np.empty((n_stars, n_points)),
@@ -45,23 +45,26 @@ def compare(points: NDArray[np.float64], block: Block, grid: Grid, prior: Prior,
 @kernel
 def _compare(points, block, grid, prior, result):
     n_points = points.shape[2]
-    row_weight = np.empty((4, n_points))
-    column_weight = np.empty((4, n_points))
-    corner = np.empty(n_points, dtype=np.uint64)
-    flux = np.empty(n_points)
+    n_factors = grid.loading.shape[0]
+    lanes = make_lanes(n_points, n_factors)
     f = prior.outlier_fraction
     wide = 1.0 / (prior.outlier_width * prior.outlier_width)
     for star in range(points.shape[0]):
         result.chi2[star] = 0.0
-        spline_weights(points[star, 0], points[star, 2], grid, row_weight, column_weight, corner)
+        spline_weights(points[star, 0], points[star, 2], grid, lanes)
+        for i in range(n_points):
+            for k in range(n_factors):
+                lanes.z[k, i] = points[star, 3 + k, i]
+            if prior.fit_jitter:
+                lanes.jitter2[i] = exp(2.0 * points[star, 3 + n_factors, i])
         for j in range(block.n_bands[star]):
             band = block.band[star, j]
-            spline_value(grid, band, row_weight, column_weight, corner, flux)
+            band_model(grid, block, star, j, lanes)
             outlier = 0.0
             for i in range(n_points):
-                model = min(exp(flux[i] + points[star, 1, i]) * block.inverse_error[star, j], 1e30)
-                spread = block.floor[star, j] * model
-                pull = (block.scaled_flux[star, j] - model) / np.sqrt(1.0 + spread * spread)
+                model = min(exp(lanes.flux[i] + points[star, 1, i]) * block.inverse_error[star, j], 1e30)
+                sigma = np.sqrt(1.0 + lanes.spread2[i] * model * model)
+                pull = (block.scaled_flux[star, j] - model) / sigma
                 if i == 0:
                     result.residual[star, band] = pull
                 if not block.limit[star, j]:

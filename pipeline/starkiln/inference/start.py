@@ -14,12 +14,16 @@ from starkiln.inference.posterior import (
     Block,
     Grid,
     Prior,
+    band_model,
     log_posterior,
-    spline_value,
+    make_lanes,
+    n_parameters,
+    read_coords,
     spline_weights,
 )
 
 MAX_MODES = 3
+FIRST_LN_JITTER = -5.0
 LN_TEFF_STRIDE = 0.06
 AV_NODES = (0.0, 0.1, 0.3, 0.6, 1.0, 1.5, 2.25, 3.0, 4.0, 6.0, 9.0)
 
@@ -48,7 +52,7 @@ class Modes(NamedTuple):
 def find_modes(block: Block, grid: Grid, prior: Prior) -> Modes:
     """Find the separate peaks of every star's posterior."""
     n_stars = block.n_bands.size
-    ndim = 3 if prior.fit_av else 2
+    ndim = n_parameters(grid, prior)
     n_nodes = int(np.ceil((prior.ln_teff_max - prior.ln_teff_min) / LN_TEFF_STRIDE)) + 1
     ln_teff = np.linspace(prior.ln_teff_min, prior.ln_teff_max, n_nodes)
     av = np.array([a for a in AV_NODES if a <= prior.av_max]) if prior.fit_av else np.zeros(1)
@@ -93,8 +97,11 @@ def _search(block, grid, prior, ln_teff_nodes, av_nodes, modes):
                 break
             point[0] = exp(LN_HEAT_K - ln_teff_nodes[peak])
             point[1] = best_ln_omega[peak] + ln_teff_nodes[peak]
+            point[2:] = 0.0
             if prior.fit_av:
                 point[2] = best_av[peak]
+            if prior.fit_jitter:
+                point[ndim - 1] = max(FIRST_LN_JITTER, prior.ln_jitter_min)
             value = _climb(one, grid, prior, point, curvature)
             profile[peak] = np.nan
             if value > -np.inf:
@@ -115,6 +122,7 @@ def _one_star(block, star):
         block.av_inverse_variance[rows],
         block.av_rate[rows],
         block.av_fixed[rows],
+        block.factor_scale[rows],
         block.log_norm[rows],
     )
 
@@ -123,38 +131,44 @@ def _one_star(block, star):
 def _profile(one, grid, prior, ln_teff, av_nodes, profile, best_av, best_ln_omega):
     """Log-likelihood maximised over Omega (linear least squares) and A_V at every temperature node."""
     n = ln_teff.size
-    flux = np.empty(n)
+    n_factors = grid.loading.shape[0]
+    lanes = make_lanes(n, n_factors)
+    lanes_up = make_lanes(n, n_factors)
     av = np.empty(n)
-    sum_ff = 0.0
+    sum_ff = np.empty(n)
     sum_ft = np.empty(n)
     sum_tt = np.empty(n)
-    row_weight = np.empty((4, n))
-    column_weight = np.empty((4, n))
-    corner = np.empty(n, dtype=np.uint64)
     profile[:] = -np.inf
     for a in range(av_nodes.size):
         av[:] = av_nodes[a] if prior.fit_av else one.av_fixed[0]
-        spline_weights(ln_teff, av, grid, row_weight, column_weight, corner)
-        sum_ff = 0.0
+        spline_weights(ln_teff, av, grid, lanes)
+        spline_weights(ln_teff, av, grid, lanes_up)
+        sum_ff[:] = 0.0
         sum_ft[:] = 0.0
         sum_tt[:] = 1e-300
         for j in range(one.n_bands[0]):
             if one.limit[0, j]:
                 continue
-            spline_value(grid, one.band[0, j], row_weight, column_weight, corner, flux)
+            band_model(grid, one, 0, j, lanes)
+            for k in range(n_factors):
+                # Here the factors count as scatter of each band's own: one loading is the change for z = 1.
+                lanes_up.z[:] = 0.0
+                lanes_up.z[k] = 1.0
+                band_model(grid, one, 0, j, lanes_up)
+                for i in range(n):
+                    lanes.spread2[i] += (lanes_up.flux[i] - lanes.flux[i]) ** 2
             observed = one.scaled_flux[0, j]
-            spread = one.floor[0, j] * observed
-            weight = 1.0 / (1.0 + spread * spread)
-            sum_ff += weight * observed * observed
             for i in range(n):
-                template = exp(flux[i]) * one.inverse_error[0, j]
+                weight = 1.0 / (1.0 + lanes.spread2[i] * observed * observed)
+                template = exp(lanes.flux[i]) * one.inverse_error[0, j]
+                sum_ff[i] += weight * observed * observed
                 sum_ft[i] += weight * observed * template
                 sum_tt[i] += weight * template * template
         offset = av[0] - one.av_mean[0]
         log_prior = -0.5 * offset * offset * one.av_inverse_variance[0] - av[0] * one.av_rate[0]
         for i in range(n):
             projected = max(sum_ft[i], 0.0)
-            value = -0.5 * (sum_ff - projected * projected / sum_tt[i]) + log_prior
+            value = -0.5 * (sum_ff[i] - projected * projected / sum_tt[i]) + log_prior
             if value > profile[i]:
                 profile[i] = value
                 best_av[i] = av[0]
@@ -223,26 +237,36 @@ def _clamp(prior, point):
     point[1] = min(max(point[1], prior.ln_omega_min + ln_teff + 1e-9), prior.ln_omega_max + ln_teff - 1e-9)
     if prior.fit_av:
         point[2] = min(max(point[2], 0.0), prior.av_max)
+    if prior.fit_jitter:
+        last = point.size - 1
+        point[last] = min(max(point[last], prior.ln_jitter_min + 1e-9), -1e-9)
 
 
 @kernel
 def _slopes(one, grid, prior, point, gradient, curvature):
     """Write the gradient of the log density and its Gauss-Newton curvature, by differences of ln flux."""
     ndim = point.size
-    ln_teff = np.empty(3)
-    av = np.empty(3)
+    n_factors = grid.loading.shape[0]
+    first_z = 3 if prior.fit_av else 2
+    # Lane 0 is the point; lane 1 a step in ln T, lane 2 in A_V, the others in the factors.
+    n = 3 + n_factors
+    lanes = make_lanes(n, n_factors)
+    ln_teff = np.empty(n)
+    ln_omega_all = np.empty(n)
+    av = np.empty(n)
     step_t, step_a = 1e-4, 1e-3
-    ln_teff[:] = LN_HEAT_K - log(point[0])
-    av[:] = point[2] if prior.fit_av else one.av_fixed[0]
-    ln_omega = point[1] - ln_teff[0]
+    same = np.empty((n, ndim))
+    for i in range(n):
+        same[i] = point
+    read_coords(same, one.av_fixed[0], prior, ln_teff, ln_omega_all, av, lanes)
+    ln_omega = ln_omega_all[0]
     ln_teff[1] += step_t
     av[2] += step_a
-    row_weight = np.empty((4, 3))
-    column_weight = np.empty((4, 3))
-    corner = np.empty(3, dtype=np.uint64)
-    spline_weights(ln_teff, av, grid, row_weight, column_weight, corner)
-    flux = np.empty(3)
-    jacobian = np.empty(ndim)
+    for k in range(n_factors):
+        lanes.z[k, 3 + k] += 1.0
+    spline_weights(ln_teff, av, grid, lanes)
+    flux = lanes.flux
+    jacobian = np.zeros(ndim)
     gradient[:] = 0.0
     curvature[:] = 0.0
     heat_range = exp(LN_HEAT_K - prior.ln_teff_min)
@@ -253,17 +277,24 @@ def _slopes(one, grid, prior, point, gradient, curvature):
         offset = point[2] - one.av_mean[0]
         gradient[2] = -offset * one.av_inverse_variance[0] - one.av_rate[0]
         curvature[2, 2] = one.av_inverse_variance[0] + max(one.av_rate[0] ** 2, 1.0 / prior.av_max**2)
+    for k in range(n_factors):
+        gradient[first_z + k] = -point[first_z + k]
+        curvature[first_z + k, first_z + k] = 1.0
+    if prior.fit_jitter:
+        # The jitter is left where it is: its gradient lies in the variance, which this climb holds fixed.
+        curvature[ndim - 1, ndim - 1] = 1.0
     f = prior.outlier_fraction
     wide = 1.0 / (prior.outlier_width * prior.outlier_width)
     for j in range(one.n_bands[0]):
-        spline_value(grid, one.band[0, j], row_weight, column_weight, corner, flux)
+        band_model(grid, one, 0, j, lanes)
         model = min(exp(flux[0] + ln_omega) * one.inverse_error[0, j], 1e30)
-        spread = one.floor[0, j] * model
-        inverse_variance = 1.0 / (1.0 + spread * spread)
+        inverse_variance = 1.0 / (1.0 + lanes.spread2[0] * model * model)
         jacobian[0] = -((flux[1] - flux[0]) / step_t - 1.0) / point[0]
         jacobian[1] = 1.0
         if prior.fit_av:
             jacobian[2] = (flux[2] - flux[0]) / step_a
+        for k in range(n_factors):
+            jacobian[first_z + k] = flux[3 + k] - flux[0]
         if one.limit[0, j]:
             sigma = 1.0 / np.sqrt(inverse_variance)
             x = (one.scaled_flux[0, j] - model) / sigma

@@ -88,5 +88,6 @@ def pack_block(stars: Stars, model: FitModel, settings: Settings) -> Block:
         av_inverse_variance=inverse_variance,
         av_rate=rate,
         av_fixed=stars.av_mean,
+        factor_scale=np.ones(len(stars)),
         log_norm=log_norm,
     )

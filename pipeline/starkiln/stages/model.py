@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from starkiln.errors import SettingsError, UnknownPassband, nearest
-from starkiln.inference.posterior import Grid, Prior
+from starkiln.inference.posterior import Grid, Prior, n_parameters
 from starkiln.physics.bandtable import BandTable, build_band_table
 from starkiln.physics.constants import PARSEC_M, RSUN_M
 from starkiln.physics.extinction import law_names
@@ -19,6 +19,7 @@ from starkiln.settings.models import PhotometryColumns
 METHOD_VERSION = 1
 """Goes up with every change of the method that changes a number of the catalogue."""
 
+LN_JITTER_MIN = float(np.log(1e-3))
 LN_RSUN_PC = float(np.log(RSUN_M / PARSEC_M))
 
 
@@ -86,19 +87,31 @@ def build_model(settings: Settings) -> FitModel:
         fit_av=extinction.prior != "fixed",
         outlier_fraction=outliers.fraction if outliers else 0.0,
         outlier_width=outliers.width if outliers else 10.0,
+        fit_jitter=False,
+        ln_jitter_min=LN_JITTER_MIN,
     )
-    n_parameters = 3 if prior.fit_av else 2
-    if settings.sampling.walkers < 2 * (n_parameters + 1):
-        raise SettingsError(
-            f"sampling.walkers is {settings.sampling.walkers}: {n_parameters} parameters need at least "
-            f"{2 * (n_parameters + 1)}"
-        )
     n_rows, n_columns = table.coef.shape[1:]
+    grid = Grid(
+        coef=table.coef.ravel(),
+        n_rows=n_rows,
+        n_columns=n_columns,
+        ln_teff_min=table.ln_teff_min,
+        ln_teff_step=table.ln_teff_step,
+        av_step=table.av_step,
+        loading=np.zeros((0, len(passbands), n_rows)),
+        scatter=np.zeros((len(passbands), n_rows)),
+    )
+    needed = 2 * (n_parameters(grid, prior) + 1)
+    if settings.sampling.walkers < needed:
+        raise SettingsError(
+            f"sampling.walkers is {settings.sampling.walkers}: {n_parameters(grid, prior)} parameters need at least "
+            f"{needed}"
+        )
     return FitModel(
         passbands=passbands,
         floor=np.array([_floor(band, passbands[band.label]) for band in settings.input.photometry]),
         table=table,
-        grid=Grid(table.coef.ravel(), n_rows, n_columns, table.ln_teff_min, table.ln_teff_step, table.av_step),
+        grid=grid,
         prior=prior,
         ln_radius_bounds_pc=(float(radius_min), float(radius_max)),
     )
