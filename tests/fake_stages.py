@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 
-from starkiln.engine.run import Stages
+from starkiln.engine.job import Stages
 from starkiln.flags import BY_NAME
 from starkiln.settings import Settings
 from starkiln.stages.process import PartTables
@@ -135,6 +135,16 @@ def lose_a_row(table: pa.Table, settings: Settings, model: NoModel) -> PartTable
 def take_long(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
     time.sleep(30)
     return pass_through(table, settings, model)
+
+
+def fit_and_tell_compilations(table: pa.Table, settings: Settings, model: Any) -> PartTables:
+    """Fit, and leave a file beside the input that says how many kernels this process has compiled so far."""
+    from starkiln.inference.compile import compilations
+    from starkiln.stages.process import process_part
+
+    made = process_part(table, settings, model)
+    (Path(settings.input.tables).parent / f"compiled-{os.getpid()}").write_text(str(compilations()))
+    return made
 
 
 def stages(process: Any = pass_through) -> Stages:

@@ -92,7 +92,7 @@ def check(config: Config, debug: Debug = False) -> None:
     """Check settings, passbands and the footers of the input tables, and print the plan."""
     with _errors_told(debug):
         from starkiln.engine.check import describe_plan
-        from starkiln.engine.run import fitting_stages
+        from starkiln.engine.job import fitting_stages
         from starkiln.settings import load_settings
         from starkiln.tables.source import open_source
 

@@ -3,6 +3,7 @@ import signal
 import time
 import traceback
 
+import dask
 import psutil
 import pytest
 
@@ -26,6 +27,10 @@ def die():
 
 def thread_settings():
     return {name: os.environ.get(name) for name in ("OMP_NUM_THREADS", "NUMBA_NUM_THREADS")}
+
+
+def spill_settings():
+    return [dask.config.get(f"distributed.worker.memory.{name}") for name in ("target", "spill")]
 
 
 def next_of(executor, tries=100):
@@ -76,6 +81,11 @@ def test_a_task_that_kills_its_workers_ends_and_others_go_on(cluster):
 def test_workers_have_one_thread(cluster):
     cluster.submit("threads", thread_settings)
     assert next_of(cluster).result == {"OMP_NUM_THREADS": "1", "NUMBA_NUM_THREADS": "1"}
+
+
+def test_workers_store_no_objects_on_disk(cluster):
+    cluster.submit("spill", spill_settings)
+    assert next_of(cluster).result == [False, False]
 
 
 def test_nothing_listens_beyond_this_machine(cluster):

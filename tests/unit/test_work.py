@@ -8,11 +8,12 @@ from fake_stages import (
     raise_at_failing_id,
     raise_disk_full,
     raise_once,
+    stages,
 )
 from small_survey import settings_for, stars
 from starkiln.engine.executors import Finished, SerialExecutor, WorkerDied
+from starkiln.engine.job import Job
 from starkiln.engine.plan import make_plan
-from starkiln.engine.tasks import Job
 from starkiln.engine.work import PartFailed, Work
 from starkiln.errors import EnvironmentTrouble, InputError
 from starkiln.tables.source import open_source
@@ -51,7 +52,7 @@ def do_work(tmp_path, process=pass_through, rows=100, row_group_size=20, executo
     job = Job(
         source=source,
         settings=settings,
-        process=process,
+        stages=stages(process),
         model=NoModel(),
         stamps=plan.stamps,
         scratch=scratch,
@@ -59,7 +60,7 @@ def do_work(tmp_path, process=pass_through, rows=100, row_group_size=20, executo
     )
     executor = executor or Watched(scratch)
     cuts, fitted = [], []
-    Work(plan, job.save(), parts, executor, check).run(cuts.append, fitted.append)
+    Work(plan, job, parts, executor, check).run(cuts.append, fitted.append)
     return cuts, fitted, executor
 
 

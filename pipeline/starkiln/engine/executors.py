@@ -141,6 +141,9 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
         "distributed.scheduler.allowed-failures": WORKER_DEATHS_ALLOWED,
         "distributed.nanny.pre-spawn-environ": {**one_thread, "MALLOC_TRIM_THRESHOLD_": "65536"},
         "distributed.comm.require-encryption": True,
+        # Results are small; what a worker spills to disk it would unpickle from there.
+        "distributed.worker.memory.target": False,
+        "distributed.worker.memory.spill": False,
         # What goes wrong comes back with the task; dask's own lines would only repeat it.
         "logging": {"distributed": "critical"},
     }

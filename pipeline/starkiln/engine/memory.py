@@ -11,8 +11,8 @@ import pandas as pd
 import pyarrow as pa
 from astropy.table import Column, MaskedColumn, Table
 
+from starkiln.engine.job import Stages, fitting_stages
 from starkiln.engine.plan import copies, even_parts, mark_repeats
-from starkiln.engine.run import Stages, fitting_stages
 from starkiln.errors import InputError, nearest
 from starkiln.settings import Settings, build_settings, load_settings
 from starkiln.tables.checks import column_problem, column_uses, handed_out_type

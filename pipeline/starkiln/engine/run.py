@@ -6,14 +6,12 @@ import json
 import time
 import traceback
 from collections import Counter
-from collections.abc import Callable, Iterator
-from contextlib import AbstractContextManager, contextmanager, nullcontext
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
-
-import pyarrow as pa
 
 from starkiln.engine import provenance
 from starkiln.engine.closing import close_generation
@@ -21,40 +19,17 @@ from starkiln.engine.directory import check_name, hold, scratch_folder
 from starkiln.engine.events import EventLog, open_log
 from starkiln.engine.executors import SMALL_RUN_ROWS, Executor, SerialExecutor, open_cluster
 from starkiln.engine.generations import Generations
+from starkiln.engine.job import Job, SavedJob, Stages, fitting_stages
 from starkiln.engine.plan import Plan, make_plan
 from starkiln.engine.progress import Progress, Silence
 from starkiln.engine.resources import peak_memory, worker_count
 from starkiln.engine.stopping import StopFlag
-from starkiln.engine.tasks import Cut, Fitted, Job
+from starkiln.engine.tasks import Cut, Fitted
 from starkiln.engine.work import Work
 from starkiln.errors import EnvironmentTrouble, StarkilnError
 from starkiln.settings import Settings, dump_toml, load_settings
 from starkiln.tables.source import Source, open_source
 from starkiln.tables.write import PackedFile
-
-
-@dataclass(frozen=True)
-class Stages:
-    """The two functions that know the physics.
-
-    Attributes
-    ----------
-    build_model
-        From settings to whatever `process_part` needs, once for a run.
-    process_part
-        From a table of input rows, the settings and the model to the output tables.
-    """
-
-    build_model: Callable[[Settings], Any]
-    process_part: Callable[[pa.Table, Settings, Any], Any]
-
-
-def fitting_stages() -> Stages:
-    """Return the stages that fit stars."""
-    from starkiln.stages.model import build_model
-    from starkiln.stages.process import process_part
-
-    return Stages(build_model, process_part)
 
 
 @dataclass(frozen=True)
@@ -258,28 +233,31 @@ class _Run:
         tables = ["catalogue", "rejected", "index"] + ["draws"] * bool(self._settings.sampling.keep_draws)
         for table in tables:
             (parts / table).mkdir(parents=True)
-        job_path = Job(
+        job = Job(
             source=source,
             settings=self._settings,
-            process=self._stages.process_part,
+            stages=self._stages,
             model=model,
             stamps=plan.stamps,
             scratch=scratch,
             parts=parts,
-        ).save()
-        self._progress.begin("fitting", plan.selected)
-        with self._executor(plan, workers, scratch) as executor:
-            self._lap("start workers")
-            work = Work(plan, job_path, parts, executor, self._stop.check)
-            work.run(self._tally.add_cut, self._part_done)
-            self._lap("work")
-        return executor.workers
-
-    def _executor(self, plan: Plan, workers: int, scratch: Path) -> AbstractContextManager[Executor]:
+        )
         if plan.selected <= SMALL_RUN_ROWS:
-            return nullcontext(SerialExecutor())
+            return self._do_parts(plan, job, parts, SerialExecutor())
+        self._progress.begin("warming up", 0)
+        self._stages.warm_up(self._settings, model)
+        self._lap("warm up")
+        self._stop.check()
         memory = self._settings.compute.memory_per_worker_bytes
-        return open_cluster(min(workers, plan.parts), memory, scratch)
+        with open_cluster(min(workers, plan.parts), memory, scratch) as executor:
+            self._lap("start workers")
+            return self._do_parts(plan, job.save(), parts, executor)
+
+    def _do_parts(self, plan: Plan, job: Job | SavedJob, parts: Path, executor: Executor) -> int:
+        self._progress.begin("fitting", plan.selected)
+        Work(plan, job, parts, executor, self._stop.check).run(self._tally.add_cut, self._part_done)
+        self._lap("work")
+        return executor.workers
 
     def _between_batches(self, rows: int) -> None:
         self._progress.advance(rows)

@@ -2,20 +2,18 @@
 
 from __future__ import annotations
 
-import pickle
 import time
 import uuid
 from collections import Counter
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from dataclasses import dataclass
-from functools import lru_cache
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 import pyarrow as pa
 
 from starkiln.engine.closing import part_path
+from starkiln.engine.job import Job, SavedJob, open_job
 from starkiln.engine.plan import BATCH_ROWS, Unit, copies, file_stamp, read_marks, row_positions
 from starkiln.engine.resources import peak_memory
 from starkiln.errors import EnvironmentTrouble
@@ -23,47 +21,8 @@ from starkiln.flags import FLAGS
 from starkiln.settings import Settings
 from starkiln.tables.columns import index_schema
 from starkiln.tables.hashes import id_hashes, row_hashes
-from starkiln.tables.source import Source, read_rows
+from starkiln.tables.source import read_rows
 from starkiln.tables.write import WrittenFile, write_part
-
-
-@dataclass(frozen=True, kw_only=True)
-class Job:
-    """What every task of a run needs; kept in a file that each worker reads once.
-
-    Attributes
-    ----------
-    process
-        Makes the output tables of a part: (table, settings, model) -> tables.
-    stamps
-        Size and modification time of each input file when the run was planned.
-    scratch
-        Folder of the cut files and of the marks of repeated ids.
-    parts
-        Folder of the output of the parts.
-    """
-
-    source: Source
-    settings: Settings
-    model: Any
-    process: Callable[[pa.Table, Settings, Any], Any]
-    stamps: tuple[tuple[int, int], ...]
-    scratch: Path
-    parts: Path
-
-    def save(self) -> Path:
-        """Write the job into the scratch folder, and return where."""
-        # Processes remember the job by its path, so no two jobs ever share one.
-        path = self.scratch / f"job.{uuid.uuid4().hex}.pickle"
-        path.write_bytes(pickle.dumps(self))
-        return path
-
-
-@lru_cache(maxsize=1)
-def load_job(path: Path) -> Job:
-    """Return the job that was saved at a path, reading it once in each process."""
-    job: Job = pickle.loads(path.read_bytes())
-    return job
 
 
 @dataclass(frozen=True)
@@ -107,7 +66,7 @@ class Fitted:
     peak_memory: int
 
 
-def cut_unit(job_path: Path, unit: Unit) -> Cut:
+def cut_unit(job: Job | SavedJob, unit: Unit) -> Cut:
     """Read the row groups of a unit once, and write the rows of each part to a file of its own.
 
     Raises
@@ -116,7 +75,7 @@ def cut_unit(job_path: Path, unit: Unit) -> Cut:
         If an input file is not as it was when the run was planned.
     """
     started = time.perf_counter()
-    job = load_job(job_path)
+    job = open_job(job)
     _check_stamps(job, unit)
     batches = _marked_batches(job, unit)
     parts = []
@@ -165,9 +124,9 @@ def _deal_rows(batches: Iterator[pa.Table], parts: list[Part], unit: Unit) -> No
                 writer.close()
 
 
-def fit_part(job_path: Path, part: Part) -> Fitted:
+def fit_part(job: Job | SavedJob, part: Part) -> Fitted:
     """Make the output tables of a part and write them under temporary names beside their places."""
-    job = load_job(job_path)
+    job = open_job(job)
     with pa.OSFile(str(part.path), "rb") as file:
         table = pa.ipc.open_file(file).read_all()
     started = time.perf_counter()
@@ -197,7 +156,7 @@ def process_rows(job: Job, table: pa.Table) -> dict[str, pa.Table]:
     RuntimeError
         If a row is in neither the catalogue nor the rejected rows, or in both.
     """
-    made = job.process(table, job.settings, job.model)
+    made = job.stages.process_part(table, job.settings, job.model)
     index = index_rows(table, made.catalogue, made.rejected, job.settings)
     tables = {"catalogue": made.catalogue, "rejected": made.rejected, "index": index}
     if made.draws is not None:

@@ -10,6 +10,7 @@ from typing import Any
 
 from starkiln.engine.closing import part_path
 from starkiln.engine.executors import Executor, Finished, WorkerDied
+from starkiln.engine.job import Job, SavedJob
 from starkiln.engine.plan import Plan, Unit
 from starkiln.engine.tasks import Cut, Fitted, Part, cut_unit, fit_part
 from starkiln.errors import EnvironmentTrouble, StarkilnError
@@ -33,8 +34,8 @@ class Work:
     ----------
     plan
         The plan.
-    job_path
-        Where the job is saved.
+    job
+        The job, or where workers find it.
     parts_folder
         Receives the parts' files, in one folder per table.
     executor
@@ -46,12 +47,12 @@ class Work:
     def __init__(
         self,
         plan: Plan,
-        job_path: Path,
+        job: Job | SavedJob,
         parts_folder: Path,
         executor: Executor,
         check: Callable[[], None],
     ) -> None:
-        self._job_path = job_path
+        self._job = job
         self._parts_folder = parts_folder
         self._executor = executor
         self._check = check
@@ -103,7 +104,7 @@ class Work:
         key = f"{'cut' if cutting else 'fit'}-{task.number:06d}-{next(self._serial)}"
         self._running[key] = (task, tries)
         function: Callable[..., Any] = cut_unit if cutting else fit_part
-        self._executor.submit(key, function, self._job_path, task, urgent=cutting)
+        self._executor.submit(key, function, self._job, task, urgent=cutting)
 
     def _try_again(self, task: Unit | Part, tries: int, finished: Finished) -> None:
         error = finished.error
