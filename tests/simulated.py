@@ -54,6 +54,7 @@ def make_settings(bands: tuple[str, ...] = THIRTEEN_BANDS, floor: float = 0.01, 
             "photometry": photometry,
         },
         **sections,
+        "model": {"photosphere": "blackbody"} | sections.get("model", {}),
     }
     return build_settings(values)
 

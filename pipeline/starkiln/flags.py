@@ -39,9 +39,20 @@ FLAGS: tuple[Flag, ...] = (
     Flag(8, "radius_at_bound", "More than 2.5 % of the posterior lies within 5 % of a radius bound."),
     Flag(9, "no_detection", "Fewer than two bands above 3 sigma: temperature, radius and luminosity are null."),
     Flag(10, "poor_fit", "The posterior predictive p-value, which allows for outlying bands, is below 0.001."),
+    Flag(
+        11,
+        "odd_photosphere",
+        "The star's common departure z_1 is more than two sigma from that of the reference stars.",
+    ),
     Flag(12, "band_outlier", "At least one band has an outlier probability above 0.9."),
+    Flag(
+        13,
+        "outside_calibration",
+        "More than half of the bands have no departures learnt, or none at this temperature: T may be off.",
+    ),
     Flag(14, "infrared_excess", "A band longward of 3 micron lies more than 3 sigma above the model."),
     Flag(15, "ultraviolet_excess", "A band shortward of 0.32 micron lies more than 3 sigma above the model."),
+    Flag(16, "blackbody_chosen", "With photosphere = auto, the data prefer a bare blackbody."),
     Flag(
         17,
         "duplicate_id",

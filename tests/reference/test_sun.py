@@ -46,7 +46,7 @@ def sun():
             "parallax": {"value": "parallax", "error": "parallax_error", "unit": "mas"},
             "photometry": bands,
         },
-        "model": {"extinction": {"prior": "fixed"}},
+        "model": {"photosphere": "blackbody", "extinction": {"prior": "fixed"}},
     }
     return starkiln.fit_table(pd.DataFrame([row]), settings).iloc[0]
 

@@ -16,9 +16,12 @@ FROZEN = {
     "radius_at_bound": 8,
     "no_detection": 9,
     "poor_fit": 10,
+    "odd_photosphere": 11,
     "band_outlier": 12,
+    "outside_calibration": 13,
     "infrared_excess": 14,
     "ultraviolet_excess": 15,
+    "blackbody_chosen": 16,
     "duplicate_id": 17,
 }
 

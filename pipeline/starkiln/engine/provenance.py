@@ -72,6 +72,7 @@ def hashes(settings: Settings, model: Any) -> dict[str, Any]:
     parts = {
         "settings": digest(settings.fit_settings()),
         "passbands": model.digests(),
+        "departures": model.departures_digest(),
         "method": METHOD_VERSION,
     }
     return {"fit_key": digest(parts), **parts}

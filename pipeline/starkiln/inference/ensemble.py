@@ -94,6 +94,7 @@ def sample_block(
     walkers: int,
     stopping: Stopping,
     memory_bytes: float = 1e9,
+    modes: Modes | None = None,
 ) -> Iterator[Draws]:
     """Sample every star of a block until it is done; yield stars as they finish.
 
@@ -103,13 +104,10 @@ def sample_block(
         (S, 4) uint64, each star's own stream, advanced in place.
     memory_bytes
         When the chains would outgrow this, the stars left are sampled in two halves, one after the other.
+    modes
+        The peaks of the posteriors, if they have been found already.
     """
-    modes = find_modes(block, grid, prior)
-    run = _Run(block, grid, prior, streams, walkers, *_first_walkers(block, grid, prior, modes, streams, walkers))
-    for length, share in zip(BURN_IN, INDEPENDENCE, strict=False):
-        window, _ = run.advance(length, share)
-        run.proposal = learn_proposal(window[length // 4 :], run.n_stars, prior.fit_av)
-    run.forget()
+    run = burn_in(block, grid, prior, streams, walkers, modes or find_modes(block, grid, prior))
     waiting = [(run, stopping.lengths())]
     while waiting:
         run, (length, *longer) = waiting.pop()
@@ -124,6 +122,16 @@ def sample_block(
             yield done
         if run.n_stars:
             waiting.append((run, longer))
+
+
+def burn_in(block: Block, grid: Grid, prior: Prior, streams: NDArray[np.uint64], walkers: int, modes: Modes) -> _Run:
+    """Return the run of a block after the burn-in, its proposal learnt and frozen."""
+    run = _Run(block, grid, prior, streams, walkers, *_first_walkers(block, grid, prior, modes, streams, walkers))
+    for length, share in zip(BURN_IN, INDEPENDENCE, strict=False):
+        window, _ = run.advance(length, share)
+        run.proposal = learn_proposal(window[length // 4 :], run.n_stars, prior.fit_av)
+    run.forget()
+    return run
 
 
 def chain_bytes(n_steps: int, walkers: int, ndim: int) -> int:

@@ -43,6 +43,11 @@ class BandTable:
     av_step: float
     n_av: int
 
+    @property
+    def teff_nodes_k(self) -> FloatArray:
+        """The temperatures [K] of the nodes."""
+        return np.exp(self.ln_teff_min + self.ln_teff_step * np.arange(self.n_teff))
+
 
 def build_band_table(
     passbands: Sequence[Passband], teff_min_k: float, teff_max_k: float, av_max: float, law: str, rv: float
@@ -74,8 +79,8 @@ def build_band_table(
     coef = np.empty((len(passbands), n_teff + 2, n_av + 2))
     for band, passband in enumerate(passbands):
         ratio = extinction_ratio(law, rv, passband.quadrature[0])
-        in_teff = _spline_coefficients(ln_band_flux(passband, ratio, teff_k, av_mag))
-        coef[band] = _spline_coefficients(in_teff.T).T
+        in_teff = spline_coefficients(ln_band_flux(passband, ratio, teff_k, av_mag))
+        coef[band] = spline_coefficients(in_teff.T).T
     return BandTable(coef, ln_teff_min, LN_TEFF_STEP, n_teff, AV_STEP, n_av)
 
 
@@ -135,7 +140,7 @@ def _nodes(length: float, step: float) -> int:
     return math.ceil(length / step - 1e-9) + 1
 
 
-def _spline_coefficients(values: FloatArray) -> FloatArray:
+def spline_coefficients(values: FloatArray) -> FloatArray:
     """Return the B-spline coefficients, n + 2 rows, of a cubic through n rows of values (not-a-knot ends)."""
     from scipy.linalg import solve_banded
 

@@ -221,6 +221,15 @@ class Outliers(Section):
     """Their scatter, in units of the band's total error."""
 
 
+class BlackbodyOption(Section):
+    """The bare blackbody as one of two answers, for photosphere = "auto"."""
+
+    scatter: Annotated[float, Field(ge=0, lt=0.5)] = 0.015
+    """Scatter of its own in every band, as a fraction of the flux."""
+    fraction: Annotated[float, Field(gt=0, lt=1)] = 0.02
+    """Expected fraction of blackbodies among the stars."""
+
+
 class Extinction(Section):
     """Dust in front of the star, and what is known of it beforehand."""
 
@@ -269,8 +278,14 @@ class DistancePrior(Section):
 class Model(Section):
     """The model of a star, and the priors of its parameters."""
 
-    photosphere: Literal["blackbody"] = "blackbody"
-    """The light of a bare star."""
+    photosphere: Literal["blackbody", "calibrated", "auto"] = "calibrated"
+    """The light of a bare star: a blackbody, one with the departures of real stars, or whichever the data prefer."""
+    departures: Annotated[Literal["builtin"] | FilePath, Field(union_mode="left_to_right")] = "builtin"
+    """Departures from a blackbody: "builtin", or a file that `starkiln calibrate` wrote."""
+    blackbody: BlackbodyOption = BlackbodyOption()
+    """The blackbody of "auto"."""
+    jitter: bool = False
+    """Whether to fit a fractional scatter common to all bands of a star."""
     temperature_k: TemperatureRange = (1500.0, 60000.0)
     """Least and largest effective temperature in kelvins."""
     radius_rsun: PositiveRange = (1e-3, 3e3)
@@ -388,7 +403,8 @@ class Settings(Section):
             "photometry": [_meaning(band) for band in self.input.photometry],
             "passband": [_meaning(file) for file in self.passband if file.name in named],
             "model": model.model_dump(mode="json")
-            | {"extinction": _meaning(model.extinction), "distance": _meaning(model.distance)},
+            | {"extinction": _meaning(model.extinction), "distance": _meaning(model.distance)}
+            | {"departures": "builtin" if model.departures == "builtin" else "file"},
             "sampling": self.sampling.model_dump(),
         }
 

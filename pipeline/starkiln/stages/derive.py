@@ -23,6 +23,8 @@ class Derived(NamedTuple):
 
     Attributes
     ----------
+    z
+        (n_factors, K, N): the photosphere's common factors.
     kept_share
         (K,): effective share of the draws left by the bounds on R.
     """
@@ -34,6 +36,7 @@ class Derived(NamedTuple):
     av: NDArray[np.float64]
     ln_ang_diam: NDArray[np.float64]
     ln_fbol: NDArray[np.float64]
+    z: NDArray[np.float64]
     kept_share: NDArray[np.float64]
 
 
@@ -60,7 +63,7 @@ def derive(stars: Stars, draws: Draws, model: FitModel, settings: Settings) -> D
     )
     photometric = np.take_along_axis(draws.chain, distances.source[:, None], axis=2)
     ln_teff, ln_omega = photometric[:, 0], photometric[:, 1]
-    av = photometric[:, 2] if photometric.shape[1] > 2 else np.broadcast_to(stars.av_mean[:, None], ln_teff.shape)
+    av = photometric[:, 2] if model.prior.fit_av else np.broadcast_to(stars.av_mean[:, None], ln_teff.shape)
     ln_radius = distances.ln_dist_pc + 0.5 * ln_omega - LN_RSUN_PC
     return Derived(
         ln_teff=ln_teff,
@@ -70,6 +73,9 @@ def derive(stars: Stars, draws: Draws, model: FitModel, settings: Settings) -> D
         av=av,
         ln_ang_diam=np.log(2.0 * MAS_PER_RAD) + 0.5 * ln_omega,
         ln_fbol=np.log(STEFAN_BOLTZMANN_W_PER_M2_K4) + ln_omega + 4.0 * ln_teff,
+        z=np.ascontiguousarray(
+            photometric[:, model.first_factor : model.first_factor + len(model.grid.loading)].transpose(1, 0, 2)
+        ),
         kept_share=distances.kept_share,
     )
 

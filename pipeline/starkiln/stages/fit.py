@@ -6,13 +6,15 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import log_array
 from starkiln.inference.ensemble import Draws, Stopping, chain_bytes, sample_block
-from starkiln.inference.posterior import HALF_LN_2PI, Block
+from starkiln.inference.posterior import HALF_LN_2PI, LN_HEAT_K, Block
+from starkiln.inference.start import Modes, find_modes
 from starkiln.inference.streams import star_streams
 from starkiln.settings import Settings
-from starkiln.stages.model import FitModel
+from starkiln.stages.model import LN_RSUN_PC, FitModel
 from starkiln.stages.stars import Stars
 
 MEMORY_SHARE = 0.3  # of a worker's memory that a block's chains may take
@@ -39,7 +41,7 @@ class Fitted:
 
 def block_stars(settings: Settings) -> int:
     """Return how many stars to sample together, by the memory of a worker."""
-    one = chain_bytes(TYPICAL_STEPS, settings.sampling.walkers, 3)
+    one = chain_bytes(TYPICAL_STEPS, settings.sampling.walkers, 4)
     return int(np.clip(MEMORY_SHARE * settings.compute.memory_per_worker_bytes / one, 1, LARGEST_BLOCK))
 
 
@@ -50,12 +52,41 @@ def fit(stars: Stars, model: FitModel, settings: Settings) -> Iterator[Fitted]:
     memory_bytes = MEMORY_SHARE * settings.compute.memory_per_worker_bytes
     for first in range(0, len(stars), size):
         some = stars.take(slice(first, first + size))
-        block = pack_block(some, model, settings)
+        block, modes = start_block(some, model, settings)
         streams = star_streams(some.ids, settings.run.seed, b"photometry")
         for draws in sample_block(
-            block, model.grid, model.prior, streams, settings.sampling.walkers, stopping, memory_bytes
+            block, model.grid, model.prior, streams, settings.sampling.walkers, stopping, memory_bytes, modes
         ):
             yield Fitted(first, block.take(draws.stars), draws)
+
+
+def start_block(stars: Stars, model: FitModel, settings: Settings) -> tuple[Block, Modes]:
+    """Return the block of some stars and the peaks of their posteriors; giants get wider factors."""
+    block = pack_block(stars, model, settings)
+    modes = find_modes(block, model.grid, model.prior)
+    if model.departures is not None:
+        scale = factor_scale(stars, modes)
+        if (scale > 1.0).any():
+            block = block._replace(factor_scale=scale)
+            modes = find_modes(block, model.grid, model.prior)
+    return block, modes
+
+
+def factor_scale(stars: Stars, modes: Modes) -> NDArray[np.float64]:
+    """Return by how much the factors and the scatter of dwarfs are widened for each star: twice for cool giants.
+
+    A giant is a star above 2.5 solar radii below 7000 K; the step is drawn out from 2 to 3 radii and from 7500 to
+    6500 K. The radius is that of the first peak at the distance itself, which must be known to a third: without it a
+    star counts as a dwarf.
+    """
+    ln_teff = LN_HEAT_K - log_array(modes.coords[:, 0, 0])
+    with np.errstate(invalid="ignore", divide="ignore"):
+        parallax_pc = np.where(stars.parallax_mas > 3.0 * stars.parallax_error_mas, 1e3 / stars.parallax_mas, np.nan)
+        distance_pc = np.where(stars.distance_pc > 3.0 * stars.distance_error_pc, stars.distance_pc, parallax_pc)
+        ln_radius = np.log(distance_pc) + 0.5 * (modes.coords[:, 0, 1] - ln_teff) - LN_RSUN_PC
+    large = np.clip(np.nan_to_num(np.exp(np.minimum(ln_radius, 5.0)), nan=0.0) - 2.0, 0.0, 1.0)
+    cool = np.clip((7500.0 - np.exp(ln_teff)) / 1000.0, 0.0, 1.0)
+    return np.asarray(1.0 + large * cool)
 
 
 def pack_block(stars: Stars, model: FitModel, settings: Settings) -> Block:

@@ -118,9 +118,7 @@ def ingest(table: pa.Table, settings: Settings, model: FitModel) -> Ingested:
     distance, distance_error = _distance_pc(table, settings)
     usable = fault[kept] == _USABLE
     stars = Stars(
-        ids=[
-            star_id for star_id, keep in zip(ids, kept.tolist(), strict=True) if keep and star_id is not None
-        ],
+        ids=[star_id for star_id, keep in zip(ids, kept.tolist(), strict=True) if keep and star_id is not None],
         flux_jy=np.where(usable, np.stack([band.flux_jy for band in bands], axis=1)[kept], 0.0),
         error_jy=np.where(usable, np.stack([band.error_jy for band in bands], axis=1)[kept], 1.0),
         usable=usable,
@@ -319,9 +317,7 @@ def _rejected_rows(
     columns = [
         *origin.columns,
         pa.array([rejection.reason for rejection in why], pa.string()),
-        pa.array(
-            [rejection.detail(row) for rejection, row in zip(why, rows.tolist(), strict=True)], pa.string()
-        ),
+        pa.array([rejection.detail(row) for rejection, row in zip(why, rows.tolist(), strict=True)], pa.string()),
         pa.array(["data"] * len(rows), pa.string()),
     ]
     schema = rejected_schema(output_fields(table.schema, settings)[0])

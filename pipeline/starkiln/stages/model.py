@@ -2,21 +2,23 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import hashlib
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from starkiln.errors import SettingsError, UnknownPassband, nearest
 from starkiln.inference.posterior import Grid, Prior, n_parameters
-from starkiln.physics.bandtable import BandTable, build_band_table
+from starkiln.physics.bandtable import BandTable, build_band_table, spline_coefficients
 from starkiln.physics.constants import PARSEC_M, RSUN_M
+from starkiln.physics.departures import DepartureMismatch, Departures, builtin_departures, read_departures
 from starkiln.physics.extinction import law_names
 from starkiln.physics.passbands import Passband, builtin_names, load_passband, read_passband, zero_point_jy
 from starkiln.settings import Settings
 from starkiln.settings.models import PhotometryColumns
 
-METHOD_VERSION = 1
+METHOD_VERSION = 2
 """Goes up with every change of the method that changes a number of the catalogue."""
 
 LN_JITTER_MIN = float(np.log(1e-3))
@@ -29,28 +31,51 @@ class FitModel:
 
     Attributes
     ----------
+    photosphere
+        "blackbody" or "calibrated".
     passbands
         By label, in the order of the settings.
     floor
         (B,): each band's fractional floor with the error of its zero point, in quadrature.
     table
-        Band fluxes against temperature and A_V.
+        Band fluxes against temperature and A_V, departures included.
     grid, prior
-        The table and the priors, as the kernels take them.
+        The table, the factors and the priors, as the kernels take them.
     ln_radius_bounds_pc
         Bounds on ln R, R in parsecs.
+    departures
+        Of the bands, in their order; None for a blackbody.
+    rival
+        The blackbody that each star may prefer, for photosphere = "auto".
     """
 
+    photosphere: str
     passbands: dict[str, Passband]
     floor: NDArray[np.float64]
     table: BandTable
     grid: Grid
     prior: Prior
     ln_radius_bounds_pc: tuple[float, float]
+    departures: Departures | None
+    rival: FitModel | None
+
+    @property
+    def first_factor(self) -> int:
+        """The place of z_1 among a walker's coordinates."""
+        return 3 if self.prior.fit_av else 2
 
     def digests(self) -> dict[str, str]:
         """Return the digest of each label's curve, detector and zero point."""
         return {label: passband.digest() for label, passband in self.passbands.items()}
+
+    def departures_digest(self) -> str:
+        """Return the SHA-256 of what the departures add to the bands; empty for a blackbody."""
+        if self.departures is None:
+            return ""
+        digest = hashlib.sha256()
+        for values in (self.departures.ln_d, self.departures.loading, self.departures.scatter):
+            digest.update(np.ascontiguousarray(values, dtype="<f8").tobytes())
+        return digest.hexdigest()
 
 
 def build_model(settings: Settings) -> FitModel:
@@ -59,7 +84,8 @@ def build_model(settings: Settings) -> FitModel:
     Raises
     ------
     SettingsError
-        If a passband, a zero point or the extinction law is not known, or there are too few walkers.
+        If a passband, a zero point, the extinction law or the departures are not known or do not fit together, or
+        there are too few walkers.
     """
     passbands = {
         band.label: _passband(settings, band, f"input.photometry[{place}]")
@@ -75,9 +101,42 @@ def build_model(settings: Settings) -> FitModel:
     table = build_band_table(
         list(passbands.values()), teff_min, teff_max, extinction.max, extinction.law, extinction.rv
     )
+    prior, ln_radius_bounds = _prior(settings)
+    floor = np.array([_floor(band, passbands[band.label]) for band in settings.input.photometry])
+    photosphere = settings.model.photosphere
+
+    def blackbody(scatter: float) -> FitModel:
+        grid = _grid(
+            table, np.zeros((0, len(passbands), table.n_teff)), np.full((len(passbands), table.n_teff), scatter)
+        )
+        return FitModel("blackbody", passbands, floor, table, grid, prior, ln_radius_bounds, None, None)
+
+    if photosphere == "blackbody":
+        model = blackbody(0.0)
+    else:
+        departures = _departures(settings, passbands)
+        at_nodes = departures.at(table.teff_nodes_k)
+        lifted = replace(table, coef=table.coef + spline_coefficients(at_nodes.ln_d.T).T[:, :, np.newaxis])
+        model = FitModel(
+            photosphere="calibrated",
+            passbands=passbands,
+            floor=floor,
+            table=lifted,
+            grid=_grid(lifted, at_nodes.loading, at_nodes.scatter),
+            prior=prior,
+            ln_radius_bounds_pc=ln_radius_bounds,
+            departures=departures,
+            rival=blackbody(settings.model.blackbody.scatter) if photosphere == "auto" else None,
+        )
+    _check_walkers(settings, model)
+    return model
+
+
+def _prior(settings: Settings) -> tuple[Prior, tuple[float, float]]:
     radius_min, radius_max = np.log(settings.model.radius_rsun) + LN_RSUN_PC
     distance_min, distance_max = np.log(settings.model.distance.bounds_pc)
-    outliers = settings.model.outliers
+    teff_min, teff_max = settings.model.temperature_k
+    outliers, extinction = settings.model.outliers, settings.model.extinction
     prior = Prior(
         ln_teff_min=float(np.log(teff_min)),
         ln_teff_max=float(np.log(teff_max)),
@@ -87,34 +146,46 @@ def build_model(settings: Settings) -> FitModel:
         fit_av=extinction.prior != "fixed",
         outlier_fraction=outliers.fraction if outliers else 0.0,
         outlier_width=outliers.width if outliers else 10.0,
-        fit_jitter=False,
+        fit_jitter=settings.model.jitter,
         ln_jitter_min=LN_JITTER_MIN,
     )
-    n_rows, n_columns = table.coef.shape[1:]
-    grid = Grid(
+    return prior, (float(radius_min), float(radius_max))
+
+
+def _grid(table: BandTable, loading: NDArray[np.float64], scatter: NDArray[np.float64]) -> Grid:
+    """Return the kernels' grid; loading (K, B, n_teff) and scatter (B, n_teff) are given at the table's nodes."""
+    n_bands, n_rows, n_columns = table.coef.shape
+    spline = np.zeros((len(loading), n_bands, n_rows))
+    for factor, of_bands in enumerate(loading):
+        spline[factor] = spline_coefficients(of_bands.T).T
+    return Grid(
         coef=table.coef.ravel(),
         n_rows=n_rows,
         n_columns=n_columns,
         ln_teff_min=table.ln_teff_min,
         ln_teff_step=table.ln_teff_step,
         av_step=table.av_step,
-        loading=np.zeros((0, len(passbands), n_rows)),
-        scatter=np.zeros((len(passbands), n_rows)),
+        loading=spline,
+        scatter=np.ascontiguousarray(spline_coefficients(scatter.T).T),
     )
-    needed = 2 * (n_parameters(grid, prior) + 1)
+
+
+def _departures(settings: Settings, passbands: dict[str, Passband]) -> Departures:
+    source = settings.model.departures
+    departures = builtin_departures() if source == "builtin" else read_departures(source)
+    try:
+        return departures.for_bands(list(passbands.values()))
+    except DepartureMismatch as error:
+        raise DepartureMismatch(f"model.departures: {error}") from None
+
+
+def _check_walkers(settings: Settings, model: FitModel) -> None:
+    parameters = n_parameters(model.grid, model.prior)
+    needed = 2 * (parameters + 1)
     if settings.sampling.walkers < needed:
         raise SettingsError(
-            f"sampling.walkers is {settings.sampling.walkers}: {n_parameters(grid, prior)} parameters need at least "
-            f"{needed}"
+            f"sampling.walkers is {settings.sampling.walkers}: {parameters} parameters need at least {needed}"
         )
-    return FitModel(
-        passbands=passbands,
-        floor=np.array([_floor(band, passbands[band.label]) for band in settings.input.photometry]),
-        table=table,
-        grid=grid,
-        prior=prior,
-        ln_radius_bounds_pc=(float(radius_min), float(radius_max)),
-    )
 
 
 def _passband(settings: Settings, band: PhotometryColumns, key: str) -> Passband:

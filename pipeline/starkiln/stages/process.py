@@ -10,6 +10,7 @@ import pyarrow as pa
 
 from starkiln.flags import BY_NAME
 from starkiln.settings import Settings
+from starkiln.stages.choose import choose
 from starkiln.stages.derive import derive
 from starkiln.stages.fit import fit
 from starkiln.stages.ingest import ingest
@@ -57,14 +58,33 @@ def _fit_columns(
     """Return the fitted columns and the kept draws of every star, in the order of the stars."""
     columns: dict[str, np.ndarray] = {}
     draws: dict[str, np.ndarray] = {}
-    for fitted in fit(stars, model, settings):
-        rows = fitted.first + fitted.draws.stars
-        some = stars.at(rows)
-        derived = derive(some, fitted.draws, model, settings)
-        _place(columns, rows, len(stars), summarise(some, fitted, derived, model, settings))
-        if settings.sampling.keep_draws:
-            _place(draws, rows, len(stars), kept_draws(derived, settings))
+    if model.rival is None:
+        _fit_rows(np.arange(len(stars)), stars, model, settings, columns, draws)
+        return columns, draws
+    is_blackbody, ln_ratio = choose(stars, model, settings)
+    _fit_rows(np.flatnonzero(~is_blackbody), stars, model, settings, columns, draws)
+    _fit_rows(np.flatnonzero(is_blackbody), stars, model.rival, settings, columns, draws)
+    columns["ln_evidence_ratio"] = ln_ratio
     return columns, draws
+
+
+def _fit_rows(
+    rows: np.ndarray,
+    stars: Stars,
+    model: FitModel,
+    settings: Settings,
+    columns: dict[str, np.ndarray],
+    draws: dict[str, np.ndarray],
+) -> None:
+    """Fit the stars of some rows with one model, and put their values at those rows."""
+    chosen = stars.at(rows)
+    for fitted in fit(chosen, model, settings):
+        places = fitted.first + fitted.draws.stars
+        some = chosen.at(places)
+        derived = derive(some, fitted.draws, model, settings)
+        _place(columns, rows[places], len(stars), summarise(some, fitted, derived, model, settings))
+        if settings.sampling.keep_draws:
+            _place(draws, rows[places], len(stars), kept_draws(derived, settings))
 
 
 def _place(target: dict[str, Any], rows: np.ndarray, n: int, values: dict[str, Any]) -> None:

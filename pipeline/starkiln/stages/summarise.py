@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from scipy.special import binom, gammaincc
 
 from starkiln.flags import BY_NAME
-from starkiln.inference.arithmetic import exp_array
+from starkiln.inference.arithmetic import exp_array, log_array
 from starkiln.inference.checks import Agreement, compare
 from starkiln.inference.posterior import LN_HEAT_K, Block, Prior
 from starkiln.inference.start import climb
@@ -29,6 +29,7 @@ DETECTION_SIGMA = 3.0
 FEW_BANDS = 5
 POOR_PARALLAX = 5.0
 POOR_FIT = 0.001
+ODD_SIGMA = 2.0
 MOST_OUTLIERS = 6
 LEAST_KEPT_SHARE = 0.1
 OUTLIER = 0.9
@@ -63,7 +64,9 @@ def summarise(stars: Stars, fitted: Fitted, derived: Derived, model: FitModel, s
     columns |= _correlations(derived, no_detection)
     columns |= _agreement(fitted, derived, model, settings)
     columns |= _diagnostics(fitted, derived)
-    columns["photosphere"] = np.full(len(stars), settings.model.photosphere)
+    columns |= _factors(derived, no_detection)
+    columns["photosphere"] = np.full(len(stars), model.photosphere)
+    columns["ln_evidence_ratio"] = np.full(len(stars), np.nan)
     columns["n_bands"] = stars.usable.sum(axis=1)
     columns["n_limits"] = stars.limit.sum(axis=1)
     columns["flags"] = _flags(stars, fitted, derived, columns, model, settings)
@@ -110,39 +113,47 @@ def _correlations(derived: Derived, no_detection: NDArray[np.bool_]) -> Columns:
 
 
 def mode_points(fitted: Fitted, derived: Derived, model: FitModel) -> NDArray[np.float64]:
-    """Return the posterior mode of each star, (K, 3, 1) of ln T, ln Omega and A_V: the best draw, climbed from."""
+    """Return the posterior mode of each star, (K, 3 or more, 1) as `_points`: the best draw, climbed from."""
     best = np.argmax(fitted.draws.log_prob, axis=1)
     chain = np.take_along_axis(fitted.draws.chain, best[:, None, None], axis=2)[:, :, 0]
     coords = chain.copy()
     coords[:, 0] = exp_array(LN_HEAT_K - chain[:, 0])
     coords[:, 1] = chain[:, 1] + chain[:, 0]
     climb(fitted.block, model.grid, model.prior, coords)
-    return _points(coords, derived)[:, :, None]
+    natural = coords.copy()
+    natural[:, 0] = LN_HEAT_K - log_array(coords[:, 0])
+    natural[:, 1] = coords[:, 1] - natural[:, 0]
+    return _points(natural[:, :, None], derived, model)
 
 
-def _points(coords: NDArray[np.float64], derived: Derived) -> NDArray[np.float64]:
-    points = np.empty((len(coords), 3))
-    points[:, 0] = LN_HEAT_K - np.log(coords[:, 0])
-    points[:, 1] = coords[:, 1] - points[:, 0]
-    points[:, 2] = coords[:, 2] if coords.shape[1] > 2 else derived.av[:, 0]
-    return points
-
-
-def _thinned(fitted: Fitted, derived: Derived) -> NDArray[np.float64]:
-    """Return PREDICTIVE_DRAWS evenly spaced photometric draws, (K, 3, L)."""
+def _thinned(fitted: Fitted, derived: Derived, model: FitModel) -> NDArray[np.float64]:
+    """Return PREDICTIVE_DRAWS evenly spaced photometric draws, as `_points` lays them out."""
     chain = fitted.draws.chain
     places = np.linspace(0, chain.shape[2] - 1, PREDICTIVE_DRAWS).astype(np.int64)
-    points = np.empty((len(chain), 3, PREDICTIVE_DRAWS))
-    points[:, : chain.shape[1]] = chain[:, :, places]
-    if chain.shape[1] == 2:
-        points[:, 2] = derived.av[:, places]
-    return points
+    return _points(chain[:, :, places], derived, model)
+
+
+def _points(chain: NDArray[np.float64], derived: Derived, model: FitModel) -> NDArray[np.float64]:
+    """Return (K, 3 or more, L) of ln T, ln Omega, A_V and the rest: A_V put in where it is not among the draws."""
+    if model.prior.fit_av:
+        return np.ascontiguousarray(chain)
+    av = np.broadcast_to(derived.av[:, :1], (len(chain), chain.shape[2]))[:, None]
+    return np.concatenate([chain[:, :2], av, chain[:, 2:]], axis=1)
+
+
+def _factors(derived: Derived, no_detection: NDArray[np.bool_]) -> Columns:
+    """Return the quantiles of the first common factor; NaN without factors."""
+    values = np.full((len(no_detection), len(QUANTILE_NAMES)), np.nan)
+    if len(derived.z):
+        values = quantiles(derived.z[0])
+        values[no_detection] = np.nan
+    return {f"photosphere_z1_{name}": values[:, place] for name, place in (("lo68", 1), ("p50", 2), ("hi68", 3))}
 
 
 def _agreement(fitted: Fitted, derived: Derived, model: FitModel, settings: Settings) -> Columns:
     n_bands = len(model.floor)
     mode = compare(mode_points(fitted, derived, model), fitted.block, model.grid, model.prior, n_bands)
-    drawn: Agreement = compare(_thinned(fitted, derived), fitted.block, model.grid, model.prior, n_bands)
+    drawn: Agreement = compare(_thinned(fitted, derived, model), fitted.block, model.grid, model.prior, n_bands)
     measured = _measured_bands(fitted.block)
     chance = predictive_chance(drawn.chi2, measured, model.prior)
     columns: Columns = {
@@ -216,6 +227,9 @@ def _flags(
             "poor_fit": columns["ppp_value"] < POOR_FIT,
             "band_outlier": _any_band(columns, "outlier", list(model.passbands), OUTLIER),
             "infrared_excess": _excess(columns, model, lambda pivot_um: pivot_um > INFRARED_UM),
+            "odd_photosphere": np.abs(columns["photosphere_z1_p50"]) > ODD_SIGMA,
+            "outside_calibration": _outside_calibration(stars, columns, model),
+            "blackbody_chosen": np.full(len(stars), settings.model.photosphere == "auto" and model.departures is None),
             "ultraviolet_excess": _excess(columns, model, lambda pivot_um: pivot_um < ULTRAVIOLET_UM),
             **_at_bounds(derived, model.prior, settings),
         }
@@ -223,6 +237,15 @@ def _flags(
     for name, rows in raised.items():
         flags |= np.where(rows, np.int32(BY_NAME[name].value), np.int32(0))
     return flags
+
+
+def _outside_calibration(stars: Stars, columns: Columns, model: FitModel) -> NDArray[np.bool_]:
+    """Return whether more than half of a star's bands rest on a guess, or on departures of other temperatures."""
+    if model.departures is None:
+        return np.zeros(len(stars), bool)
+    teff_k = np.nan_to_num(columns["teff_p50"], nan=1.0)
+    good = model.departures.holds(teff_k).T & model.departures.served
+    return np.asarray((stars.usable & ~good).sum(axis=1) > 0.5 * stars.usable.sum(axis=1))
 
 
 def _several_modes(derived: Derived) -> NDArray[np.bool_]:

@@ -99,6 +99,22 @@ _SINGLE = (
     ),
     Column("photosphere", pa.string(), None, "meta.code.class", "Photosphere model that was fitted"),
     Column(
+        "ln_evidence_ratio",
+        pa.float32(),
+        None,
+        "stat.likelihood",
+        "Log odds of a bare blackbody against the calibrated photosphere, prior fraction included; null unless auto",
+    ),
+    Column(
+        "photosphere_z1_p50",
+        pa.float32(),
+        None,
+        "stat.value;stat.median",
+        "Common departure z_1 of all bands from the mean photosphere, in sigmas of the reference stars, median",
+    ),
+    Column("photosphere_z1_lo68", pa.float32(), None, "stat.value", "z_1, lower end of the central 68 % interval"),
+    Column("photosphere_z1_hi68", pa.float32(), None, "stat.value", "z_1, upper end of the central 68 % interval"),
+    Column(
         "chi2",
         pa.float32(),
         None,
@@ -113,7 +129,7 @@ _SINGLE = (
         None,
         "stat.probability",
         "Posterior predictive p-value: mean over posterior draws of the chance "
-        "of a chi squared at least as large",
+        "of a chi squared at least as large, outlying bands allowed for",
     ),
 )
 

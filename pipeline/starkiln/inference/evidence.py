@@ -1,0 +1,100 @@
+"""The evidence of a model for each star, by importance sampling from the proposal that its burn-in has learnt."""
+
+from __future__ import annotations
+
+from math import gamma, log, pi
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from starkiln.inference.compile import kernel
+from starkiln.inference.ensemble import burn_in, log_prob_function
+from starkiln.inference.moves import TAIL, add_log_independent, draw_independent, make_scratch
+from starkiln.inference.posterior import HALF_LN_2PI, Block, Grid, Prior
+from starkiln.inference.start import Modes
+
+
+class WeightedDraws(NamedTuple):
+    """Independent draws of each star's posterior with their weights.
+
+    Attributes
+    ----------
+    coords
+        (S, N, ndim), in the walkers' coordinates.
+    log_weight
+        (S, N): posterior density, factors' priors normalised, over the density drawn from; its mean is the evidence
+        up to the constants that models of one set of priors share.
+    """
+
+    coords: NDArray[np.float64]
+    log_weight: NDArray[np.float64]
+
+
+def importance_draws(
+    block: Block,
+    grid: Grid,
+    prior: Prior,
+    streams: NDArray[np.uint64],
+    walkers: int,
+    modes: Modes,
+    n_draws: int = 1024,
+) -> WeightedDraws:
+    """Draw from each star's learnt proposal and weigh the draws by the posterior.
+
+    Parameters
+    ----------
+    streams
+        (S, 4) uint64, advanced in place.
+    """
+    run = burn_in(block, grid, prior, streams, walkers, modes)
+    n_stars, ndim = run.proposal.centre.shape
+    coords = np.empty((n_stars, n_draws, ndim))
+    log_density = np.zeros((n_stars, n_draws))
+    _draw(run.proposal, run.streams, coords, log_density)
+    log_prob = log_prob_function(block, grid, prior)(coords.reshape(-1, ndim)).reshape(n_stars, n_draws)
+    constant = _log_constant(1) + (_log_constant(ndim - 1) if ndim > 1 else 0.0)
+    log_weight = log_prob - log_density - constant - HALF_LN_2PI * len(grid.loading)
+    return WeightedDraws(coords, log_weight)
+
+
+def _log_constant(ndim: int) -> float:
+    """Return the log normalisation of a standard multivariate t."""
+    return log(gamma(0.5 * (TAIL + ndim)) / gamma(0.5 * TAIL)) - 0.5 * ndim * log(pi * TAIL)
+
+
+@kernel
+def _draw(proposal, streams, coords, log_density):
+    n_stars, n_draws, ndim = coords.shape
+    scratch = make_scratch(ndim, n_draws)
+    for star in range(n_stars):
+        draw_independent(proposal, star, streams[star], scratch, coords[star])
+        add_log_independent(proposal, star, scratch.x, 1.0, log_density[star])
+        volume = 0.0
+        for k in range(ndim):
+            volume += np.log(proposal.factor[star, k, k])
+        for i in range(n_draws):
+            log_density[star, i] -= volume
+
+
+def log_mean_exp(log_values: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return ln of the mean of exp over the last axis, (S,), summed in order."""
+    out = np.empty(len(log_values))
+    _log_mean_exp(log_values, out)
+    return out
+
+
+@kernel
+def _log_mean_exp(log_values, out):
+    n = log_values.shape[1]
+    for star in range(log_values.shape[0]):
+        largest = -np.inf
+        for i in range(n):
+            largest = max(largest, log_values[star, i])
+        if largest == -np.inf:
+            out[star] = -np.inf
+            continue
+        total = 0.0
+        for i in range(n):
+            total += np.exp(log_values[star, i] - largest)
+        out[star] = largest + np.log(total / n)
