@@ -7,14 +7,13 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.errors import SettingsError, UnknownPassband, nearest
 from starkiln.inference.posterior import Grid, Prior
-from starkiln.physics.bandtable import BandTable, build_band_table
+from starkiln.physics.bandtable import BandTable
 from starkiln.physics.constants import PARSEC_M, RSUN_M
-from starkiln.physics.extinction import law_names
-from starkiln.physics.passbands import Passband, builtin_names, load_passband, read_passband, zero_point_jy
+from starkiln.physics.passbands import Passband
 from starkiln.settings import Settings
 from starkiln.settings.models import PhotometryColumns
+from starkiln.stages.bands import build_bands
 
 METHOD_VERSION = 1
 """Goes up with every change of the method that changes a number of the catalogue."""
@@ -60,20 +59,9 @@ def build_model(settings: Settings) -> FitModel:
     SettingsError
         If a passband, a zero point or the extinction law is not known, or there are too few walkers.
     """
-    passbands = {
-        band.label: _passband(settings, band, f"input.photometry[{place}]")
-        for place, band in enumerate(settings.input.photometry)
-    }
+    passbands, table = build_bands(settings)
     extinction = settings.model.extinction
-    if extinction.law not in law_names():
-        raise SettingsError(
-            f"model.extinction.law: no law is named {extinction.law!r}{nearest(extinction.law, law_names())}; "
-            f"known are {', '.join(law_names())}"
-        )
     teff_min, teff_max = settings.model.temperature_k
-    table = build_band_table(
-        list(passbands.values()), teff_min, teff_max, extinction.max, extinction.law, extinction.rv
-    )
     radius_min, radius_max = np.log(settings.model.radius_rsun) + LN_RSUN_PC
     distance_min, distance_max = np.log(settings.model.distance.bounds_pc)
     outliers = settings.model.outliers
@@ -87,12 +75,6 @@ def build_model(settings: Settings) -> FitModel:
         outlier_fraction=outliers.fraction if outliers else 0.0,
         outlier_width=outliers.width if outliers else 10.0,
     )
-    n_parameters = 3 if prior.fit_av else 2
-    if settings.sampling.walkers < 2 * (n_parameters + 1):
-        raise SettingsError(
-            f"sampling.walkers is {settings.sampling.walkers}: {n_parameters} parameters need at least "
-            f"{2 * (n_parameters + 1)}"
-        )
     n_rows, n_columns = table.coef.shape[1:]
     return FitModel(
         passbands=passbands,
@@ -102,27 +84,6 @@ def build_model(settings: Settings) -> FitModel:
         prior=prior,
         ln_radius_bounds_pc=(float(radius_min), float(radius_max)),
     )
-
-
-def _passband(settings: Settings, band: PhotometryColumns, key: str) -> Passband:
-    own = {file.name: file for file in settings.passband}
-    if band.passband in own:
-        file = own[band.passband]
-        passband = read_passband(
-            file.curve, file.name, file.detector, file.zero_point_jy, file.zero_point_error, file.source
-        )
-    else:
-        try:
-            passband = load_passband(band.passband)
-        except UnknownPassband as error:
-            near = nearest(band.passband, own) if band.passband not in builtin_names() else ""
-            raise UnknownPassband(f"{key}.passband: {error}{near}") from None
-    if band.system is not None and band.zero_point_jy is None:
-        try:
-            zero_point_jy(passband, band.system)
-        except SettingsError as error:
-            raise SettingsError(f"{key}.system: {error}") from None
-    return passband
 
 
 def _floor(band: PhotometryColumns, passband: Passband) -> float:
