@@ -30,6 +30,9 @@ class NoModel:
     def digests(self) -> dict[str, str]:
         return {}
 
+    def departures_digest(self) -> str:
+        return ""
+
 
 def build_no_model(settings: Settings) -> NoModel:
     return NoModel()

@@ -92,13 +92,13 @@ def check(config: Config, debug: Debug = False) -> None:
     """Check settings, passbands and the footers of the input tables, and print the plan."""
     with _errors_told(debug):
         from starkiln.engine.check import describe_plan
-        from starkiln.engine.job import fitting_stages
         from starkiln.settings import load_settings
+        from starkiln.stages.bands import build_bands
         from starkiln.tables.source import open_source
 
         settings = load_settings(config)
         source = open_source(settings)
-        fitting_stages().build_model(settings)
+        build_bands(settings)
         print(describe_plan(source, settings))
 
 

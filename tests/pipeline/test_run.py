@@ -85,6 +85,16 @@ def test_the_same_bytes_for_any_parts_workers_and_row_groups(survey, tmp_path, m
     assert {name.split("/")[0] for name in expected} == set(TABLES)
 
 
+def test_a_second_run_publishes_the_same_bytes(survey):
+    settings = survey(sampling__keep_draws=3)
+    first, second = run_settings(settings).path, run_settings(settings).path
+    assert (first.name, second.name) == ("000001", "000002")
+    files = sorted(path.relative_to(first) for path in first.rglob("*.parquet"))
+    assert {path.parts[0] for path in files} == {*TABLES, "draws"}
+    for path in files:
+        assert (first / path).read_bytes() == (second / path).read_bytes()
+
+
 def test_the_catalogue_in_memory_has_the_same_rows(survey):
     settings = survey()
     published = pq.read_table(run_settings(settings).path / "catalogue").to_pandas()

@@ -163,3 +163,14 @@ def test_a_signal_ends_with_5_and_no_word_if_quiet(command, config, monkeypatch,
 def signal_this_process(*arguments):
     os.kill(os.getpid(), signal.SIGTERM)
     raise ArithmeticError
+
+
+def test_check_compiles_nothing(config):
+    code = (
+        f"import sys; sys.argv = ['starkiln', 'check', {str(config)!r}]\n"
+        "from starkiln import cli\n"
+        "try:\n    cli.main()\n"
+        "finally:\n    print([name for name in ('numba', 'emcee', 'scipy.stats') if name in sys.modules])"
+    )
+    shown = subprocess.run([sys.executable, "-c", code], check=True, capture_output=True, text=True)
+    assert shown.stdout.splitlines()[-1] == "[]"

@@ -1,5 +1,4 @@
 import os
-from collections import Counter
 
 import numpy as np
 import pyarrow as pa
@@ -9,15 +8,14 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from small_survey import settings_for, stars, with_column
+from starkiln.engine import repeats
 from starkiln.engine.plan import (
-    copies,
     even_parts,
     file_stamp,
     make_plan,
-    mark_repeats,
-    read_marks,
     rows_per_part,
 )
+from starkiln.engine.repeats import copies, read_marks
 from starkiln.errors import EnvironmentTrouble, InputError
 from starkiln.tables.source import open_source
 
@@ -32,21 +30,6 @@ def plan_of(tmp_path, tables, row_group_size=30, workers=1, **changes):
     settings = settings_for(folder, **changes)
     source = open_source(settings)
     return source, make_plan(source, settings, workers, scratch)
-
-
-@given(
-    ids=st.lists(st.integers(0, 12), max_size=40),
-    order=st.randoms(use_true_random=False),
-)
-def test_the_first_copy_in_input_order_is_told_from_later_ones(ids, order):
-    rows = np.array(sorted(order.sample(range(1000), len(ids))), np.int64)
-    shuffled = np.array(order.sample(range(len(ids)), len(ids)), np.int64)
-    marks = mark_repeats(np.array(ids, np.int64)[shuffled], rows[shuffled])
-    seen, counts, expected = Counter(), Counter(ids), []
-    for star in ids:
-        seen[star] += 1
-        expected.append(0 if counts[star] == 1 else 1 if seen[star] == 1 else 2)
-    assert copies(marks, rows).tolist() == expected
 
 
 @given(rows=st.integers(0, 10_000), most=st.integers(1, 3000))
@@ -151,3 +134,11 @@ def test_stamps_tell_size_and_time_of_each_file(tmp_path):
     source, plan = plan_of(tmp_path, [stars(3), stars(4, 4)])
     paths = [file.path for file in source.files]
     assert plan.stamps == tuple((os.stat(path).st_size, os.stat(path).st_mtime_ns) for path in paths)
+
+
+def test_ids_whose_hashes_agree_in_half_their_bits_are_no_repeats(tmp_path, monkeypatch):
+    monkeypatch.setattr(repeats, "digest", lambda star_id: b"the same" + star_id.rjust(8))
+    tables = [with_column(stars(3), "star_id", ids) for ids in ([5, 6, 7], [8, 6, 9])]
+    _, plan = plan_of(tmp_path, tables)
+    assert plan.duplicates == 1
+    assert copies(read_marks(tmp_path / "scratch" / "marks", 0, 6), np.arange(6)).tolist() == [0, 1, 0, 0, 2, 0]

@@ -9,6 +9,9 @@ class OneBand(NoModel):
     def digests(self):
         return {"panstarrs_g": "abc"}
 
+    def departures_digest(self) -> str:
+        return ""
+
 
 def key(settings, model=None):
     return provenance.hashes(settings, model or NoModel())["fit_key"]

@@ -104,7 +104,7 @@ def test_other_tables_and_chosen_columns(run_dir):
 
 def test_run_that_has_published_nothing(tmp_path):
     (tmp_path / "generations").mkdir()
-    with pytest.raises(InputError, match=r"no catalogue has been published yet; `starkiln status`"):
+    with pytest.raises(InputError, match=r"no catalogue has been published yet: `starkiln run`"):
         read(tmp_path)
 
 

@@ -12,12 +12,12 @@ import pyarrow as pa
 from astropy.table import Column, MaskedColumn, Table
 
 from starkiln.engine.job import Stages, fitting_stages
-from starkiln.engine.plan import copies, even_parts, mark_repeats
+from starkiln.engine.plan import even_parts
+from starkiln.engine.repeats import copies, id_digests, mark_repeats
 from starkiln.errors import InputError, nearest
 from starkiln.settings import Settings, build_settings, load_settings
 from starkiln.tables.checks import column_problem, column_uses, handed_out_type
 from starkiln.tables.filters import RowFilter
-from starkiln.tables.hashes import id_hashes
 
 TABLE_NAME = "table"
 """Stands for the input file in the rejected rows."""
@@ -123,8 +123,8 @@ def _selected(table: pa.Table, settings: Settings) -> pa.Table:
     table = table.append_column("_input_row", pa.array(np.arange(table.num_rows)))
     table = RowFilter(settings, schema).keep(table)
     rows = table["_input_row"].to_numpy()
-    hashes, has_id = id_hashes(table[settings.input.id])
-    copy = copies(mark_repeats(hashes[has_id], rows[has_id]), rows)
+    digests, has_id = id_digests(table[settings.input.id])
+    copy = copies(mark_repeats(digests[has_id], rows[has_id]), rows)
     wanted = [*settings.used_columns(), "_input_file", "_input_row"]
     return table.select(wanted).append_column("_duplicate", pa.array(copy))
 

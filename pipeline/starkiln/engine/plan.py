@@ -15,16 +15,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from starkiln.engine.buckets import Buckets
+from starkiln.engine.repeats import RECORD, id_digests, mark_repeats
 from starkiln.errors import EnvironmentTrouble, InputError
 from starkiln.settings import Settings
-from starkiln.tables.hashes import id_hashes
 from starkiln.tables.source import Source, SourceBatch, read_rows
 
 BATCH_ROWS = 65_536
 SMALLEST_PART = 250
 """Parts are made smaller than asked for to keep all workers busy, but not smaller than this."""
-
-_RECORD = np.dtype([("id_hash", "<i8"), ("position", "<i8")])
 
 
 @dataclass(frozen=True)
@@ -129,12 +127,12 @@ def make_plan(
     pieces, piece_rows = _pieces(source)
     starts = np.concatenate([[0], np.cumsum(piece_rows)]).astype(np.int64)
     selected = np.zeros(len(pieces), np.int64)
-    buckets = Buckets(scratch / "ids", int(starts[-1]), _RECORD)
+    buckets = Buckets(scratch / "ids", int(starts[-1]), RECORD)
     for batch in read_rows(source, settings, pieces, [settings.input.id], BATCH_ROWS):
         positions = row_positions(source, batch)
         selected += np.bincount(np.searchsorted(starts, positions, side="right") - 1, minlength=len(pieces))
-        hashes, has_id = id_hashes(batch.table[settings.input.id])
-        buckets.add(id_hash=hashes[has_id], position=positions[has_id])
+        digests, has_id = id_digests(batch.table[settings.input.id])
+        buckets.add(id_hash=digests[has_id, 0], more_hash=digests[has_id, 1], row=positions[has_id])
         between_batches(batch.read)
     if not selected.sum():
         raise InputError(
@@ -143,7 +141,7 @@ def make_plan(
     duplicates = 0
     (scratch / "marks").mkdir()
     for number, records in enumerate(buckets.drain()):
-        marks = mark_repeats(records["id_hash"], records["position"])
+        marks = mark_repeats(np.stack([records["id_hash"], records["more_hash"]], axis=1), records["row"])
         duplicates += int((marks & 1).sum())
         if len(marks):
             np.save(scratch / "marks" / f"{number:06d}.npy", marks)
@@ -176,50 +174,6 @@ def _pieces(source: Source) -> tuple[list[tuple[int, int]], list[int]]:
             pieces.append((file_index, row_group))
             rows.append(group_rows)
     return pieces, rows
-
-
-def mark_repeats(hashes: NDArray[np.int64], rows: NDArray[np.int64]) -> NDArray[np.int64]:
-    """Return 2 * row for the first copy and 2 * row + 1 for each later copy of a repeated id, ascending."""
-    order = np.lexsort((rows, hashes))
-    hashes, rows = hashes[order], rows[order]
-    later, repeated = np.zeros(len(rows), bool), np.zeros(len(rows), bool)
-    later[1:] = repeated[:-1] = hashes[1:] == hashes[:-1]
-    repeated |= later
-    return np.sort(2 * rows[repeated] + later[repeated])
-
-
-def copies(marks: NDArray[np.int64], rows: NDArray[np.int64]) -> NDArray[np.int8]:
-    """Return 0 for rows whose id is unique, 1 for the first copy of a repeated one, 2 for later copies.
-
-    Parameters
-    ----------
-    marks
-        What `mark_repeats` returned.
-    rows
-        Places of the rows, ascending.
-    """
-    first, after = np.searchsorted(marks, 2 * rows), np.searchsorted(marks, 2 * rows + 2)
-    copy = np.zeros(len(rows), np.int8)
-    copy[after > first] = 1 + (marks[first[after > first]] & 1)
-    return copy
-
-
-def read_marks(folder: Path, first_row: int, last_row: int) -> NDArray[np.int64]:
-    """Return the marks, ascending, of the rows from `first_row` to before `last_row`.
-
-    Parameters
-    ----------
-    folder
-        The folder of marks that `make_plan` wrote below its scratch folder.
-    first_row, last_row
-        Places of rows, counted through all files.
-    """
-    found = []
-    for path in sorted(folder.glob("*.npy")):
-        marks = np.load(path, mmap_mode="r")
-        low, high = np.searchsorted(marks, [2 * first_row, 2 * last_row])
-        found.append(np.array(marks[low:high]))
-    return np.sort(np.concatenate([np.zeros(0, np.int64), *found]))
 
 
 def _deal(

@@ -14,7 +14,8 @@ import pyarrow as pa
 
 from starkiln.engine.closing import part_path
 from starkiln.engine.job import Job, SavedJob, open_job
-from starkiln.engine.plan import BATCH_ROWS, Unit, copies, file_stamp, read_marks, row_positions
+from starkiln.engine.plan import BATCH_ROWS, Unit, file_stamp, row_positions
+from starkiln.engine.repeats import copies, read_marks
 from starkiln.engine.resources import peak_memory
 from starkiln.errors import EnvironmentTrouble
 from starkiln.flags import FLAGS

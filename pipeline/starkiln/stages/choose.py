@@ -74,11 +74,11 @@ def _ln_radius_prior(draws: WeightedDraws, stars: Stars, model: FitModel) -> NDA
     ln_teff = LN_HEAT_K - np.log(draws.coords[:, :, 0])
     ln_radius = np.log(distance_pc)[:, None] + 0.5 * (draws.coords[:, :, 1] - ln_teff) - LN_RSUN_PC
     if model.departures is None:
-        low = float(np.log(COMPACT_RSUN[0]))
-        high = np.where(ln_teff > np.log(HOT_COMPACT_K), np.log(HOT_COMPACT_RSUN[1]), np.log(COMPACT_RSUN[1]))
+        hot = ln_teff > np.log(HOT_COMPACT_K)
+        low_rsun, high_rsun = COMPACT_RSUN[0], np.where(hot, HOT_COMPACT_RSUN[1], COMPACT_RSUN[1])
     else:
-        low = float(np.log(ORDINARY_RSUN[0]))
-        high = np.full_like(ln_radius, np.log(ORDINARY_RSUN[1]))
+        low_rsun, high_rsun = ORDINARY_RSUN[0], np.full(ln_teff.shape, ORDINARY_RSUN[1])
+    low, high = float(np.log(low_rsun)), np.asarray(np.log(high_rsun))
     share = ndtr((high - ln_radius) / smear) - ndtr((low - ln_radius) / smear)
     with np.errstate(divide="ignore"):
         return np.where(known[:, None], np.log(share / (high - low)), 0.0)

@@ -8,15 +8,14 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.errors import SettingsError, UnknownPassband, nearest
-from starkiln.inference.posterior import Grid, Prior, n_parameters
-from starkiln.physics.bandtable import BandTable, build_band_table, spline_coefficients
+from starkiln.inference.posterior import Grid, Prior
+from starkiln.physics.bandtable import BandTable, spline_coefficients
 from starkiln.physics.constants import PARSEC_M, RSUN_M
-from starkiln.physics.departures import DepartureMismatch, Departures, builtin_departures, read_departures
-from starkiln.physics.extinction import law_names
-from starkiln.physics.passbands import Passband, builtin_names, load_passband, read_passband, zero_point_jy
+from starkiln.physics.departures import Departures
+from starkiln.physics.passbands import Passband
 from starkiln.settings import Settings
 from starkiln.settings.models import PhotometryColumns
+from starkiln.stages.bands import build_bands
 
 METHOD_VERSION = 2
 """Goes up with every change of the method that changes a number of the catalogue."""
@@ -87,23 +86,9 @@ def build_model(settings: Settings) -> FitModel:
         If a passband, a zero point, the extinction law or the departures are not known or do not fit together, or
         there are too few walkers.
     """
-    passbands = {
-        band.label: _passband(settings, band, f"input.photometry[{place}]")
-        for place, band in enumerate(settings.input.photometry)
-    }
-    extinction = settings.model.extinction
-    if extinction.law not in law_names():
-        raise SettingsError(
-            f"model.extinction.law: no law is named {extinction.law!r}{nearest(extinction.law, law_names())}; "
-            f"known are {', '.join(law_names())}"
-        )
-    teff_min, teff_max = settings.model.temperature_k
-    table = build_band_table(
-        list(passbands.values()), teff_min, teff_max, extinction.max, extinction.law, extinction.rv
-    )
+    passbands, table, departures = build_bands(settings)
     prior, ln_radius_bounds = _prior(settings)
     floor = np.array([_floor(band, passbands[band.label]) for band in settings.input.photometry])
-    photosphere = settings.model.photosphere
 
     def blackbody(scatter: float) -> FitModel:
         grid = _grid(
@@ -111,25 +96,21 @@ def build_model(settings: Settings) -> FitModel:
         )
         return FitModel("blackbody", passbands, floor, table, grid, prior, ln_radius_bounds, None, None)
 
-    if photosphere == "blackbody":
-        model = blackbody(0.0)
-    else:
-        departures = _departures(settings, passbands)
-        at_nodes = departures.at(table.teff_nodes_k)
-        lifted = replace(table, coef=table.coef + spline_coefficients(at_nodes.ln_d.T).T[:, :, np.newaxis])
-        model = FitModel(
-            photosphere="calibrated",
-            passbands=passbands,
-            floor=floor,
-            table=lifted,
-            grid=_grid(lifted, at_nodes.loading, at_nodes.scatter),
-            prior=prior,
-            ln_radius_bounds_pc=ln_radius_bounds,
-            departures=departures,
-            rival=blackbody(settings.model.blackbody.scatter) if photosphere == "auto" else None,
-        )
-    _check_walkers(settings, model)
-    return model
+    if departures is None:
+        return blackbody(0.0)
+    at_nodes = departures.at(table.teff_nodes_k)
+    lifted = replace(table, coef=table.coef + spline_coefficients(at_nodes.ln_d.T).T[:, :, np.newaxis])
+    return FitModel(
+        photosphere="calibrated",
+        passbands=passbands,
+        floor=floor,
+        table=lifted,
+        grid=_grid(lifted, at_nodes.loading, at_nodes.scatter),
+        prior=prior,
+        ln_radius_bounds_pc=ln_radius_bounds,
+        departures=departures,
+        rival=blackbody(settings.model.blackbody.scatter) if settings.model.photosphere == "auto" else None,
+    )
 
 
 def _prior(settings: Settings) -> tuple[Prior, tuple[float, float]]:
@@ -168,45 +149,6 @@ def _grid(table: BandTable, loading: NDArray[np.float64], scatter: NDArray[np.fl
         loading=spline,
         scatter=np.ascontiguousarray(spline_coefficients(scatter.T).T),
     )
-
-
-def _departures(settings: Settings, passbands: dict[str, Passband]) -> Departures:
-    source = settings.model.departures
-    departures = builtin_departures() if source == "builtin" else read_departures(source)
-    try:
-        return departures.for_bands(list(passbands.values()))
-    except DepartureMismatch as error:
-        raise DepartureMismatch(f"model.departures: {error}") from None
-
-
-def _check_walkers(settings: Settings, model: FitModel) -> None:
-    parameters = n_parameters(model.grid, model.prior)
-    needed = 2 * (parameters + 1)
-    if settings.sampling.walkers < needed:
-        raise SettingsError(
-            f"sampling.walkers is {settings.sampling.walkers}: {parameters} parameters need at least {needed}"
-        )
-
-
-def _passband(settings: Settings, band: PhotometryColumns, key: str) -> Passband:
-    own = {file.name: file for file in settings.passband}
-    if band.passband in own:
-        file = own[band.passband]
-        passband = read_passband(
-            file.curve, file.name, file.detector, file.zero_point_jy, file.zero_point_error, file.source
-        )
-    else:
-        try:
-            passband = load_passband(band.passband)
-        except UnknownPassband as error:
-            near = nearest(band.passband, own) if band.passband not in builtin_names() else ""
-            raise UnknownPassband(f"{key}.passband: {error}{near}") from None
-    if band.system is not None and band.zero_point_jy is None:
-        try:
-            zero_point_jy(passband, band.system)
-        except SettingsError as error:
-            raise SettingsError(f"{key}.system: {error}") from None
-    return passband
 
 
 def _floor(band: PhotometryColumns, passband: Passband) -> float:

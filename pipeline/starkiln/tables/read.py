@@ -82,9 +82,7 @@ def _files(path: Path, table: str) -> list[Path]:
         if folder.is_dir():
             return find_files(str(folder))[1]
     if (path / "generations").is_dir():
-        raise InputError(
-            f"{path}: no {table} has been published yet; `starkiln status` tells where the run stands"
-        )
+        raise InputError(f"{path}: no {table} has been published yet: `starkiln run` publishes when every row is done")
     return find_files(str(path))[1]
 
 

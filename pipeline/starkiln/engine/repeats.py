@@ -1,0 +1,83 @@
+"""Ids that come more than once: the first copy is fitted, later ones are rejected."""
+
+from __future__ import annotations
+
+import hashlib
+from pathlib import Path
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+
+from starkiln.tables.hashes import canonical_ids
+
+RECORD = np.dtype([("id_hash", "<i8"), ("more_hash", "<i8"), ("row", "<i8")])
+"""What is remembered of a row until its bucket is searched: the two halves of its id's digest, and its place."""
+
+
+def id_digests(ids: pa.Array | pa.ChunkedArray) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
+    """Return the 128-bit digest of each id as two integers, (n, 2), and whether the row has an id (0 where not).
+
+    Among n ids, two share a digest with a chance of n**2 / 2**129: 1e-21 for a billion (the birthday bound).
+    """
+    canonical = canonical_ids(ids)
+    has_id = np.array([star_id is not None for star_id in canonical], bool)
+    digests = np.frombuffer(b"".join(digest(star_id or b"") for star_id in canonical), "<i8").reshape(-1, 2)
+    return np.where(has_id[:, None], digests, 0).astype(np.int64), has_id
+
+
+def digest(star_id: bytes) -> bytes:
+    """Return the 16 bytes that stand for an id."""
+    return hashlib.blake2b(star_id, digest_size=16).digest()
+
+
+def mark_repeats(digests: NDArray[np.int64], rows: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Return 2 * row for the first copy and 2 * row + 1 for each later copy of a repeated id, ascending.
+
+    Parameters
+    ----------
+    digests
+        (n, 2), as `id_digests` gives them.
+    rows
+        (n,), places of the rows.
+    """
+    order = np.lexsort((rows, digests[:, 1], digests[:, 0]))
+    digests, rows = digests[order], rows[order]
+    later, repeated = np.zeros(len(rows), bool), np.zeros(len(rows), bool)
+    later[1:] = repeated[:-1] = (digests[1:] == digests[:-1]).all(axis=1)
+    repeated |= later
+    return np.sort(2 * rows[repeated] + later[repeated])
+
+
+def copies(marks: NDArray[np.int64], rows: NDArray[np.int64]) -> NDArray[np.int8]:
+    """Return 0 for rows whose id is unique, 1 for the first copy of a repeated one, 2 for later copies.
+
+    Parameters
+    ----------
+    marks
+        What `mark_repeats` returned.
+    rows
+        Places of the rows, ascending.
+    """
+    first, after = np.searchsorted(marks, 2 * rows), np.searchsorted(marks, 2 * rows + 2)
+    copy = np.zeros(len(rows), np.int8)
+    copy[after > first] = 1 + (marks[first[after > first]] & 1)
+    return copy
+
+
+def read_marks(folder: Path, first_row: int, last_row: int) -> NDArray[np.int64]:
+    """Return the marks, ascending, of the rows from `first_row` to before `last_row`.
+
+    Parameters
+    ----------
+    folder
+        The folder of marks that the plan wrote below its scratch folder.
+    first_row, last_row
+        Places of rows, counted through all files.
+    """
+    found = []
+    for path in sorted(folder.glob("*.npy")):
+        marks = np.load(path, mmap_mode="r")
+        low, high = np.searchsorted(marks, [2 * first_row, 2 * last_row])
+        found.append(np.array(marks[low:high]))
+    return np.sort(np.concatenate([np.zeros(0, np.int64), *found]))
