@@ -20,6 +20,7 @@ HOT_COMPACT_K = 20_000.0
 ORDINARY_RSUN = (0.07, 3e3)
 PARALLAX_SIGMA = 3.0  # below this the radius says nothing
 ENOUGH_BANDS = 5
+LEAK = 1e-10  # share of either kind that has any radius at all, so that no odds are infinite
 UNLESS_ABOVE = 5.0  # log ratio that a star with too little data needs
 
 
@@ -80,5 +81,4 @@ def _ln_radius_prior(draws: WeightedDraws, stars: Stars, model: FitModel) -> NDA
         low_rsun, high_rsun = ORDINARY_RSUN[0], np.full(ln_teff.shape, ORDINARY_RSUN[1])
     low, high = float(np.log(low_rsun)), np.asarray(np.log(high_rsun))
     share = ndtr((high - ln_radius) / smear) - ndtr((low - ln_radius) / smear)
-    with np.errstate(divide="ignore"):
-        return np.where(known[:, None], np.log(share / (high - low)), 0.0)
+    return np.where(known[:, None], np.log((share + LEAK) / (high - low)), 0.0)
