@@ -72,7 +72,8 @@ def _ln_radius_prior(draws: WeightedDraws, stars: Stars, model: FitModel) -> NDA
     )
     distance_pc = np.where(known, distance_pc, 1.0)
     smear = np.where(known, np.maximum(error, 0.02), 1.0)[:, None]
-    ln_teff = LN_HEAT_K - np.log(draws.coords[:, :, 0])
+    # Draws beyond the hottest temperature have no weight; they only must not spoil the logarithm.
+    ln_teff = LN_HEAT_K - np.log(np.maximum(draws.coords[:, :, 0], 1e-9))
     ln_radius = np.log(distance_pc)[:, None] + 0.5 * (draws.coords[:, :, 1] - ln_teff) - LN_RSUN_PC
     if model.departures is None:
         hot = ln_teff > np.log(HOT_COMPACT_K)
