@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.interpolate import BSpline
 from scipy.special import log_ndtr
-from scipy.stats import norm
+from scipy.stats import expon, norm
 
 from starkiln.physics.bandtable import ln_flux
 from starkiln.settings import Settings
@@ -23,8 +24,14 @@ def log_posterior(
     star: int,
     model: FitModel,
     settings: Settings,
+    z: NDArray[np.float64] | None = None,
+    ln_jitter: NDArray[np.float64] | None = None,
+    factor_scale: float = 1.0,
 ) -> NDArray[np.float64]:
-    """Return the log density in (ln T, ln Omega, A_V), for a half-normal prior of A_V or a fixed one."""
+    """Return the log density in (ln T, ln Omega, A_V, z, ln jitter) at N points; z is (K, N).
+
+    The densities of A_V, of z and of the data are normalised, but for the cut of A_V at its bounds.
+    """
     prior = model.prior
     inside = (
         (ln_teff >= prior.ln_teff_min)
@@ -34,15 +41,23 @@ def log_posterior(
         & (av >= 0.0)
         & (av <= prior.av_max)
     )
-    total = np.where(inside, 0.0, -np.inf)
-    if prior.fit_av:
-        total = total + norm.logpdf(av, 0.0, stars.av_scale[star])
-    teff_k = np.exp(np.clip(ln_teff, prior.ln_teff_min, prior.ln_teff_max))
-    flux = np.exp(ln_flux(model.table, teff_k, np.clip(av, 0.0, prior.av_max)) + ln_omega[:, None])
+    jitter = np.zeros_like(ln_teff)
+    if ln_jitter is not None:
+        inside &= (ln_jitter >= prior.ln_jitter_min) & (ln_jitter <= 0.0)
+        jitter = np.exp(ln_jitter)
+    total = np.where(inside, _log_av_prior(av, stars, star, settings), -np.inf)
+    ln_teff = np.clip(ln_teff, prior.ln_teff_min, prior.ln_teff_max)
+    ln_model = ln_flux(model.table, np.exp(ln_teff), np.clip(av, 0.0, prior.av_max)) + ln_omega[:, None]
+    for values, loading in zip(() if z is None else z, model.grid.loading, strict=True):
+        total = total + norm.logpdf(values)
+        ln_model = ln_model + factor_scale * (on_grid(loading, model, ln_teff) * values).T
+    flux = np.exp(ln_model)
+    scatter = factor_scale * on_grid(model.grid.scatter, model, ln_teff)
     outliers = settings.model.outliers
     for band in np.flatnonzero(stars.usable[star]):
         observed, error = stars.flux_jy[star, band], stars.error_jy[star, band]
-        sigma = np.sqrt(error**2 + (model.floor[band] * flux[:, band]) ** 2)
+        share2 = model.floor[band] ** 2 + scatter[band] ** 2 + jitter**2
+        sigma = np.sqrt(error**2 + share2 * flux[:, band] ** 2)
         if stars.limit[star, band]:
             total = total + log_ndtr((observed - flux[:, band]) / sigma)
             continue
@@ -52,6 +67,26 @@ def log_posterior(
             near = np.logaddexp(np.log1p(-outliers.fraction) + near, np.log(outliers.fraction) + far)
         total = total + near
     return total
+
+
+def _log_av_prior(av: NDArray[np.float64], stars: Stars, star: int, settings: Settings) -> NDArray[np.float64] | float:
+    scale = stars.av_scale[star]
+    match settings.model.extinction.prior:
+        case "half-normal":
+            return norm.logpdf(av, 0.0, scale)
+        case "gaussian":
+            return norm.logpdf(av, stars.av_mean[star], scale)
+        case "exponential":
+            return expon.logpdf(np.maximum(av, 0.0), 0.0, scale)
+        case _:
+            return 0.0
+
+
+def on_grid(coefficients: NDArray[np.float64], model: FitModel, ln_teff: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return (B, N) what B-spline coefficients (B, rows) on the temperature grid say."""
+    grid = model.grid
+    knots = grid.ln_teff_min + grid.ln_teff_step * (np.arange(coefficients.shape[1] + 4) - 3.0)
+    return BSpline(knots, coefficients.T, 3)(ln_teff).T
 
 
 def integrate(
