@@ -7,7 +7,7 @@ import os
 import tomllib
 from collections.abc import Iterator, Mapping
 from pathlib import Path
-from typing import Any, get_args
+from typing import Any, TypeVar, get_args
 
 from pydantic import ValidationError
 
@@ -15,6 +15,7 @@ from starkiln.errors import SettingsError, nearest
 from starkiln.settings.models import Section, Settings
 
 Loc = tuple[str | int, ...]
+AnySettings = TypeVar("AnySettings", bound=Section)
 
 _EXPECTED = {
     "string_type": "should be text in quotes",
@@ -27,6 +28,7 @@ _EXPECTED = {
     "is_instance_of": "should be a path in quotes",
     "list_type": "should be a list in square brackets",
 }
+_BAND_LISTS = (("input", "photometry"), ("forecast", "band"))
 _PATTERNS = {
     r"^[a-z0-9_]+$": "should be lower-case letters, digits and underscores only",
     r"^[A-Za-z0-9][A-Za-z0-9._-]*$": "should be letters, digits, points, hyphens and underscores only",
@@ -41,7 +43,17 @@ def load_settings(path: str | Path) -> Settings:
     SettingsError
         If the file cannot be read, is no TOML, or holds anything wrong; all problems are named at once.
     """
-    path = Path(path)
+    return load_section(Settings, Path(path))
+
+
+def load_section(model: type[AnySettings], path: Path) -> AnySettings:
+    """Return the settings of a TOML file as one of the models of a whole file.
+
+    Raises
+    ------
+    SettingsError
+        As of :func:`load_settings`.
+    """
     try:
         data = tomllib.loads(path.read_text(encoding="utf-8"))
     except OSError as error:
@@ -51,7 +63,7 @@ def load_settings(path: str | Path) -> Settings:
     except tomllib.TOMLDecodeError as error:
         raise SettingsError(f"{path}: not valid TOML: {error}") from None
     # `..` after a linked folder must mean what it means to the shell, so links are followed first.
-    return build_settings(data, folder=path.parent.resolve(), origin=str(path))
+    return build_section(model, data, folder=path.parent.resolve(), origin=str(path))
 
 
 def build_settings(data: Mapping[str, Any], folder: str | Path = "", origin: str = "settings") -> Settings:
@@ -71,25 +83,32 @@ def build_settings(data: Mapping[str, Any], folder: str | Path = "", origin: str
     SettingsError
         If anything is wrong; all problems are named at once, each with its dotted key.
     """
+    return build_section(Settings, data, folder, origin)
+
+
+def build_section(
+    model: type[AnySettings], data: Mapping[str, Any], folder: str | Path = "", origin: str = "settings"
+) -> AnySettings:
+    """Return nested dictionaries as one of the models of a whole file; the rest as of :func:`build_settings`."""
     try:
-        return Settings.model_validate(data, context={"folder": os.fspath(folder)})
+        return model.model_validate(data, context={"folder": os.fspath(folder)})
     except ValidationError as error:
-        problems = _problems(error, data, folder)
+        problems = _problems(model, error, data, folder)
     count = "1 problem" if len(problems) == 1 else f"{len(problems)} problems"
     raise SettingsError("\n  ".join([f"{origin}: {count} in the settings", *problems]))
 
 
-def _problems(error: ValidationError, data: Mapping[str, Any], folder: str | Path) -> list[str]:
+def _problems(model: type[Section], error: ValidationError, data: Mapping[str, Any], folder: str | Path) -> list[str]:
     """Describe every problem; unknown keys are set aside so that they do not hide those of whole sections."""
     found = error.errors()
     unknown = [item for item in found if item["type"] == "extra_forbidden"]
     if unknown:
         try:
-            Settings.model_validate(_without(data, unknown), context={"folder": os.fspath(folder)})
+            model.model_validate(_without(data, unknown), context={"folder": os.fspath(folder)})
             found = unknown
         except ValidationError as rest:
             found = unknown + rest.errors()
-    return [_describe(item, data) for item in found if item["type"] != "default_factory_not_called"]
+    return [_describe(model, item, data) for item in found if item["type"] != "default_factory_not_called"]
 
 
 def _without(data: Mapping[str, Any], unknown: list[Any]) -> Mapping[str, Any]:
@@ -103,17 +122,17 @@ def _without(data: Mapping[str, Any], unknown: list[Any]) -> Mapping[str, Any]:
     return pruned
 
 
-def _describe(item: Any, data: Mapping[str, Any]) -> str:
+def _describe(model: type[Section], item: Any, data: Mapping[str, Any]) -> str:
     loc, kind, value = _visible(item["loc"]), item["type"], item["input"]
     where = _dotted(loc) + _band_name(loc, data)
     if kind == "problem":
         return f"{where} {item['msg']}"
     if kind == "extra_forbidden":
-        return f"{where}: unknown key{_hint(loc)}"
+        return f"{where}: unknown key{_hint(model, loc)}"
     if kind == "missing" and isinstance(loc[-1], int):
         return f"{_dotted(loc[:-1])}: {_EXPECTED['too_short']}"
     if kind == "missing":
-        return f"{where} is missing: {_meaning(loc)}"
+        return f"{where} is missing: {_meaning(model, loc)}"
     if isinstance(value, dict) and kind == "list_type":
         return f"{where}: write its header with double brackets, [[{_dotted(loc)}]]"
     if kind in ("model_type", "dict_type"):
@@ -141,9 +160,9 @@ def _dotted(loc: Loc) -> str:
 
 def _band_name(loc: Loc, data: Mapping[str, Any]) -> str:
     """Name the passband beside its place in the list, which nobody likes to count."""
-    if loc[:2] != ("input", "photometry") or len(loc) < 3:
+    if loc[:2] not in _BAND_LISTS or len(loc) < 3:
         return ""
-    band = data["input"]["photometry"][loc[2]]
+    band = data[str(loc[0])][str(loc[1])][loc[2]]
     name = band.get("passband") if isinstance(band, dict) else None
     return f" ({name})" if isinstance(name, str) else ""
 
@@ -152,9 +171,8 @@ def _choices(expected: str) -> list[str]:
     return expected.replace("'", "").replace(" or ", ", ").split(", ")
 
 
-def _section(loc: Loc) -> type[Section]:
-    """Return the model of the section at a place."""
-    section: type[Section] = Settings
+def _section(section: type[Section], loc: Loc) -> type[Section]:
+    """Return the model of the section at a place below a section."""
     for part in loc:
         if isinstance(part, str):
             section = _model_in(section.model_fields[part].annotation) or section
@@ -167,17 +185,17 @@ def _model_in(annotation: Any) -> type[Section] | None:
     return next((model for argument in get_args(annotation) if (model := _model_in(argument))), None)
 
 
-def _meaning(loc: Loc) -> str:
-    parent = _section(loc[:-1])
+def _meaning(model: type[Section], loc: Loc) -> str:
+    parent = _section(model, loc[:-1])
     described = parent.model_fields[str(loc[-1])].description
-    return described or (_section(loc).__doc__ or "").strip()
+    return described or (_section(model, loc).__doc__ or "").strip()
 
 
-def _hint(loc: Loc) -> str:
+def _hint(model: type[Section], loc: Loc) -> str:
     key = str(loc[-1])
-    if close := nearest(key, _section(loc[:-1]).model_fields):
+    if close := nearest(key, _section(model, loc[:-1]).model_fields):
         return close
-    homes = [section for section, model in _all_sections(Settings, "") if key in model.model_fields]
+    homes = [section for section, home in _all_sections(model, "") if key in home.model_fields]
     return f" (it belongs in [{homes[0]}])" if homes and homes[0] else "; remove it"
 
 

@@ -84,8 +84,13 @@ def factor_scale(stars: Stars, modes: Modes) -> NDArray[np.float64]:
         parallax_pc = np.where(stars.parallax_mas > 3.0 * stars.parallax_error_mas, 1e3 / stars.parallax_mas, np.nan)
         distance_pc = np.where(stars.distance_pc > 3.0 * stars.distance_error_pc, stars.distance_pc, parallax_pc)
         ln_radius = np.log(distance_pc) + 0.5 * (modes.coords[:, 0, 1] - ln_teff) - LN_RSUN_PC
-    large = np.clip(np.nan_to_num(np.exp(np.minimum(ln_radius, 5.0)), nan=0.0) - 2.0, 0.0, 1.0)
-    cool = np.clip((7500.0 - np.exp(ln_teff)) / 1000.0, 0.0, 1.0)
+    return giant_scale(np.exp(ln_teff), np.nan_to_num(np.exp(np.minimum(ln_radius, 5.0)), nan=0.0))
+
+
+def giant_scale(teff_k: NDArray[np.float64], radius_rsun: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return how much wider than a dwarf's the factors of a star of this temperature and radius are: 1 to 2."""
+    large = np.clip(radius_rsun - 2.0, 0.0, 1.0)
+    cool = np.clip((7500.0 - teff_k) / 1000.0, 0.0, 1.0)
     return np.asarray(1.0 + large * cool)
 
 
