@@ -113,7 +113,9 @@ def run(
     debug: Debug = False,
 ) -> None:
     """Fit every star of the input tables and publish the catalogue."""
-    with _errors_told(debug, quiet):
+    from starkiln.engine.stopping import StopFlag
+
+    with _errors_told(debug, quiet), StopFlag() as stop:
         from starkiln.engine.preview import first_rows
         from starkiln.engine.progress import open_progress
         from starkiln.engine.run import run_settings
@@ -124,7 +126,7 @@ def run(
             compute = settings.compute.model_copy(update={"workers": workers})
             settings = settings.model_copy(update={"compute": compute})
         with open_progress(quiet) as progress:
-            result = run_settings(settings, progress=progress)
+            result = run_settings(settings, progress=progress, stop=stop)
         if not quiet or result.exit_code:
             print(result.message)
         if not quiet and result.path is not None:
@@ -140,6 +142,48 @@ def path(run_dir: RunDir, debug: Debug = False) -> None:
         if not current.is_dir():
             raise SettingsError(f"{run_dir} holds no published catalogue: name the run.output of a finished run")
         print(current.resolve())
+
+@app.command(epilog="Example: starkiln calibrate my_reference_stars.toml")
+def calibrate(config: Config, debug: Debug = False) -> None:
+    """Learn the departures of photospheres from blackbodies from reference stars of known T and size."""
+    with _errors_told(debug):
+        from starkiln.engine.calibrating import calibrate_from
+        from starkiln.report.departures_figure import save_calibration
+        from starkiln.report.departures_text import describe_calibration
+        from starkiln.settings import load_settings
+        from starkiln.stages.calibrate import section_of
+
+        settings = load_settings(config)
+        path = section_of(settings).output
+        found = calibrate_from(settings)
+        folder = save_calibration(found.learnt.departures, found.teff_k, found.learnt.points, path)
+        print(describe_calibration(found, path))
+        print(f"pictures are in {folder}")
+
+
+@app.command(epilog="Example: starkiln forecast configs/forecast.toml")
+def forecast(
+    config: Config,
+    quiet: Annotated[bool, typer.Option("--quiet", help="Print nothing if all is well.")] = False,
+    debug: Debug = False,
+) -> None:
+    """Tell how precise T, R and L will be with given bands and errors, and what leaving bands out would cost."""
+    with _errors_told(debug):
+        from starkiln.engine.progress import open_progress
+        from starkiln.report.forecast import check_folder, describe_forecast, save_forecast
+        from starkiln.settings.forecast import load_forecast
+        from starkiln.stages.forecast import fits_in
+        from starkiln.stages.forecast import forecast as forecast_settings
+
+        settings = load_forecast(config)
+        check_folder(settings.run.output)
+        with open_progress(quiet) as progress:
+            progress.begin("fitting invented stars", fits_in(settings))
+            table = forecast_settings(settings, progress.advance)
+        paths = save_forecast(table, settings.run.output)
+        if not quiet:
+            print(describe_forecast(table))
+            print(f"The table is {paths[0]}, the picture {paths[1]}")
 
 
 @app.command(epilog="Example: starkiln passbands gaia_dr3_g")

@@ -91,3 +91,31 @@ def test_a_stopped_run_leaves_nothing_running_and_nothing_behind(busy_run, tmp_p
     assert [child for child in children if child.is_running() and child.status() != psutil.STATUS_ZOMBIE] == []
     assert sorted(path.name for path in (tmp_path / "run").iterdir()) == ["generations", "lock", "logs"]
     assert list((tmp_path / "run" / "generations").iterdir()) == []
+
+
+@pytest.mark.parametrize("delay", [0.2, 0.6])
+def test_workers_that_are_signalled_first_while_they_start_are_not_the_news(started_run, delay):
+    process = psutil.Process(started_run.pid)
+    wait_until(started_run, lambda: len(process.children()) >= 2)
+    time.sleep(delay)
+    for child in process.children(recursive=True):
+        child.terminate()
+    time.sleep(0.3)
+    started_run.terminate()
+    out, err = started_run.communicate(timeout=30)
+    assert (started_run.returncode, out, err) == (5, "", STOPPED.format("SIGTERM"))
+
+
+def test_a_signal_before_the_run_has_begun_ends_with_5_too(tmp_path):
+    """The settings are a pipe that nobody writes to, so the command waits inside."""
+    os.mkfifo(tmp_path / "run.toml")
+    process = subprocess.Popen(
+        [sys.executable, "-m", "starkiln", "run", tmp_path / "run.toml"], stderr=subprocess.PIPE, text=True
+    )
+    with process, (tmp_path / "run.toml").open("w") as pipe:
+        process.terminate()
+        pipe.write(dump_toml(settings_for(write(tmp_path / "survey", a=stars(3)), tmp_path / "run")))
+        pipe.close()
+        assert process.communicate(timeout=60)[1] == STOPPED.format("SIGTERM")
+    assert process.returncode == 5
+    assert not (tmp_path / "run" / "current").exists()

@@ -7,8 +7,7 @@ import dask
 import psutil
 import pytest
 
-from starkiln.engine.executors import Finished, SerialExecutor, WorkerDied, open_cluster
-from starkiln.errors import EnvironmentTrouble
+from starkiln.engine.executors import ClusterTrouble, Finished, SerialExecutor, WorkerDied, open_cluster
 
 MEMORY = 1_000_000_000
 
@@ -78,6 +77,13 @@ def test_a_task_that_kills_its_workers_ends_and_others_go_on(cluster):
     assert next_of(cluster).result == 5
 
 
+def test_a_task_that_is_lost_is_trouble_with_the_cluster(cluster):
+    cluster.submit("lost", time.sleep, 3)
+    time.sleep(1)
+    cluster._client.cancel(list(cluster._futures.values()), force=True)
+    assert isinstance(next_of(cluster).error, ClusterTrouble)
+
+
 def test_workers_have_one_thread(cluster):
     cluster.submit("threads", thread_settings)
     assert next_of(cluster).result == {"OMP_NUM_THREADS": "1", "NUMBA_NUM_THREADS": "1"}
@@ -120,7 +126,7 @@ def leave_in_the_middle_of_a_task(scratch):
 def test_workers_that_do_not_start_are_trouble(tmp_path, monkeypatch):
     monkeypatch.setattr("distributed.LocalCluster", refuse)
     with (
-        pytest.raises(EnvironmentTrouble, match=r"cannot start 3 worker processes \(no\)"),
+        pytest.raises(ClusterTrouble, match=r"cannot start 3 worker processes \(no\)"),
         open_cluster(3, MEMORY, tmp_path),
     ):
         pass

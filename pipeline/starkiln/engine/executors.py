@@ -30,6 +30,10 @@ class WorkerDied(Exception):
     """The worker processes that had a task died, again and again."""
 
 
+class ClusterTrouble(EnvironmentTrouble):
+    """The worker processes do not start, or cannot be reached any more."""
+
+
 @dataclass(frozen=True)
 class Finished:
     """A task that has ended: its key, and its result or its error."""
@@ -103,6 +107,9 @@ class ClusterExecutor:
         except queue.Empty:
             return None
         del self._futures[future.key]
+        if future.cancelled():
+            lost = ClusterTrouble("the workers cannot be reached any more; run again")
+            return Finished(future.key, None, lost)
         error = future.exception()
         result = None if error is not None else future.result()
         if isinstance(error, self._killed):
@@ -129,7 +136,7 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
 
     Raises
     ------
-    EnvironmentTrouble
+    ClusterTrouble
         If the workers do not start.
     """
     import dask
@@ -166,7 +173,7 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
                 )
                 client = stack.enter_context(Client(cluster))
         except (RuntimeError, OSError) as error:
-            raise EnvironmentTrouble(
+            raise ClusterTrouble(
                 f"cannot start {workers} worker processes ({error}); try fewer with --workers"
             ) from error
         try:

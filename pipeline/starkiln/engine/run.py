@@ -7,7 +7,7 @@ import time
 import traceback
 from collections import Counter
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, nullcontext
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
 from pathlib import Path
@@ -17,7 +17,7 @@ from starkiln.engine import provenance
 from starkiln.engine.closing import close_generation
 from starkiln.engine.directory import check_name, hold, scratch_folder
 from starkiln.engine.events import EventLog, open_log
-from starkiln.engine.executors import SMALL_RUN_ROWS, Executor, SerialExecutor, open_cluster
+from starkiln.engine.executors import SMALL_RUN_ROWS, ClusterTrouble, Executor, SerialExecutor, open_cluster
 from starkiln.engine.generations import Generations
 from starkiln.engine.job import Job, SavedJob, Stages, fitting_stages
 from starkiln.engine.plan import Plan, make_plan
@@ -30,6 +30,9 @@ from starkiln.errors import EnvironmentTrouble, StarkilnError
 from starkiln.settings import Settings, dump_toml, load_settings
 from starkiln.tables.source import Source, open_source
 from starkiln.tables.write import PackedFile
+
+SIGNALS_APART = 1.0
+"""Seconds between the first and the last process to get a signal that is meant for all."""
 
 
 @dataclass(frozen=True)
@@ -71,7 +74,13 @@ def run(path: str | Path) -> RunResult:
         return RunResult(error.exit_code, {}, None, str(error))
 
 
-def run_settings(settings: Settings, *, progress: Progress | None = None, stages: Stages | None = None) -> RunResult:
+def run_settings(
+    settings: Settings,
+    *,
+    progress: Progress | None = None,
+    stages: Stages | None = None,
+    stop: StopFlag | None = None,
+) -> RunResult:
     """Do a run, and publish its catalogue as a new generation of the run directory.
 
     Parameters
@@ -82,6 +91,8 @@ def run_settings(settings: Settings, *, progress: Progress | None = None, stages
         Is told how far the run has come.
     stages
         What is done to the rows; fits stars unless given.
+    stop
+        Notes signals already; without one, signals are noted from here on.
 
     Raises
     ------
@@ -90,16 +101,17 @@ def run_settings(settings: Settings, *, progress: Progress | None = None, stages
     """
     run_dir = settings.run.output
     start = datetime.now(UTC)
-    with StopFlag() as stop, _disk_trouble(run_dir), hold(run_dir):
+    noting = StopFlag() if stop is None else nullcontext(stop)
+    with noting as stop, _disk_trouble(run_dir), hold(run_dir):
         check_name(run_dir, settings.run.name)
         with open_log(run_dir, start) as log, _end_logged(log):
             log.write("start", name=settings.run.name, starkiln=provenance.versions()["starkiln"])
             one_run = _Run(settings, stages or fitting_stages(), progress or Silence(), stop, log, start)
             try:
                 result = one_run.do()
-            except Exception:
-                # After a signal to the whole process group, workers that died are not the news.
-                stop.check()
+            except Exception as error:
+                # When many processes are signalled, workers that died are not the news; they may even die first.
+                stop.check(within=SIGNALS_APART if isinstance(error, ClusterTrouble) else 0.0)
                 raise
             log.write("end", exit_code=result.exit_code, message=result.message)
             return result
@@ -202,6 +214,7 @@ class _Run:
         source = open_source(settings)
         model = self._stages.build_model(settings)
         self._lap("open")
+        self._stop.check()
         generations = Generations(settings.run.output)
         with scratch_folder(settings.run.output, settings.compute.scratch) as scratch:
             workers = worker_count(settings)
@@ -243,11 +256,12 @@ class _Run:
             parts=parts,
         )
         if plan.selected <= SMALL_RUN_ROWS:
-            return self._do_parts(plan, job, parts, SerialExecutor())
+            with self._stop.at_once():
+                return self._do_parts(plan, job, parts, SerialExecutor())
         self._progress.begin("warming up", 0)
-        self._stages.warm_up(self._settings, model)
+        with self._stop.at_once():
+            self._stages.warm_up(self._settings, model)
         self._lap("warm up")
-        self._stop.check()
         memory = self._settings.compute.memory_per_worker_bytes
         with open_cluster(min(workers, plan.parts), memory, scratch) as executor:
             self._lap("start workers")
