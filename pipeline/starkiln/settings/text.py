@@ -7,10 +7,10 @@ from typing import Any
 
 import tomlkit
 
-from starkiln.settings.models import Settings
+from starkiln.settings.models import Section, Settings
 
 
-def dump_toml(settings: Settings) -> str:
+def dump_toml(settings: Section) -> str:
     """Return the resolved settings as TOML that `load_settings` reads back to an equal model."""
     return tomlkit.dumps(_plain(settings.model_dump(exclude_none=True)))
 
