@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 from scipy.interpolate import BSpline
-from scipy.special import log_ndtr
+from scipy.special import log_ndtr, logsumexp
 from scipy.stats import expon, norm
 
 from starkiln.physics.bandtable import ln_flux
@@ -114,6 +114,31 @@ def integrate(
     return np.array(
         [weighted_quantiles(values, weight) for values in points[:2]] + [cell_quantiles(points[2], weight, step)]
     )
+
+
+def log_evidence(
+    stars: Stars, star: int, model: FitModel, settings: Settings, draws: NDArray[np.float64], nodes: int = 24
+) -> float:
+    """Return ln of the integral of :func:`log_posterior` over ln T, ln Omega, A_V if fitted, and z, by a grid.
+
+    The grid is straight in A_V and follows the draws' covariance in the others; ``draws`` (P, N) only say where to
+    look.
+    """
+    fit_av, n_factors = model.prior.fit_av, len(model.grid.loading)
+    order = [2, 0, 1, 3][: 3 + n_factors] if fit_av else list(range(2 + n_factors))
+    mean, lower = draws[order].mean(axis=1), np.linalg.cholesky(np.cov(draws[order]))
+    unit = [np.linspace(-8.0, 8.0, nodes) for _ in order]
+    if fit_av:
+        low = max(-mean[0] / lower[0, 0], -8.0)
+        high = min((model.prior.av_max - mean[0]) / lower[0, 0], 9.0)
+        unit[0] = low + (high - low) * (np.arange(nodes) + 0.5) / nodes
+    points = np.stack([axis.ravel() for axis in np.meshgrid(*unit, indexing="ij")])
+    values = (mean[:, None] + lower @ points)[np.argsort(order)]
+    av = values[2] if fit_av else np.full(points.shape[1], stars.av_mean[star])
+    z = values[len(values) - n_factors :]
+    log_density = log_posterior(values[0], values[1], av, stars, star, model, settings, z)
+    cell = np.prod([axis[1] - axis[0] for axis in unit]) * np.prod(np.diag(lower))
+    return float(logsumexp(log_density) + np.log(cell))
 
 
 def weighted_quantiles(values: NDArray[np.float64], weight: NDArray[np.float64]) -> NDArray[np.float64]:
