@@ -186,31 +186,6 @@ def forecast(
             print(f"The table is {paths[0]}, the picture {paths[1]}")
 
 
-@app.command(epilog="Example: starkiln forecast configs/forecast.toml")
-def forecast(
-    config: Config,
-    quiet: Annotated[bool, typer.Option("--quiet", help="Print nothing if all is well.")] = False,
-    debug: Debug = False,
-) -> None:
-    """Tell how precise T, R and L will be with given bands and errors, and what leaving bands out would cost."""
-    with _errors_told(debug):
-        from starkiln.engine.progress import open_progress
-        from starkiln.report.forecast import check_folder, describe_forecast, save_forecast
-        from starkiln.settings.forecast import load_forecast
-        from starkiln.stages.forecast import fits_in
-        from starkiln.stages.forecast import forecast as forecast_settings
-
-        settings = load_forecast(config)
-        check_folder(settings.run.output)
-        with open_progress(quiet) as progress:
-            progress.begin("fitting invented stars", fits_in(settings))
-            table = forecast_settings(settings, progress.advance)
-        paths = save_forecast(table, settings.run.output)
-        if not quiet:
-            print(describe_forecast(table))
-            print(f"The table is {paths[0]}, the picture {paths[1]}")
-
-
 @app.command(epilog="Example: starkiln passbands gaia_dr3_g")
 def passbands(
     name: Annotated[
