@@ -151,6 +151,10 @@ def _grid(table: BandTable, loading: NDArray[np.float64], scatter: NDArray[np.fl
     )
 
 
+def zero_point_error(band: PhotometryColumns, passband: Passband) -> float:
+    """Return the fractional error of a band's zero point: its own where the settings give one, or the passband's."""
+    return passband.zero_point_error if band.zero_point_error is None else band.zero_point_error
+
+
 def _floor(band: PhotometryColumns, passband: Passband) -> float:
-    zero_point_error = passband.zero_point_error if band.zero_point_error is None else band.zero_point_error
-    return float(np.hypot(band.floor, zero_point_error))
+    return float(np.hypot(band.floor, zero_point_error(band, passband)))

@@ -9,25 +9,28 @@ import numpy as np
 import pyarrow as pa
 
 from starkiln.flags import BY_NAME
+from starkiln.inference.audit import AuditSums, combined, no_stars
 from starkiln.settings import Settings
+from starkiln.stages.audit import audit
 from starkiln.stages.choose import choose
 from starkiln.stages.derive import derive
 from starkiln.stages.fit import fit
 from starkiln.stages.ingest import ingest
 from starkiln.stages.model import FitModel
 from starkiln.stages.stars import Stars
-from starkiln.stages.summarise import kept_draws, summarise
+from starkiln.stages.summarise import kept_draws, mode_points, summarise
 from starkiln.tables.columns import catalogue_schema, draws_schema, output_fields
 from starkiln.tables.hashes import row_hashes
 
 
 @dataclass(frozen=True)
 class PartTables:
-    """What a part leaves: its catalogue rows, its rejected rows and, if asked for, draws."""
+    """What a part leaves: catalogue rows, rejected rows, draws if asked for, and what its stars say of zero points."""
 
     catalogue: pa.Table
     rejected: pa.Table
     draws: pa.Table | None
+    audit: AuditSums | None = None
 
 
 def process_part(table: pa.Table, settings: Settings, model: FitModel) -> PartTables:
@@ -39,7 +42,7 @@ def process_part(table: pa.Table, settings: Settings, model: FitModel) -> PartTa
         The used columns with ``_input_file``, ``_input_row`` and ``_duplicate`` (0 unique, 1 first copy, 2 later).
     """
     ingested = ingest(table, settings, model)
-    columns, draws = _fit_columns(ingested.stars, model, settings)
+    columns, draws, audited = _fit_columns(ingested.stars, model, settings)
     if len(ingested.stars):
         columns["row_hash"] = row_hashes(table, settings)[ingested.is_kept]
         first_copy = ingested.kept["_duplicate"].to_numpy() == 1
@@ -49,23 +52,22 @@ def process_part(table: pa.Table, settings: Settings, model: FitModel) -> PartTa
     kept = None
     if settings.sampling.keep_draws:
         kept = _table(draws_schema(settings, id_field), ingested.kept, draws)
-    return PartTables(catalogue, ingested.rejected, kept)
+    return PartTables(catalogue, ingested.rejected, kept, audited)
 
 
 def _fit_columns(
     stars: Stars, model: FitModel, settings: Settings
-) -> tuple[dict[str, np.ndarray], dict[str, np.ndarray]]:
-    """Return the fitted columns and the kept draws of every star, in the order of the stars."""
+) -> tuple[dict[str, np.ndarray], dict[str, np.ndarray], AuditSums]:
+    """Return the fitted columns and the kept draws of every star, in the order of the stars, and the audit's sums."""
     columns: dict[str, np.ndarray] = {}
     draws: dict[str, np.ndarray] = {}
     if model.rival is None:
-        _fit_rows(np.arange(len(stars)), stars, model, settings, columns, draws)
-        return columns, draws
+        return columns, draws, _fit_rows(np.arange(len(stars)), stars, model, settings, columns, draws)
     is_blackbody, ln_ratio = choose(stars, model, settings)
-    _fit_rows(np.flatnonzero(~is_blackbody), stars, model, settings, columns, draws)
-    _fit_rows(np.flatnonzero(is_blackbody), stars, model.rival, settings, columns, draws)
+    audited = _fit_rows(np.flatnonzero(~is_blackbody), stars, model, settings, columns, draws)
+    rivals = _fit_rows(np.flatnonzero(is_blackbody), stars, model.rival, settings, columns, draws)
     columns["ln_evidence_ratio"] = ln_ratio
-    return columns, draws
+    return columns, draws, combined(audited, rivals)
 
 
 def _fit_rows(
@@ -75,16 +77,20 @@ def _fit_rows(
     settings: Settings,
     columns: dict[str, np.ndarray],
     draws: dict[str, np.ndarray],
-) -> None:
-    """Fit the stars of some rows with one model, and put their values at those rows."""
+) -> AuditSums:
+    """Fit the stars of some rows with one model, put their values at those rows, and return the audit's sums."""
     chosen = stars.at(rows)
+    audited = no_stars(len(model.passbands))
     for fitted in fit(chosen, model, settings):
         places = fitted.first + fitted.draws.stars
         some = chosen.at(places)
         derived = derive(some, fitted.draws, model, settings)
-        _place(columns, rows[places], len(stars), summarise(some, fitted, derived, model, settings))
+        mode = mode_points(fitted, derived, model)
+        audited = combined(audited, audit(fitted, mode, model))
+        _place(columns, rows[places], len(stars), summarise(some, fitted, derived, mode, model, settings))
         if settings.sampling.keep_draws:
             _place(draws, rows[places], len(stars), kept_draws(derived, settings))
+    return audited
 
 
 def _place(target: dict[str, Any], rows: np.ndarray, n: int, values: dict[str, Any]) -> None:

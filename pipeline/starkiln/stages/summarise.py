@@ -41,13 +41,22 @@ NOT_WITHOUT_DETECTION = ("teff", "radius", "lum", "ang_diam", "fbol")
 Columns = dict[str, NDArray[Any]]
 
 
-def summarise(stars: Stars, fitted: Fitted, derived: Derived, model: FitModel, settings: Settings) -> Columns:
+def summarise(
+    stars: Stars,
+    fitted: Fitted,
+    derived: Derived,
+    mode: NDArray[np.float64],
+    model: FitModel,
+    settings: Settings,
+) -> Columns:
     """Return the fitted columns of K stars, all but ``row_hash``, as float64, integer or string arrays.
 
     Parameters
     ----------
     stars
         The K stars of ``fitted.draws``, in its order.
+    mode
+        Their :func:`mode_points`.
     """
     columns: Columns = {}
     no_detection = _detections(stars) < 2
@@ -62,7 +71,7 @@ def summarise(stars: Stars, fitted: Fitted, derived: Derived, model: FitModel, s
     columns["lambda_peak_p50"] = WIEN_M_K * 1e9 / columns["teff_p50"]
     columns["mbol_p50"] = -2.5 * np.log10(columns["lum_p50"] * (LSUN_W / LUMINOSITY_MBOL_ZERO_W))
     columns |= _correlations(derived, no_detection)
-    columns |= _agreement(fitted, derived, model, settings)
+    columns |= _agreement(fitted, derived, mode, model)
     columns |= _diagnostics(fitted, derived)
     columns |= _factors(derived, no_detection)
     columns["photosphere"] = np.full(len(stars), model.photosphere)
@@ -150,18 +159,18 @@ def _factors(derived: Derived, no_detection: NDArray[np.bool_]) -> Columns:
     return {f"photosphere_z1_{name}": values[:, place] for name, place in (("lo68", 1), ("p50", 2), ("hi68", 3))}
 
 
-def _agreement(fitted: Fitted, derived: Derived, model: FitModel, settings: Settings) -> Columns:
+def _agreement(fitted: Fitted, derived: Derived, mode: NDArray[np.float64], model: FitModel) -> Columns:
     n_bands = len(model.floor)
-    mode = compare(mode_points(fitted, derived, model), fitted.block, model.grid, model.prior, n_bands)
+    at_mode = compare(mode, fitted.block, model.grid, model.prior, n_bands)
     drawn: Agreement = compare(_thinned(fitted, derived, model), fitted.block, model.grid, model.prior, n_bands)
     measured = _measured_bands(fitted.block)
     chance = predictive_chance(drawn.chi2, measured, model.prior)
     columns: Columns = {
-        "chi2": mode.chi2[:, 0],
+        "chi2": at_mode.chi2[:, 0],
         "ppp_value": np.where(measured > 0, means(chance), np.nan),
     }
     for place, label in enumerate(model.passbands):
-        columns[f"residual_{label}"] = mode.residual[:, place]
+        columns[f"residual_{label}"] = at_mode.residual[:, place]
         columns[f"outlier_{label}"] = drawn.outlier[:, place]
     return columns
 

@@ -6,12 +6,13 @@ import numpy as np
 
 from starkiln.physics.bandtable import ln_flux
 from starkiln.settings import Settings
+from starkiln.stages.audit import audit
 from starkiln.stages.derive import derive
 from starkiln.stages.fit import fit
 from starkiln.stages.ingest import magnitudes_to_jy
 from starkiln.stages.model import FitModel
 from starkiln.stages.stars import Stars
-from starkiln.stages.summarise import summarise
+from starkiln.stages.summarise import mode_points, summarise
 
 FEWEST_STEPS = 64
 
@@ -34,7 +35,10 @@ def warm_up(settings: Settings, model: FitModel) -> None:
     stars = invented_stars(model)
     for fitted in fit(stars, model, short):
         some = stars.at(fitted.first + fitted.draws.stars)
-        summarise(some, fitted, derive(some, fitted.draws, model, short), model, short)
+        derived = derive(some, fitted.draws, model, short)
+        mode = mode_points(fitted, derived, model)
+        audit(fitted, mode, model)
+        summarise(some, fitted, derived, mode, model, short)
 
 
 def invented_stars(model: FitModel) -> Stars:

@@ -1,0 +1,37 @@
+"""The audit of zero points: what the stars of a part say of them, and the table that all parts add up to."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from starkiln.inference.audit import AuditSums, audit_stars, solve_offsets
+from starkiln.settings import Settings
+from starkiln.stages.fit import Fitted
+from starkiln.stages.model import FitModel, zero_point_error
+
+
+def audit(fitted: Fitted, mode: NDArray[np.float64], model: FitModel) -> AuditSums:
+    """Return what some stars say of the zero points; ``mode`` are their posterior modes as points."""
+    return audit_stars(mode, fitted.block, model.grid, model.prior, len(model.passbands))
+
+
+def zero_point_audit(sums: AuditSums, model: FitModel, settings: Settings) -> list[dict[str, Any]]:
+    """Return a row for each band: label, offset and its error in magnitudes, whether it is determined, and stars.
+
+    The offset is observed minus expected magnitude: to be subtracted from the band's magnitudes.
+    """
+    errors = [zero_point_error(band, model.passbands[band.label]) for band in settings.input.photometry]
+    offsets = solve_offsets(sums, np.array(errors))
+    return [
+        {
+            "label": label,
+            "offset_mag": round(float(offset), 4),
+            "error_mag": round(float(error), 4),
+            "determined": bool(determined),
+            "stars": int(stars),
+        }
+        for label, offset, error, determined, stars in zip(model.passbands, *offsets, sums.stars, strict=True)
+    ]
