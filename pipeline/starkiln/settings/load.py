@@ -150,7 +150,9 @@ def _describe(model: type[Section], item: Any, data: Mapping[str, Any]) -> str:
 
 
 def _visible(loc: Loc) -> Loc:
-    return tuple(part for part in loc if part not in ("<table>", "<false>"))
+    """Leave out the names of the two forms of model.outliers; elsewhere they are keys of the user's own."""
+    forms = {3} if loc[:2] == ("model", "outliers") and len(loc) > 2 and loc[2] in ("<table>", "<false>") else set()
+    return tuple(part for place, part in enumerate(loc, start=1) if place not in forms)
 
 
 def _dotted(loc: Loc) -> str:

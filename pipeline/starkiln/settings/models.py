@@ -325,6 +325,40 @@ class Output(Section):
     """"flat", or "hive" to keep the partition folders of the input."""
 
 
+class Calibrate(Section):
+    """Reference stars to learn departures from, for `starkiln calibrate`; they are rows of input.tables."""
+
+    output: FilePath
+    """The file of departures to write (ECSV); the pictures go beside it."""
+    teff: Text
+    """Column of the effective temperature in kelvins."""
+    radius: Text | None = None
+    """Column of the radius in nominal solar radii; the distance comes from input.parallax or input.distance."""
+    angular_diameter: Text | None = None
+    """Column of the angular diameter in milliarcseconds, instead of a radius."""
+    fbol: Text | None = None
+    """Column of the bolometric flux in W/m2, instead of a radius."""
+    av: NumberOrColumn = 0.0
+    """Extinction A_V of the stars in magnitudes: a number or a column."""
+    good: Text | None = None
+    """Boolean column: only rows where it is true are used."""
+    factors: Literal["auto", 0, 1, 2] = "auto"
+    """Number of common factors; "auto" leaves it to cross-validation."""
+    train: Annotated[float, Field(gt=0, lt=1)] = 0.5
+    """Share of the stars that the held-out figures are learnt from; the file is learnt from all."""
+
+    def columns(self) -> list[str]:
+        """Return the columns that describe the reference stars."""
+        names = [self.teff, self.radius, self.angular_diameter, self.fbol, self.good]
+        return [name for name in names if name is not None] + ([self.av] if isinstance(self.av, str) else [])
+
+    def problems(self) -> Iterator[Problem]:
+        """Yield what keeps the size of the stars from being known, or makes it known twice."""
+        given = [key for key in ("radius", "angular_diameter", "fbol") if getattr(self, key) is not None]
+        if len(given) != 1:
+            yield (), f"needs one of radius, angular_diameter and fbol, and has {' and '.join(given) or 'none'}"
+
+
 def _scratch(value: object) -> object:
     return None if value == "" else value
 
@@ -357,11 +391,14 @@ class Settings(Section):
     sampling: Sampling = Sampling()
     output: Output = Output()
     compute: Compute = Compute()
+    calibrate: Calibrate | None = None
 
     def problems(self) -> Iterator[Problem]:
         """Yield clashes between sections."""
         for index, name in _repeats(file.name for file in self.passband):
             yield ("passband", index, "name"), f"{name!r} is the name of two passbands"
+        if self.calibrate and self.calibrate.radius and not (self.input.parallax or self.input.distance):
+            yield ("calibrate", "radius"), "needs distances: add [input.parallax] or [input.distance]"
         if Path(self.input.tables) in (self.run.output, *self.run.output.parents):
             yield ("run", "output"), "lies inside input.tables: the next run would read its results as input"
 
