@@ -13,6 +13,7 @@ from starkiln.physics.constants import MAS_PER_RAD, PARSEC_M, RSUN_M, TSUN_K
 from starkiln.physics.departures import LN_TEFF_NODES, Departures
 from starkiln.physics.passbands import load_passband
 from starkiln.settings import Settings, build_settings
+from starkiln.stages.fit import giant_scale
 from starkiln.stages.model import FitModel
 from starkiln.stages.stars import Stars
 
@@ -105,7 +106,7 @@ def simulate(
     photosphere: dict[str, NDArray[np.float64]] = {}
     spread = np.broadcast_to(model.floor, (n, b))
     if model.departures is not None:
-        widening = true_factor_scale(np.exp(ln_teff), np.exp(ln_radius)) if giants else np.ones(n)
+        widening = giant_scale(np.exp(ln_teff), np.exp(ln_radius)) if giants else np.ones(n)
         at = model.departures.at(np.exp(ln_teff))
         z = rng.normal(size=(len(at.loading), n))
         true_jy = true_jy * np.exp(widening[:, None] * (at.loading * z[:, None]).sum(axis=0).T)
@@ -174,11 +175,6 @@ def _draw_av(
         else:
             av[bad] = rng.normal(mean[bad], scale[bad])
     return av
-
-
-def true_factor_scale(teff_k: NDArray[np.float64], radius_rsun: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Return by how much factors are widened: 1, to 2 for stars above 3 R_sun and below 6500 K."""
-    return 1.0 + np.clip(radius_rsun - 2.0, 0.0, 1.0) * np.clip((7500.0 - teff_k) / 1000.0, 0.0, 1.0)
 
 
 def invented_departures(bands: tuple[str, ...] = THIRTEEN_BANDS, n_factors: int = 1) -> Departures:
