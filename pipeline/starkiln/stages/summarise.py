@@ -147,7 +147,7 @@ def _points(chain: NDArray[np.float64], derived: Derived, model: FitModel) -> ND
     if model.prior.fit_av:
         return np.ascontiguousarray(chain)
     av = np.broadcast_to(derived.av[:, :1], (len(chain), chain.shape[2]))[:, None]
-    return np.concatenate([chain[:, :2], av, chain[:, 2:]], axis=1)
+    return np.ascontiguousarray(np.concatenate([chain[:, :2], av, chain[:, 2:]], axis=1))
 
 
 def _factors(derived: Derived, no_detection: NDArray[np.bool_]) -> Columns:
