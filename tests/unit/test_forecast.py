@@ -20,7 +20,7 @@ from starkiln.report.forecast import describe_forecast, save_forecast
 from starkiln.settings import dump_toml
 from starkiln.settings.forecast import build_forecast, forecast_schema, load_forecast
 from starkiln.settings.models import Extinction
-from starkiln.stages.forecast import draw_extinction, fits_in, forecast, grid_points, invent, plan_survey
+from starkiln.stages.forecast import draw_extinction, fits_in, forecast, grid_points, invent, is_misled, plan_survey
 
 BANDS = ("panstarrs_g", "panstarrs_r", "panstarrs_i", "panstarrs_z", "2mass_ks")
 PLAIN = {
@@ -177,6 +177,17 @@ class TestGrid:
         assert row["teff_half_width"] < 0.02
         assert np.isnan(row["radius_half_width"])
 
+    def test_what_the_priors_decide_is_marked(self):
+        table = forecast(
+            build_forecast(example(brightness=brightness(15.0, 20.0), parallax_error_mas=[0.01, 2.0], stars=16))
+        )
+        assert list(is_misled(table, "radius")) == [False, True]
+        assert not is_misled(table, "teff").any()
+        *_, near, far, note = describe_forecast(table).splitlines()
+        assert "*" not in near
+        assert far.count("*") == 2
+        assert note.startswith("* fewer than a third of the stars")
+
     def test_the_same_seed_gives_the_same_table_and_picture(self, tmp_path):
         settings = build_forecast(example(without=[["2mass_ks"]], stars=3))
         first, second = (save_forecast(forecast(settings), tmp_path / name) for name in ("a", "b"))
@@ -295,7 +306,7 @@ class TestCommand:
         assert shown.exit_code == 0, shown.output
         lines = shown.stdout.splitlines()
         assert lines[-1] == f"The table is {tmp_path}/out/forecast.ecsv, the picture {tmp_path}/out/forecast.pdf"
-        assert len(lines) == 3 + 1 + 4 + 1
+        assert [line.split()[:2] for line in lines[4:8]] == [[t, m] for t in ("4000", "6000") for m in ("16", "20")]
         assert sorted(path.name for path in (tmp_path / "out").iterdir()) == [
             "forecast.ecsv",
             "forecast.pdf",

@@ -10,7 +10,9 @@ from astropy.table import Row, Table
 
 from starkiln.errors import SettingsError
 from starkiln.report.forecast_figure import forecast_figure, save_figure
-from starkiln.stages.forecast import QUANTITIES
+from starkiln.stages.forecast import QUANTITIES, is_misled
+
+MISLED = "*"
 
 
 def check_folder(folder: Path) -> None:
@@ -59,6 +61,8 @@ def describe_forecast(table: Table) -> str:
         )
     widths = [max(map(len, column)) for column in zip(*grid, strict=True)]
     lines += ["  ".join(text.rjust(width) for text, width in zip(row, widths, strict=True)) for row in grid]
+    if any(MISLED in text for row in grid for text in row):
+        lines += [f"{MISLED} fewer than a third of the stars lie in their interval: the priors decide, not the data"]
     return "\n".join(lines)
 
 
@@ -67,4 +71,5 @@ def _width(quantity: str, widest: Row, others: list[Row]) -> str:
     if math.isnan(width):
         return "-"
     ratios = ", ".join("-" if math.isnan(ratio := row[f"{quantity}_ratio"]) else f"{ratio:.2f}" for row in others)
-    return f"{100.0 * width:.3g}" + (f" ({ratios})" if others else "")
+    mark = MISLED if is_misled(widest, quantity) else ""
+    return f"{mark}{100.0 * width:.3g}" + (f" ({ratios})" if others else "")

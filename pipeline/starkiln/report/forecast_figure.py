@@ -13,19 +13,21 @@ from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from matplotlib.ticker import LogLocator, NullFormatter, StrMethodFormatter
 
-from starkiln.stages.forecast import QUANTITIES
+from starkiln.stages.forecast import QUANTITIES, is_misled
 
 TITLES = {"teff": "effective temperature", "radius": "radius", "lum": "luminosity"}
 MARKERS = "osD^vPX*"
 DASHES = ("--", ":", "-.", (0, (5, 1, 1, 1, 1, 1)))
+HOLLOW: dict[str, Any] = {"linestyle": "", "markerfacecolor": "white"}
 DARKEST, LIGHTEST = 0.0, 0.85  # of the colour map: its yellow end is too pale on white
 
 
 def forecast_figure(table: Table) -> Figure:
     """Return a figure with a column for each of T, R and L.
 
-    The upper row has the half-widths with all bands in per cent, a line for each temperature; the lower row, if bands
-    are left out, how many times as wide they are then, a dash pattern for each set.
+    The upper row has the half-widths with all bands in per cent, a line for each temperature, its symbols hollow where
+    the priors decide; the lower row, if bands are left out, how many times as wide they are then, a dash pattern for
+    each set.
     """
     sets = list(dict.fromkeys(table["bands"]))
     rows = 1 if len(sets) == 1 else 2
@@ -57,8 +59,11 @@ def save_figure(figure: Figure, stem: Path) -> list[Path]:
 
 def _draw_widths(axes: Any, table: Table, quantity: str) -> None:
     for teff_k, style in _styles(table).items():
-        mag, width = _line(table[table["teff"] == teff_k], f"{quantity}_half_width")
+        some = table[table["teff"] == teff_k]
+        mag, width = _line(some, f"{quantity}_half_width")
         axes.plot(mag, 100.0 * width, **style)
+        mag, width = _line(some[is_misled(some, quantity)], f"{quantity}_half_width")
+        axes.plot(mag, 100.0 * width, **style | HOLLOW)
     axes.set_title(TITLES[quantity])
     axes.grid(alpha=0.3)
     if not np.isfinite(table[f"{quantity}_half_width"]).any():
@@ -101,6 +106,8 @@ def _dashes(sets: list[str]) -> list[Any]:
 
 def _legend(table: Table, sets: list[str]) -> list[Line2D]:
     handles = [Line2D([], [], label=f"{teff_k:.0f} K", **style) for teff_k, style in _styles(table).items()]
+    if any(is_misled(table, quantity).any() for quantity in QUANTITIES):
+        handles.append(Line2D([], [], color="0.3", marker="o", markersize=4, label="the priors decide", **HOLLOW))
     return handles + [
         Line2D([], [], color="0.3", linestyle=dash, label=name) for dash, name in zip(_dashes(sets), sets, strict=True)
     ]

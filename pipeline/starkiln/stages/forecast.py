@@ -9,9 +9,10 @@ from typing import Any, NamedTuple
 import numpy as np
 import pyarrow as pa
 from astropy import units as u
-from astropy.table import Table
+from astropy.table import Row, Table
 from numpy.typing import NDArray
 from scipy.special import ndtr, ndtri
+from scipy.stats import binom
 
 from starkiln import __version__
 from starkiln.errors import SettingsError
@@ -30,6 +31,7 @@ from starkiln.stages.process import process_part
 
 QUANTITIES = ("teff", "radius", "lum")
 DEPTH_SIGMA = 5.0
+MISLED_SHARE, MISLED_CHANCE = 1.0 / 3.0, 1e-3
 ROWS_AT_ONCE = 256
 
 FloatArray = NDArray[np.float64]
@@ -108,6 +110,13 @@ def forecast(settings: ForecastSettings, advance: Callable[[int], None] = lambda
         of_point = {name: _of_point(place, columns, settings) for name, columns in fitted.items()}
         rows += [_row(name, point, stars[place], mine, of_point[ALL_BANDS]) for name, mine in of_point.items()]
     return _described(rows, settings)
+
+
+def is_misled(rows: Table | Row, quantity: str) -> Any:
+    """Return whether the priors decide: fewer than a third of a point's stars in their 68 % interval, not by chance."""
+    share = rows[f"{quantity}_inside_68"]
+    n = np.round(rows["stars"] * (1.0 - rows["not_detected"]))
+    return (share < MISLED_SHARE) & (binom.cdf(np.round(share * n), n, 0.68) < MISLED_CHANCE)
 
 
 def fits_in(settings: ForecastSettings) -> int:
@@ -277,6 +286,7 @@ def _row(
         width = _half_width(fitted, quantity)
         row[f"{quantity}_half_width"] = _median(width)
         row[f"{quantity}_ratio"] = _median(width / _half_width(with_all, quantity))
+        row[f"{quantity}_inside_68"] = _share_inside(fitted, quantity, stars[quantity])
         row[f"{quantity}_bias"] = _median(fitted[f"{quantity}_p50"] / stars[quantity] - 1.0)
     for flag, column in (("no_detection", "not_detected"), ("not_converged", "not_converged")):
         row[column] = float(np.mean((fitted["flags"] & BY_NAME[flag].value) != 0))
@@ -286,6 +296,12 @@ def _row(
 def _half_width(fitted: dict[str, NDArray[Any]], quantity: str) -> FloatArray:
     low, middle, high = (fitted[f"{quantity}_{end}"].astype(np.float64) for end in ("lo68", "p50", "hi68"))
     return np.asarray(0.5 * (high - low) / middle)
+
+
+def _share_inside(fitted: dict[str, NDArray[Any]], quantity: str, truth: FloatArray) -> float:
+    low, high = fitted[f"{quantity}_lo68"], fitted[f"{quantity}_hi68"]
+    seen = np.isfinite(low)
+    return float(np.mean((low < truth) & (truth < high), where=seen)) if seen.any() else float("nan")
 
 
 def _median(values: FloatArray) -> float:
@@ -303,6 +319,7 @@ def _described(rows: list[dict[str, Any]], settings: ForecastSettings) -> Table:
     for quantity in QUANTITIES:
         descriptions |= {
             f"{quantity}_half_width": f"half of {quantity}_hi68 - {quantity}_lo68 over {quantity}_p50, median",
+            f"{quantity}_inside_68": "share of the stars with a result that lie in their 68 % interval",
             f"{quantity}_bias": f"{quantity}_p50 over the truth, less one, median",
             f"{quantity}_ratio": f"half-width over the same star's with bands = {ALL_BANDS}, median",
         }
