@@ -28,6 +28,7 @@ from starkiln.engine.tasks import Cut, Fitted
 from starkiln.engine.work import Work
 from starkiln.errors import EnvironmentTrouble, StarkilnError
 from starkiln.settings import Settings, dump_toml, load_settings
+from starkiln.stages.audit import together, zero_point_audit
 from starkiln.tables.source import Source, open_source
 from starkiln.tables.write import PackedFile
 
@@ -152,6 +153,7 @@ class _Tally:
     catalogue: int = 0
     rejected: Counter[str] = field(default_factory=Counter)
     flags: Counter[str] = field(default_factory=Counter)
+    audit: Any = None
     seconds: dict[str, float] = field(default_factory=dict)
     worker_peak: int = 0
 
@@ -163,6 +165,7 @@ class _Tally:
         self.catalogue += fitted.written["catalogue"].rows
         self.rejected.update(fitted.reasons)
         self.flags.update(fitted.flags)
+        self.audit = together(self.audit, fitted.audit)
         self._add_seconds(fitted.seconds)
         self.worker_peak = max(self.worker_peak, fitted.peak_memory)
 
@@ -308,6 +311,7 @@ class _Run:
             "counts": counts,
             "duplicates": plan.duplicates,
             "flags": dict(sorted(self._tally.flags.items())),
+            "zero_point_audit": zero_point_audit(self._tally.audit, model, self._settings),
             "workers": workers,
             "parts": plan.parts,
             "seconds": {"wall": wall, "summed_over_workers": stages},

@@ -8,6 +8,7 @@ from collections import Counter
 from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -54,6 +55,8 @@ class Fitted:
         The files, by table name ("catalogue", "rejected", "index" and, if kept, "draws"); not yet in place.
     reasons, flags
         Rejected rows by reason, and catalogue rows by flag.
+    audit
+        What the part's stars say of the zero points.
     seconds
         Time by stage.
     """
@@ -63,6 +66,7 @@ class Fitted:
     written: dict[str, WrittenFile]
     reasons: dict[str, int]
     flags: dict[str, int]
+    audit: Any
     seconds: dict[str, float]
     peak_memory: int
 
@@ -131,7 +135,7 @@ def fit_part(job: Job | SavedJob, part: Part) -> Fitted:
     with pa.OSFile(str(part.path), "rb") as file:
         table = pa.ipc.open_file(file).read_all()
     started = time.perf_counter()
-    tables = process_rows(job, table)
+    tables, audit = process_rows(job, table)
     processed = time.perf_counter()
     written = {name: write_part(made, part_path(job.parts, name, part.number)) for name, made in tables.items()}
     finished = time.perf_counter()
@@ -141,6 +145,7 @@ def fit_part(job: Job | SavedJob, part: Part) -> Fitted:
         written=written,
         reasons=dict(Counter(tables["rejected"]["reason"].to_pylist())),
         flags=count_flags(tables["catalogue"]["flags"].to_numpy()),
+        audit=audit,
         seconds={"process": processed - started, "write": finished - processed},
         peak_memory=peak_memory(),
     )
@@ -149,8 +154,8 @@ def fit_part(job: Job | SavedJob, part: Part) -> Fitted:
     return summary
 
 
-def process_rows(job: Job, table: pa.Table) -> dict[str, pa.Table]:
-    """Process cut rows, and return the output tables by name.
+def process_rows(job: Job, table: pa.Table) -> tuple[dict[str, pa.Table], Any]:
+    """Process cut rows, and return the output tables by name, and what the stars say of the zero points.
 
     Raises
     ------
@@ -162,7 +167,7 @@ def process_rows(job: Job, table: pa.Table) -> dict[str, pa.Table]:
     tables = {"catalogue": made.catalogue, "rejected": made.rejected, "index": index}
     if made.draws is not None:
         tables["draws"] = made.draws
-    return tables
+    return tables, made.audit
 
 
 def index_rows(table: pa.Table, catalogue: pa.Table, rejected: pa.Table, settings: Settings) -> pa.Table:

@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.inference.audit import AuditSums, audit_stars, solve_offsets
+from starkiln.inference.audit import AuditSums, audit_stars, combined, solve_offsets
 from starkiln.settings import Settings
 from starkiln.stages.fit import Fitted
 from starkiln.stages.model import FitModel, zero_point_error
@@ -18,11 +18,20 @@ def audit(fitted: Fitted, mode: NDArray[np.float64], model: FitModel) -> AuditSu
     return audit_stars(mode, fitted.block, model.grid, model.prior, len(model.passbands))
 
 
-def zero_point_audit(sums: AuditSums, model: FitModel, settings: Settings) -> list[dict[str, Any]]:
+def together(one: AuditSums | None, other: AuditSums | None) -> AuditSums | None:
+    """Return the sums of two parts together; either may have none."""
+    if one is None or other is None:
+        return other if one is None else one
+    return combined(one, other)
+
+
+def zero_point_audit(sums: AuditSums | None, model: FitModel, settings: Settings) -> list[dict[str, Any]]:
     """Return a row for each band: label, offset and its error in magnitudes, whether it is determined, and stars.
 
     The offset is observed minus expected magnitude: to be subtracted from the band's magnitudes.
     """
+    if sums is None:
+        return []
     errors = [zero_point_error(band, model.passbands[band.label]) for band in settings.input.photometry]
     offsets = solve_offsets(sums, np.array(errors))
     return [
