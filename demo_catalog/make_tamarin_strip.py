@@ -1,12 +1,12 @@
-"""Make the Tamarin Strip, an invented survey of invented stars: the tables and, beside them, the truth.
+"""Make the Tamarin Strip, an invented survey of invented stars: tables, departures and, beside them, the truth.
 
 Run it from anywhere; the same files come out every time:
 
     python demo_catalog/make_tamarin_strip.py [FOLDER]
 
-The stars are blackbodies behind dust. Distances and extinctions are drawn from the priors that
-configs/demo.toml states, and the noise is the one that the fit assumes, so that the intervals it finds can
-be held against the truth.
+White dwarfs are blackbodies behind dust, all others depart from blackbodies as tamarin_departures.ecsv says, each
+by its own z1. Distances and extinctions are drawn from the priors that configs/demo.toml states, and the noise is
+the one that the fit assumes, so that the intervals it finds can be held against the truth.
 """
 
 from __future__ import annotations
@@ -20,9 +20,11 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from starkiln.physics.constants import AB_ZERO_JY, PARSEC_M, RSUN_M, TSUN_K
+from starkiln.physics.departures import LN_TEFF_NODES, Departures, inside_range, write_departures
 from starkiln.physics.extinction import extinction_ratio
 from starkiln.physics.passbands import load_passband, zero_point_jy
 from starkiln.physics.planck import exitance_jy
+from starkiln.stages.fit import giant_scale
 
 SEED = 20261201
 LENGTH_SCALE_PC = 400.0  # of the falling space density, as in configs/demo.toml
@@ -40,6 +42,9 @@ KINDS = {"dwarf": 2600, "giant": 620, "white dwarf": 400, "hot star": 380}
 FIELDS = {"T1": 1500, "T2": 1400, "T3": 900, "T4": 200}  # T4 was observed through cloud
 FIELD_WIDTH_DEG = 1.6
 CLOUD_TRANSMISSION = 0.6
+DEPARTURES_FILE = "tamarin_departures.ecsv"
+DEPARTURES_RANGE_K = (2500.0, 30000.0)
+WHITE_DWARF_SCATTER = 0.015  # of blackbodies, as in configs/demo.toml
 
 
 @dataclass(frozen=True)
@@ -96,21 +101,57 @@ def draw_stars(kind: str, count: int, random: np.random.Generator) -> dict[str, 
         "radius": radius_rsun(teff) * np.exp(scatter * random.standard_normal(count)),
         "dist": random.gamma(3.0, LENGTH_SCALE_PC, count),
         "av": random.exponential(AV_SCALE_MAG, count),
+        "z1": np.full(count, np.nan) if kind == "white dwarf" else random.standard_normal(count),
     }
 
 
-def band_flux_jy(stars: dict[str, np.ndarray], passband_name: str) -> np.ndarray:
+def invented_departures() -> Departures:
+    """Return how the stars depart from blackbodies: lines in the blue of cool ones, a Balmer jump in hot ones."""
+    passbands = [load_passband(band.passband) for band in BANDS]
+    pivot_um = np.array([passband.pivot_um for passband in passbands])
+    colour, x = np.log(pivot_um)[:, np.newaxis], np.log(np.exp(LN_TEFF_NODES) / 5500.0)
+    cool, hot = 0.5 - 0.5 * np.tanh(3.0 * x), 0.5 + 0.5 * np.tanh(4.0 * (x - 0.3))
+    lines = -0.3 * cool * np.exp(-1.5 * (colour + 1.2))
+    opacity_minimum = 0.08 * cool * np.exp(-(((colour - 0.48) / 0.3) ** 2))
+    balmer_jump = -0.15 * hot * np.exp(-(((colour + 1.1) / 0.3) ** 2))
+    loading = (0.02 + 0.05 * np.exp(-1.2 * (colour + 0.7))) * (1.0 - 0.5 * hot)
+    ends = LN_TEFF_NODES[inside_range(DEPARTURES_RANGE_K)][[0, -1]]
+    return Departures(
+        bands=tuple(band.passband for band in BANDS),
+        digests=tuple(passband.digest() for passband in passbands),
+        kind=("stars",) * len(BANDS),
+        source=("invented",) * len(BANDS),
+        pivot_um=pivot_um,
+        range_k=np.tile(np.exp(ends), (len(BANDS), 1)),
+        ln_d=lines + opacity_minimum + balmer_jump,
+        loading=loading[np.newaxis],
+        scatter=np.where(colour < -1.2, 0.03, 0.012) + 0.0 * x,
+        factors=("oddity",),
+        provenance={"curve": "invented, for the invented Tamarin Strip survey"},
+    )
+
+
+def departure(stars: dict[str, np.ndarray], passband_name: str, departures: Departures) -> tuple[np.ndarray, ...]:
+    """Return the factor on each star's flux in a band, and the band's own scatter; white dwarfs are blackbodies."""
+    at = departures.at(stars["teff"])
+    band = departures.bands.index(passband_name)
+    scale = giant_scale(stars["teff"], stars["radius"])
+    compact = np.isnan(stars["z1"])
+    factor = np.exp(at.ln_d[band] + scale * at.loading[0, band] * stars["z1"])
+    return np.where(compact, 1.0, factor), np.where(compact, WHITE_DWARF_SCATTER, scale * at.scatter[band])
+
+
+def band_flux_jy(stars: dict[str, np.ndarray], passband_name: str, departures: Departures) -> np.ndarray:
     """Return each star's flux density in a band, by direct summation over the passband."""
     nodes_um, weights = load_passband(passband_name).quadrature
     ratio = extinction_ratio("G23", 3.1, nodes_um)
     omega = (stars["radius"] * RSUN_M / (stars["dist"] * PARSEC_M)) ** 2
     transmission = 10.0 ** (-0.4 * stars["av"][:, np.newaxis] * ratio)
-    return omega * np.sum(
-        exitance_jy(nodes_um, stars["teff"][:, np.newaxis]) * transmission * weights, axis=1
-    )
+    bare = np.sum(exitance_jy(nodes_um, stars["teff"][:, np.newaxis]) * transmission * weights, axis=1)
+    return omega * bare * departure(stars, passband_name, departures)[0]
 
 
-def visible_stars(random: np.random.Generator) -> dict[str, np.ndarray]:
+def visible_stars(departures: Departures, random: np.random.Generator) -> dict[str, np.ndarray]:
     """Return the stars of every kind that are bright enough, in random order."""
     faintest_jy = AB_ZERO_JY * 10.0 ** (-0.4 * FAINTEST_R_MAG)
     chosen: list[dict[str, np.ndarray]] = []
@@ -118,7 +159,7 @@ def visible_stars(random: np.random.Generator) -> dict[str, np.ndarray]:
         found = 0
         while found < wanted:
             stars = draw_stars(kind, 4 * wanted, random)
-            bright = np.flatnonzero(band_flux_jy(stars, BANDS[R_BAND].passband) > faintest_jy)[
+            bright = np.flatnonzero(band_flux_jy(stars, BANDS[R_BAND].passband, departures) > faintest_jy)[
                 : wanted - found
             ]
             some = {name: values[bright] for name, values in stars.items()}
@@ -130,14 +171,17 @@ def visible_stars(random: np.random.Generator) -> dict[str, np.ndarray]:
     return {name: values[order] for name, values in stars.items()}
 
 
-def observe(flux_jy: np.ndarray, band: Band, random: np.random.Generator) -> tuple[np.ndarray, ...]:
+def observe(
+    flux_jy: np.ndarray, own_scatter: np.ndarray, band: Band, random: np.random.Generator
+) -> tuple[np.ndarray, ...]:
     """Return measured fluxes, their stated errors, and which of them are outliers.
 
-    The scatter is the stated error and the error of the zero point, drawn anew for each star: the survey's
-    calibration wanders from place to place.
+    The scatter is the stated error, the star's own in this band, and the error of the zero point, drawn anew for each
+    star: the survey's calibration wanders from place to place.
     """
     stated_jy = np.hypot(band.noise_jy, band.relative_noise * flux_jy)
-    total_jy = np.hypot(stated_jy, load_passband(band.passband).zero_point_error * flux_jy)
+    relative = np.hypot(own_scatter, load_passband(band.passband).zero_point_error)
+    total_jy = np.hypot(stated_jy, relative * flux_jy)
     outlier = random.random(len(flux_jy)) < OUTLIER_FRACTION
     blend = OUTLIER_WIDTH * np.abs(random.standard_normal(len(flux_jy)))  # another star's light
     scatter = random.standard_normal(len(flux_jy))
@@ -174,7 +218,9 @@ def band_columns(
     return {f"{name}_{band.column}": value, f"{name}_{band.column}_error": error} | columns
 
 
-def survey_columns(stars: dict[str, np.ndarray], random: np.random.Generator) -> dict[str, np.ndarray]:
+def survey_columns(
+    stars: dict[str, np.ndarray], departures: Departures, random: np.random.Generator
+) -> dict[str, np.ndarray]:
     """Return the survey's columns and, under ``outlier_bands``, how many outliers each star has."""
     count = len(stars["teff"])
     field = np.repeat(list(FIELDS), list(FIELDS.values()))
@@ -186,7 +232,7 @@ def survey_columns(stars: dict[str, np.ndarray], random: np.random.Generator) ->
         "ra": np.round(start_deg + random.uniform(0.0, FIELD_WIDTH_DEG, count), 6),
         "dec": np.round(random.uniform(-0.5, 0.5, count), 6),
     }
-    r_mag = -2.5 * np.log10(band_flux_jy(stars, BANDS[R_BAND].passband) / AB_ZERO_JY)
+    r_mag = -2.5 * np.log10(band_flux_jy(stars, BANDS[R_BAND].passband, departures) / AB_ZERO_JY)
     error_mas = np.hypot(0.03, 0.6 * 10.0 ** (0.3 * (r_mag - 20.0)))
     parallax_mas = 1e3 / stars["dist"] + PARALLAX_ZERO_POINT_MAS + error_mas * random.standard_normal(count)
     unmeasured = random.random(count) < 0.02
@@ -194,10 +240,10 @@ def survey_columns(stars: dict[str, np.ndarray], random: np.random.Generator) ->
     columns["parallax_error"] = np.where(unmeasured, np.nan, np.round(error_mas, 4))
     outliers = np.zeros(count, np.int16)
     for band in BANDS:
-        flux_jy = band_flux_jy(stars, band.passband)
+        flux_jy = band_flux_jy(stars, band.passband, departures)
         if band.camera:
             flux_jy = np.where(field == "T4", CLOUD_TRANSMISSION * flux_jy, flux_jy)
-        measured_jy, error_jy, outlier = observe(flux_jy, band, random)
+        measured_jy, error_jy, outlier = observe(flux_jy, departure(stars, band.passband, departures)[1], band, random)
         columns |= band_columns(measured_jy, error_jy, band, random)
         outliers += outlier
     not_in_t3 = columns["field"] == "T3"  # the satellite did not get that far
@@ -208,25 +254,26 @@ def survey_columns(stars: dict[str, np.ndarray], random: np.random.Generator) ->
 
 def spoil_rows(columns: dict[str, np.ndarray], random: np.random.Generator) -> dict[str, np.ndarray]:
     """Spoil a few rows of T1 to T3 in the ways in which real tables are spoilt; return which rows."""
-    chosen = random.choice(
-        np.flatnonzero(columns["field"] != "T4"), 2 * sum(SPOILT_ROWS.values()), replace=False
-    )
+    # With all of Gaia's bands, so that those left are as many as meant.
+    gaia = np.all([np.isfinite(columns[f"mag_gaia_{band}"]) for band in ("bp", "g", "rp")], axis=0)
+    rows = np.flatnonzero((columns["field"] != "T4") & gaia)
+    chosen = random.choice(rows, 2 * sum(SPOILT_ROWS.values()), replace=False)
     parts = np.split(chosen, np.cumsum(list(SPOILT_ROWS.values())))
-    rows = dict(zip(SPOILT_ROWS, parts, strict=False))
-    columns["star_id"][rows["no id"]] = [None, None, "", ""]
+    spoilt = dict(zip(SPOILT_ROWS, parts, strict=False))
+    columns["star_id"][spoilt["no id"]] = [None, None, "", ""]
     for name in value_names(columns):
         wrong = random.choice([0.0, -1.0, np.nan], SPOILT_ROWS["no error"])
-        columns[f"{name}_error"][rows["no error"]] = wrong
+        columns[f"{name}_error"][spoilt["no error"]] = wrong
         if name not in ("mag_gaia_g", "mag_gaia_rp"):
-            columns[name][rows["two bands"]] = np.nan
+            columns[name][spoilt["two bands"]] = np.nan
         if not name.startswith("mag_gaia"):
-            columns[name][rows["three bands"]] = np.nan
-    empty_sky(columns, rows["empty sky"], random)
-    first, later = np.sort([rows["repeated"], parts[-1][: SPOILT_ROWS["repeated"]]], axis=0)
+            columns[name][spoilt["three bands"]] = np.nan
+    empty_sky(columns, spoilt["empty sky"], random)
+    first, later = np.sort([spoilt["repeated"], parts[-1][: SPOILT_ROWS["repeated"]]], axis=0)
     for name, column in columns.items():
         if name not in ("field", "ra", "dec"):
             column[later] = column[first]
-    return rows | {"repeated": later}
+    return spoilt | {"repeated": later}
 
 
 def value_names(columns: dict[str, np.ndarray]) -> list[str]:
@@ -280,16 +327,14 @@ def survey_table(columns: dict[str, np.ndarray]) -> pa.Table:
     names = [name for name in columns if name not in ("field", "outlier_bands")]
     fields = [survey_field(name, unit_of) for name in names]
     arrays = [pa.array(columns[f.name], f.type, from_pandas=True) for f in fields]
-    return pa.table(arrays, schema=pa.schema(fields)).append_column(
-        "field", pa.array(columns["field"].tolist())
-    )
+    return pa.table(arrays, schema=pa.schema(fields)).append_column("field", pa.array(columns["field"].tolist()))
 
 
 def truth_table(
     stars: dict[str, np.ndarray], columns: dict[str, np.ndarray], spoilt: dict[str, np.ndarray]
 ) -> pa.Table:
     """Return what each identifier truly is; nothing but the kind for the patches of empty sky."""
-    units = {"teff": "K", "radius": "solRad", "lum": "solLum", "dist": "pc", "av": "mag"}
+    units = {"teff": "K", "radius": "solRad", "lum": "solLum", "dist": "pc", "av": "mag", "z1": None}
     values = stars | {"lum": stars["radius"] ** 2 * (stars["teff"] / TSUN_K) ** 4}
     kind = stars["kind"].astype(object)
     kind[spoilt["empty sky"]] = "empty sky"
@@ -304,24 +349,26 @@ def truth_table(
         column = values[name].astype(np.float32)
         column[spoilt["empty sky"]] = np.nan
         table[name] = pa.array(column[keep], from_pandas=True)
-        fields.append(pa.field(name, pa.float32(), metadata={"unit": unit}))
+        fields.append(pa.field(name, pa.float32(), metadata={"unit": unit} if unit else None))
     table["outlier_bands"] = pa.array(columns["outlier_bands"][keep])
     fields.append(pa.field("outlier_bands", pa.int16()))
     return pa.table(list(table.values()), schema=pa.schema(fields))
 
 
-def make_tables(seed: int = SEED) -> tuple[pa.Table, pa.Table]:
+def make_tables(departures: Departures, seed: int = SEED) -> tuple[pa.Table, pa.Table]:
     """Return the survey, all fields in one table, and the truth."""
     random = np.random.default_rng(seed)
-    stars = visible_stars(random)
-    columns = survey_columns(stars, random)
+    stars = visible_stars(departures, random)
+    columns = survey_columns(stars, departures, random)
     spoilt = spoil_rows(columns, random)
     return survey_table(columns), truth_table(stars, columns, spoilt)
 
 
 def write_tables(folder: Path) -> None:
-    """Write the survey as one Parquet file per field in a hive layout, and the truth beside it."""
-    survey, truth = make_tables()
+    """Write the survey as one Parquet file per field in a hive layout, and departures and truth beside it."""
+    departures = invented_departures()
+    write_departures(departures, folder / DEPARTURES_FILE)
+    survey, truth = make_tables(departures)
     for field in FIELDS:
         target = folder / "tamarin_strip" / f"field={field}" / "stars.parquet"
         target.parent.mkdir(parents=True, exist_ok=True)

@@ -11,8 +11,10 @@ from makers import load_maker
 from starkiln.flags import BY_NAME
 from starkiln.physics.bandtable import build_band_table, ln_flux
 from starkiln.physics.constants import PARSEC_M, RSUN_M, TSUN_K
+from starkiln.physics.departures import read_departures
 from starkiln.physics.passbands import load_passband
 from starkiln.settings import load_settings
+from starkiln.stages.fit import giant_scale
 from starkiln.stages.ingest import ingest
 from starkiln.stages.model import build_model
 from starkiln.stages.process import process_part
@@ -89,10 +91,31 @@ def test_committed_tables_are_what_the_maker_makes(folder, tmp_path):
     assert made == sorted(path.relative_to(folder) for path in folder.rglob("*.parquet"))
     for path in made:
         assert close(pq.ParquetFile(tmp_path / path).read(), pq.ParquetFile(folder / path).read()), path
+    one, other = (read_departures(place / "tamarin_departures.ecsv") for place in (tmp_path, folder))
+    assert (one.bands, one.digests) == (other.bands, other.digests)
+    for name in ("ln_d", "loading", "scatter"):
+        np.testing.assert_allclose(getattr(one, name), getattr(other, name), atol=2e-5)
 
 
 def test_tables_are_small(folder):
-    assert sum(path.stat().st_size for path in folder.rglob("*.parquet")) < 1_500_000
+    assert sum(path.stat().st_size for path in folder.rglob("*") if path.is_file()) < 1_000_000
+
+
+def test_settings_say_what_the_maker_did(folder, settings):
+    maker = load_maker(folder / "make_tamarin_strip.py")
+    assert settings.model.blackbody.scatter == maker.WHITE_DWARF_SCATTER
+    assert settings.model.extinction.scale == maker.AV_SCALE_MAG
+    assert settings.model.distance.length_scale_pc == maker.LENGTH_SCALE_PC
+    assert settings.input.parallax.zero_point == maker.PARALLAX_ZERO_POINT_MAS
+
+
+def test_stars_have_oddities_of_their_own_and_white_dwarfs_none(truth):
+    z1 = truth["z1"].to_numpy()
+    compact = np.array([str(kind).endswith("white dwarf") for kind in truth["kind"].to_pylist()])
+    assert np.isnan(z1[compact]).all()
+    known = z1[~compact & np.isfinite(truth["teff"].to_numpy())]
+    assert abs(known.mean()) < 4 / np.sqrt(len(known))
+    assert abs(known.std() - 1) < 4 / np.sqrt(2 * len(known))
 
 
 def test_columns_carry_units(folder):
@@ -130,7 +153,7 @@ def test_radius_and_temperature_give_the_luminosity(truth):
 
 
 @pytest.mark.parametrize(("passband", "column"), [("panstarrs_r", "r"), ("panstarrs_z", "z")])
-def test_fluxes_scatter_about_the_model_by_their_errors(survey, truth, passband, column):
+def test_fluxes_scatter_about_the_model_by_their_errors(survey, truth, folder, passband, column):
     clean = survey.filter(pc.invert(survey[f"flag_{column}"]))
     clean = clean.filter(pc.is_in(clean["star_id"], truth["star_id"]))
     star = with_truth(clean, truth)
@@ -141,29 +164,49 @@ def test_fluxes_scatter_about_the_model_by_their_errors(survey, truth, passband,
         & (star["outlier_bands"].to_numpy() == 0)
         & (clean[f"flux_{column}_error"].to_numpy() > 0)
     )
-    values = {name: star[name].to_numpy().astype(float)[known] for name in ("teff", "radius", "dist", "av")}
+    values = {name: star[name].to_numpy().astype(float)[known] for name in ("teff", "radius", "dist", "av", "z1")}
     omega = (values["radius"] * RSUN_M / (values["dist"] * PARSEC_M)) ** 2
-    model_njy = 1e9 * omega * np.exp(ln_flux(table, values["teff"], values["av"]))[:, 0]
+    at = read_departures(folder / "tamarin_departures.ecsv").for_bands(bands).at(values["teff"])
+    scale, compact = giant_scale(values["teff"], values["radius"]), np.isnan(values["z1"])
+    departure = np.where(compact, 0.0, at.ln_d[0] + scale * at.loading[0, 0] * values["z1"])
+    own_scatter = np.where(compact, 0.015, scale * at.scatter[0])
+    model_njy = 1e9 * omega * np.exp(ln_flux(table, values["teff"], values["av"])[:, 0] + departure)
     flux, error = (clean[name].to_numpy()[known] for name in (f"flux_{column}", f"flux_{column}_error"))
-    pull = (flux - model_njy) / np.hypot(error, bands[0].zero_point_error * model_njy)
+    pull = (flux - model_njy) / np.hypot(error, np.hypot(bands[0].zero_point_error, own_scatter) * model_njy)
     pull = pull[np.isfinite(pull)]
     assert len(pull) > 1500
     assert abs(pull.mean()) < 4 / np.sqrt(len(pull))
     assert abs(pull.std() - 1) < 4 / np.sqrt(2 * len(pull))
 
 
+@pytest.fixture(scope="module")
+def catalogue(survey, settings, model):
+    return process_part(survey.slice(0, 500), settings, model).catalogue
+
+
 @pytest.mark.slow
-def test_intervals_hold_the_truth_as_often_as_they_say(survey, truth, settings, model):
-    catalogue = process_part(survey.slice(0, 500), settings, model).catalogue
+def test_intervals_hold_the_truth_as_often_as_they_say(catalogue, truth):
     star = with_truth(catalogue, truth)
-    for quantity in ("teff", "radius", "lum", "av"):
-        true = star[quantity].to_numpy()
-        for level, low, high in ((0.68, "lo68", "hi68"), (0.95, "lo95", "hi95")):
-            lower, upper = (catalogue[f"{quantity}_{end}"].to_numpy() for end in (low, high))
+    for quantity in ("teff", "radius", "lum", "av", "photosphere_z1"):
+        true = star[quantity.removeprefix("photosphere_")].to_numpy()
+        for level in (68, 95):
+            if f"{quantity}_lo{level}" not in catalogue.column_names:
+                continue
+            lower, upper = (catalogue[f"{quantity}_{end}{level}"].to_numpy() for end in ("lo", "hi"))
             fitted = np.isfinite(lower) & np.isfinite(true)
             inside = int(((lower <= true) & (true <= upper))[fitted].sum())
-            least, most = binom.ppf([CHANCE, 1 - CHANCE], fitted.sum(), level)
+            least, most = binom.ppf([CHANCE, 1 - CHANCE], fitted.sum(), level / 100.0)
             assert least <= inside <= most, (quantity, level, inside, int(fitted.sum()))
+
+
+@pytest.mark.slow
+def test_white_dwarfs_are_told_from_other_stars(catalogue, truth):
+    kinds = np.array([str(kind) for kind in with_truth(catalogue, truth)["kind"].to_pylist()])
+    white = np.char.endswith(kinds, "white dwarf")
+    chosen = np.array(catalogue["photosphere"].to_pylist()) == "blackbody"
+    assert white.sum() > 30
+    assert chosen[white].mean() > 0.7
+    assert chosen[~white].mean() < 0.01
 
 
 @pytest.mark.slow
