@@ -106,13 +106,13 @@ class TestKnownAnswers:
         assert stars["lum"] == pytest.approx(0.8**2 * (5000.0 / TSUN_K) ** 4, rel=1e-3)
 
     def test_scatter_is_that_of_the_settings(self):
-        bands = [{"passband": name, "depth_mag": 22.0, "system": "AB", "floor": 0.1} for name in BANDS]
+        bands = [{"passband": name, "depth_mag": 18.8, "system": "AB", "floor": 0.1} for name in BANDS]
         model = PLAIN | {"outliers": {"fraction": 0.2, "width": 10.0}}
         survey = plan_survey(build_forecast(example(model, band=bands, stars=20000)))
         stars = invent(grid_points(survey.settings)[0], survey)
         zero_point_error = load_passband("panstarrs_r").zero_point_error
         true_jy = 3631.0 * 10.0 ** (-0.4 * 18.0)
-        depth_jy = 3631.0 * 10.0 ** (-0.4 * 22.0)
+        depth_jy = 3631.0 * 10.0 ** (-0.4 * 18.8)
         sigma_jy = np.sqrt((depth_jy / 5.0) ** 2 + (0.1**2 + zero_point_error**2) * true_jy**2)
         spread = np.std(stars["flux_jy"][:, BANDS.index("panstarrs_r")])
         assert spread == pytest.approx(sigma_jy * np.sqrt(0.8 + 0.2 * 100.0), rel=0.03)
@@ -194,7 +194,9 @@ class TestGrid:
         for one, other in zip(first, second, strict=True):
             assert one.read_bytes() == other.read_bytes()
         run = settings.run.model_copy(update={"seed": 6})
-        assert (forecast(settings.model_copy(update={"run": run}))["lum_bias"] != forecast(settings)["lum_bias"]).all()
+        other = settings.model_copy(update={"run": run})
+        point = grid_points(settings)[0]
+        assert (invent(point, plan_survey(other))["flux_jy"] != invent(point, plan_survey(settings))["flux_jy"]).all()
 
     def test_auto_invents_ordinary_stars(self):
         automatic, calibrated = (
