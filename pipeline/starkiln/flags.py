@@ -50,8 +50,16 @@ FLAGS: tuple[Flag, ...] = (
         "outside_calibration",
         "More than half of the bands have no departures learnt, or none at this temperature: T may be off.",
     ),
-    Flag(14, "infrared_excess", "A band longward of 3 micron lies more than 3 sigma above the model."),
-    Flag(15, "ultraviolet_excess", "A band shortward of 0.32 micron lies more than 3 sigma above the model."),
+    Flag(
+        14,
+        "infrared_excess",
+        "Of the bands longward of 3 micron one is more than 3 sigma above the model, and none beyond it 1 sigma below.",
+    ),
+    Flag(
+        15,
+        "ultraviolet_excess",
+        "Of the bands shortward of 0.32 micron one is more than 3 sigma above the model, and none beyond it 1 sigma below.",
+    ),
     Flag(16, "blackbody_chosen", "With photosphere = auto, the data prefer a bare blackbody."),
     Flag(
         17,

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -34,6 +33,7 @@ MOST_OUTLIERS = 6
 LEAST_KEPT_SHARE = 0.1
 OUTLIER = 0.9
 EXCESS_SIGMA = 3.0
+CONTRADICTION_SIGMA = 1.0
 INFRARED_UM = 3.0
 ULTRAVIOLET_UM = 0.32
 NOT_WITHOUT_DETECTION = ("teff", "radius", "lum", "ang_diam", "fbol")
@@ -235,11 +235,11 @@ def _flags(
             "no_detection": no_detection,
             "poor_fit": columns["ppp_value"] < POOR_FIT,
             "band_outlier": _any_band(columns, "outlier", list(model.passbands), OUTLIER),
-            "infrared_excess": _excess(columns, model, lambda pivot_um: pivot_um > INFRARED_UM),
+            "infrared_excess": _excess(stars, columns, model, is_infrared=True),
             "odd_photosphere": np.abs(columns["photosphere_z1_p50"]) > ODD_SIGMA,
             "outside_calibration": _outside_calibration(stars, columns, model),
             "blackbody_chosen": np.full(len(stars), settings.model.photosphere == "auto" and model.departures is None),
-            "ultraviolet_excess": _excess(columns, model, lambda pivot_um: pivot_um < ULTRAVIOLET_UM),
+            "ultraviolet_excess": _excess(stars, columns, model, is_infrared=False),
             **_at_bounds(derived, model.prior, settings),
         }
     flags = np.zeros(len(stars), np.int32)
@@ -279,8 +279,32 @@ def _any_band(columns: Columns, prefix: str, labels: list[str], level: float) ->
     return np.asarray((values > level).any(axis=0))
 
 
-def _excess(columns: Columns, model: FitModel, chosen: Callable[[float], bool]) -> NDArray[np.bool_]:
-    labels = [label for label, passband in model.passbands.items() if chosen(passband.pivot_um)]
-    if not labels:
-        return np.zeros(len(columns["n_bands"]), bool)
-    return _any_band(columns, "residual", labels, EXCESS_SIGMA)
+def excess(residual: NDArray[np.float64], limit: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Return whether stars outshine the model in a region of the spectrum.
+
+    The band with the largest residual must be measured and above 3 sigma. Whatever is cooler, or hotter, than the star
+    outshines it the more the further out, so no band beyond that one, measured or limit, may lie 1 sigma below.
+
+    Parameters
+    ----------
+    residual, limit
+        (K, n): residuals in sigma of the total error, NaN where unused, and which are those of upper limits; the
+        region's bands from the optical outwards.
+    """
+    height = np.where(limit | np.isnan(residual), -np.inf, residual)
+    highest = height.argmax(axis=1)
+    beyond = np.arange(residual.shape[1]) > highest[:, None]
+    contradicted = (beyond & (residual < -CONTRADICTION_SIGMA)).any(axis=1)
+    return np.asarray((height.max(axis=1) > EXCESS_SIGMA) & ~contradicted)
+
+
+def _excess(stars: Stars, columns: Columns, model: FitModel, is_infrared: bool) -> NDArray[np.bool_]:
+    pivot_um = np.array([passband.pivot_um for passband in model.passbands.values()])
+    in_region = pivot_um > INFRARED_UM if is_infrared else pivot_um < ULTRAVIOLET_UM
+    order = np.argsort(pivot_um if is_infrared else -pivot_um, kind="stable")
+    places = order[in_region[order]]
+    if not len(places):
+        return np.zeros(len(stars), bool)
+    labels = list(model.passbands)
+    residual = np.stack([columns[f"residual_{labels[place]}"] for place in places], axis=1)
+    return excess(residual, stars.limit[:, places])
