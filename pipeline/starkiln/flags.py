@@ -53,12 +53,12 @@ FLAGS: tuple[Flag, ...] = (
     Flag(
         14,
         "infrared_excess",
-        "Of the bands longward of 3 micron one is more than 3 sigma above the model, and none beyond it 1 sigma below.",
+        "Of the bands longward of 3 micron one is over 3 sigma above the model, none beyond it 1 sigma below.",
     ),
     Flag(
         15,
         "ultraviolet_excess",
-        "Of the bands shortward of 0.32 micron one is more than 3 sigma above the model, and none beyond it 1 sigma below.",
+        "Of the bands shortward of 0.32 micron one is over 3 sigma above the model, none beyond it 1 sigma below.",
     ),
     Flag(16, "blackbody_chosen", "With photosphere = auto, the data prefer a bare blackbody."),
     Flag(

@@ -5,7 +5,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from simulated import THIRTEEN_BANDS, invented_departures, make_settings, simulate
+from simulated import THIRTEEN_BANDS, as_table, invented_departures, make_settings, simulate
 from starkiln.inference import audit
 from starkiln.inference.audit import MAG_PER_LN_FLUX, audit_stars, combined, no_stars, solve_offsets
 from starkiln.inference.posterior import LN_HEAT_K, Block
@@ -13,6 +13,7 @@ from starkiln.physics.departures import write_departures
 from starkiln.stages.audit import zero_point_audit
 from starkiln.stages.fit import start_block
 from starkiln.stages.model import build_model
+from starkiln.stages.process import process_part
 
 FOUR_BANDS = ("panstarrs_g", "gaia_dr3_rp", "2mass_j", "2mass_ks")
 QUOTED = np.full(6, 0.01)
@@ -116,6 +117,19 @@ def test_halves_in_either_order_give_the_bits_of_the_whole(eight):
     for halves in (combined(first, second), combined(second, first)):
         for found, expected in zip(halves, whole, strict=True):
             np.testing.assert_array_equal(found, expected)
+
+
+def test_parts_of_any_size_add_up_to_the_same_bits(eight):
+    settings, model, stars = eight
+    quick = settings.model_copy(
+        update={"sampling": settings.sampling.model_copy(update={"effective_samples": 100, "max_steps": 128})}
+    )
+    table = as_table(stars.take(slice(0, 12)), settings)
+    whole = process_part(table, quick, model).audit
+    first, second = (process_part(rows, quick, model).audit for rows in (table.slice(0, 5), table.slice(5)))
+    for found, expected in zip(combined(second, first), whole, strict=True):
+        np.testing.assert_array_equal(found, expected)
+    assert whole.stars.max() > 6
 
 
 @pytest.mark.parametrize("wrong", [0, 3, 7])
