@@ -38,7 +38,7 @@ LEAST_ZERO_POINT_ERROR = 0.002
 WRONG_SHARE = 0.3  # high, so that one wrong band is believed before many small offsets that conspire
 WRONG_BY = 0.1  # fractional
 MOST_WRONG = 2
-DETERMINED_MAG = 0.025
+DETERMINED_MAG = 0.03
 MAG_PER_LN_FLUX = -2.5 / np.log(10.0)
 
 
