@@ -9,9 +9,12 @@ from numpy.typing import NDArray
 
 from starkiln.physics.bandtable import ln_band_flux
 from starkiln.physics.constants import PARSEC_M, RSUN_M
+from starkiln.physics.departures import LN_TEFF_NODES, LN_TEFF_STEP
 from starkiln.physics.passbands import Passband
 
 FloatArray = NDArray[np.float64]
+
+_SLOPE_NODES = 2  # to either side: departures are known, and smooth, over some per cent in T
 
 
 def departure_points(
@@ -56,3 +59,16 @@ def ln_flux_jy(passbands: Sequence[Passband], magnitude: FloatArray) -> FloatArr
     if None in zero_points_jy:
         raise ValueError("a passband without a zero point has no magnitudes")
     return np.log(np.array(zero_points_jy, dtype=np.float64)) - 0.4 * np.log(10.0) * magnitude
+
+
+def temperature_slope(passbands: Sequence[Passband], ln_d: FloatArray) -> FloatArray:
+    """Return d ln f / d ln T at constant luminosity at the nodes, (n_bands, n_nodes), of bands with departures ln_d.
+
+    At constant luminosity Ω goes as T⁻⁴. This is the pattern that the bands of a star show whose published
+    temperature is off the scale.
+    """
+    ln_flux = blackbody_ln_flux(passbands, np.exp(LN_TEFF_NODES)).T + ln_d
+    padded = np.pad(ln_flux, ((0, 0), (_SLOPE_NODES, _SLOPE_NODES)), mode="edge")
+    rise = padded[:, 2 * _SLOPE_NODES :] - padded[:, : -2 * _SLOPE_NODES]
+    nodes = np.pad(np.arange(len(LN_TEFF_NODES)), _SLOPE_NODES, mode="edge")
+    return rise / (LN_TEFF_STEP * (nodes[2 * _SLOPE_NODES :] - nodes[: -2 * _SLOPE_NODES])) - 4.0
