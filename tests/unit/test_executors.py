@@ -7,6 +7,7 @@ import dask
 import psutil
 import pytest
 
+from starkiln.engine import executors
 from starkiln.engine.executors import ClusterTrouble, Finished, SerialExecutor, WorkerDied, open_cluster
 
 MEMORY = 1_000_000_000
@@ -21,6 +22,7 @@ def fail(text):
 
 
 def die():
+    time.sleep(1)  # one that dies while it starts is a worker less
     os.kill(os.getpid(), signal.SIGKILL)
 
 
@@ -82,6 +84,57 @@ def test_a_task_that_is_lost_is_trouble_with_the_cluster(cluster):
     time.sleep(1)
     cluster._client.cancel(list(cluster._futures.values()), force=True)
     assert isinstance(next_of(cluster).error, ClusterTrouble)
+
+
+def test_a_timeout_of_the_task_itself_is_its_error(cluster):
+    cluster.submit("late", be_late)
+    assert str(next_of(cluster).error) == "the task's own"
+
+
+def be_late():
+    raise TimeoutError("the task's own")
+
+
+def test_a_result_lost_with_its_worker_is_made_again_while_the_run_looks_on(cluster, monkeypatch):
+    monkeypatch.setattr(executors, "HAND_OVER_SECONDS", 0.2)
+    cluster.submit("first", os.getpid)
+    while cluster._done.empty():
+        time.sleep(0.05)
+    for worker in workers_of_this_process():
+        worker.kill()
+    assert cluster.next_finished() is None
+    assert next_of(cluster).result in {worker.pid for worker in workers_of_this_process()}
+
+
+def workers_of_this_process():
+    children = psutil.Process().children(recursive=True)
+    return [child for child in children if "spawn_main" in " ".join(child.cmdline())]
+
+
+def close_nannies(executor):
+    async def close():
+        for nanny in list(executor._cluster.workers.values()):
+            await nanny.close()
+
+    executor._cluster.sync(close)
+
+
+def test_a_worker_that_is_gone_for_good_is_replaced(tmp_path, monkeypatch):
+    monkeypatch.setattr(executors, "LOST_WORKER_SECONDS", 0.5)
+    with open_cluster(1, MEMORY, tmp_path) as executor:
+        close_nannies(executor)
+        executor.submit("a", add, 1, 1)
+        assert next_of(executor).result == 2
+
+
+def test_without_any_worker_the_run_does_not_wait_for_ever(tmp_path, monkeypatch):
+    monkeypatch.setattr(executors, "NO_WORKERS_SECONDS", 1.0)
+    with open_cluster(1, MEMORY, tmp_path) as executor:
+        close_nannies(executor)
+        executor.submit("a", add, 1, 1)
+        error = next_of(executor).error
+        assert isinstance(error, ClusterTrouble)
+        assert "worker processes are gone" in str(error)
 
 
 def test_workers_have_one_thread(cluster):

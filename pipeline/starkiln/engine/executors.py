@@ -9,6 +9,7 @@ import queue
 import signal
 from collections import deque
 from collections.abc import Callable, Iterator
+from concurrent.futures import CancelledError
 from contextlib import ExitStack, contextmanager, suppress
 from dataclasses import dataclass
 from multiprocessing import resource_tracker
@@ -23,6 +24,13 @@ SMALL_RUN_ROWS = 500
 WORKER_DEATHS_ALLOWED = 3
 
 POLL_SECONDS = 0.5
+HAND_OVER_SECONDS = 2.0
+LOST_WORKER_SECONDS = 30.0
+"""A worker that has not come back by then is replaced."""
+
+NO_WORKERS_SECONDS = 120.0
+"""Without any worker for so long, the run ends."""
+
 KILL_SECONDS = 0.1
 
 
@@ -83,13 +91,11 @@ class SerialExecutor:
 
 
 class ClusterExecutor:
-    """Runs tasks on the workers of a dask client."""
+    """Runs tasks on the workers of a dask cluster, and replaces workers that are lost for good."""
 
-    def __init__(self, client: Any, workers: int) -> None:
+    def __init__(self, cluster: Any, client: Any, workers: int) -> None:
         self.workers = workers
-        from distributed import KilledWorker
-
-        self._killed = KilledWorker
+        self._cluster = cluster
         self._client = client
         self._futures: dict[str, Any] = {}
         self._done: queue.SimpleQueue[Any] = queue.SimpleQueue()
@@ -102,23 +108,36 @@ class ClusterExecutor:
 
     def next_finished(self) -> Finished | None:
         """Wait a short while for a task to end, and return it."""
+        if len(self._cluster.workers) < self.workers:
+            self._cluster.scale(self.workers)
         try:
             future = self._done.get(timeout=POLL_SECONDS)
         except queue.Empty:
             return None
+        try:
+            finished = Finished(future.key, future.result(timeout=HAND_OVER_SECONDS), None)
+        except Exception as error:
+            if future.status not in ("error", "cancelled"):
+                # The worker died before it handed the result over, so the task is done again.
+                future.add_done_callback(self._done.put)
+                return None
+            finished = Finished(future.key, None, _plain_error(error))
         del self._futures[future.key]
-        if future.cancelled():
-            lost = ClusterTrouble("the workers cannot be reached any more; run again")
-            return Finished(future.key, None, lost)
-        error = future.exception()
-        result = None if error is not None else future.result()
-        if isinstance(error, self._killed):
-            error = WorkerDied(f"its worker died {WORKER_DEATHS_ALLOWED + 1} times")
-        elif error is not None:
-            error = error.with_traceback(future.traceback())
         # An erred future stays in the scheduler until it is released.
         future.release()
-        return Finished(future.key, result, error)
+        return finished
+
+
+def _plain_error(error: Exception) -> Exception:
+    """Return the error of a task, with dask's own ones in terms of this program."""
+    from distributed import KilledWorker
+    from distributed.scheduler import NoWorkerError
+
+    if isinstance(error, KilledWorker):
+        return WorkerDied(f"its worker died {WORKER_DEATHS_ALLOWED + 1} times")
+    if isinstance(error, NoWorkerError | CancelledError):
+        return ClusterTrouble("the worker processes are gone and cannot be started again; run again when mended")
+    return error
 
 
 @contextmanager
@@ -146,6 +165,8 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
     one_thread = dict.fromkeys(("OMP_NUM_THREADS", "MKL_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS"), "1")
     options = {
         "distributed.scheduler.allowed-failures": WORKER_DEATHS_ALLOWED,
+        "distributed.scheduler.no-workers-timeout": NO_WORKERS_SECONDS,
+        "distributed.deploy.lost-worker-timeout": LOST_WORKER_SECONDS,
         "distributed.nanny.pre-spawn-environ": {**one_thread, "MALLOC_TRIM_THRESHOLD_": "65536"},
         "distributed.comm.require-encryption": True,
         # Results are small; what a worker spills to disk it would unpickle from there.
@@ -177,7 +198,7 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
                 f"cannot start {workers} worker processes ({error}); try fewer with --workers"
             ) from error
         try:
-            yield ClusterExecutor(client, workers)
+            yield ClusterExecutor(cluster, client, workers)
         except BaseException:
             # Workers may be dying already, of the same signal that ends this block.
             with suppress(Exception):

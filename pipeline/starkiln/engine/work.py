@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from starkiln.engine.closing import part_path
-from starkiln.engine.executors import Executor, Finished, WorkerDied
+from starkiln.engine.executors import ClusterTrouble, Executor, Finished, WorkerDied
 from starkiln.engine.job import Job, SavedJob
 from starkiln.engine.plan import Plan, Unit
 from starkiln.engine.tasks import Cut, Fitted, Part, cut_unit, fit_part
@@ -111,7 +111,7 @@ class Work:
         assert error is not None
         if isinstance(error, StarkilnError) and not isinstance(error, EnvironmentTrouble):
             raise error
-        if tries < TRIES:
+        if tries < TRIES and not isinstance(error, ClusterTrouble):
             self._submit(task, tries + 1)
             return
         if isinstance(error, EnvironmentTrouble):
