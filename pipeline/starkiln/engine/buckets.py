@@ -8,6 +8,8 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
+from starkiln.engine.disk import disk_trouble
+
 BUCKET_ROWS = 1_000_000
 
 
@@ -25,7 +27,8 @@ class Buckets:
     """
 
     def __init__(self, folder: Path, rows: int, dtype: np.dtype[np.void]) -> None:
-        folder.mkdir()
+        with disk_trouble(folder):
+            folder.mkdir()
         count = max(1, -(-rows // BUCKET_ROWS))
         self._paths = [folder / f"{number:06d}.bin" for number in range(count)]
         self._dtype = dtype
@@ -37,8 +40,9 @@ class Buckets:
             records[name] = values
         bucket = self._bucket(records["id_hash"])
         for number in np.unique(bucket):
-            with self._paths[number].open("ab") as file:
-                records[bucket == number].tofile(file)
+            path = self._paths[number]
+            with disk_trouble(path), path.open("ab") as file:
+                file.write(records[bucket == number].tobytes())
 
     def _bucket(self, hashes: NDArray[np.int64]) -> NDArray[np.int64]:
         top_bits = (hashes >> 32) + 2**31
@@ -48,5 +52,7 @@ class Buckets:
         """Yield the records of each file in turn, in the order they came, and remove the file."""
         for path in self._paths:
             if path.exists():
-                yield np.fromfile(path, self._dtype)
-                path.unlink()
+                with disk_trouble(path):
+                    records = np.fromfile(path, self._dtype)
+                    path.unlink()
+                yield records

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import shutil
 from collections import defaultdict
 from collections.abc import Callable
 from pathlib import Path
@@ -12,6 +11,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from starkiln.engine.buckets import BUCKET_ROWS, Buckets
+from starkiln.engine.disk import remove_folder
 from starkiln.engine.plan import Plan
 from starkiln.settings import Settings
 from starkiln.tables.columns import (
@@ -75,7 +75,7 @@ def close_generation(
         paths = [part_path(parts, table, number) for number in numbers]
         files[table] += pack(paths, target, schemas[table], settings.output.rows_per_file)
     files["index"] = _write_index(plan, shelves, settings.output.rows_per_file, partial, scratch, check)
-    shutil.rmtree(parts)
+    remove_folder(parts)
     return dict(files)
 
 

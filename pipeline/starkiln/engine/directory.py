@@ -14,6 +14,7 @@ from pathlib import Path
 
 from filelock import FileLock, Timeout
 
+from starkiln.engine.disk import remove_folder
 from starkiln.errors import DirectoryBusy, EnvironmentTrouble, SettingsError
 
 
@@ -106,8 +107,7 @@ def scratch_folder(run_dir: Path, base: Path | None) -> Iterator[Path]:
     digest = hashlib.sha256(os.fsencode(run_dir)).hexdigest()[:12]
     folder = run_dir / "scratch" if base is None else base / f"starkiln-{digest}"
     try:
-        if folder.exists():
-            shutil.rmtree(folder)
+        remove_folder(folder)
         folder.mkdir(parents=True, mode=0o700)
     except OSError as error:
         raise EnvironmentTrouble(

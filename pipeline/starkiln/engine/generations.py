@@ -8,6 +8,7 @@ import shutil
 import uuid
 from pathlib import Path
 
+from starkiln.engine.disk import remove_folder
 from starkiln.tables.write import sync_folder
 
 LINKED = ("catalogue", "rejected", "report")
@@ -35,7 +36,7 @@ class Generations:
     def begin(self) -> Path:
         """Remove what unfinished runs left and make the folder of the next generation, still partial."""
         for stale in self._folder.glob("*.partial"):
-            shutil.rmtree(stale)
+            remove_folder(stale)
         number = max(self.numbers(), default=0) + 1
         partial = self._folder / f"{number:06d}.partial"
         partial.mkdir(parents=True)

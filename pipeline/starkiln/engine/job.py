@@ -15,6 +15,7 @@ from typing import Any
 
 import pyarrow as pa
 
+from starkiln.engine.disk import disk_trouble
 from starkiln.errors import EnvironmentTrouble
 from starkiln.settings import Settings, build_settings, dump_toml
 from starkiln.tables.source import Source, SourceFile
@@ -98,7 +99,8 @@ class Job:
         }
         # Processes remember the job by its path, so no two jobs ever share one.
         path = self.scratch / f"job.{uuid.uuid4().hex}.json"
-        path.write_text(json.dumps(data))
+        with disk_trouble(path):
+            path.write_text(json.dumps(data))
         return SavedJob(path, name_of(self.stages.build_model), name_of(self.stages.process_part))
 
 
@@ -124,7 +126,8 @@ def open_job(job: Job | SavedJob) -> Job:
 
 @lru_cache(maxsize=1)
 def _read_job(saved: SavedJob) -> Job:
-    data = json.loads(saved.path.read_text())
+    with disk_trouble(saved.path):
+        data = json.loads(saved.path.read_text())
     settings = build_settings(tomllib.loads(data["settings"]))
     stages = Stages(named(saved.build_model), named(saved.process_part))
     model = stages.build_model(settings)

@@ -15,7 +15,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from starkiln.engine.buckets import Buckets
-from starkiln.engine.repeats import RECORD, id_digests, mark_repeats
+from starkiln.engine.disk import disk_trouble
+from starkiln.engine.repeats import RECORD, id_digests, mark_repeats, write_marks
 from starkiln.errors import EnvironmentTrouble, InputError
 from starkiln.settings import Settings
 from starkiln.tables.source import Source, SourceBatch, read_rows
@@ -139,12 +140,14 @@ def make_plan(
             f"input.where and input.only leave none of the {starts[-1]} rows of {settings.input.tables}: loosen them"
         )
     duplicates = 0
-    (scratch / "marks").mkdir()
+    folder = scratch / "marks"
+    with disk_trouble(folder):
+        folder.mkdir()
     for number, records in enumerate(buckets.drain()):
         marks = mark_repeats(np.stack([records["id_hash"], records["more_hash"]], axis=1), records["row"])
         duplicates += int((marks & 1).sum())
         if len(marks):
-            np.save(scratch / "marks" / f"{number:06d}.npy", marks)
+            write_marks(marks, folder, number)
         between_batches(0)
     part_rows = rows_per_part(int(selected.sum()), workers, settings.compute.rows_per_part)
     folders = _folders(source, pieces, settings.output.layout)

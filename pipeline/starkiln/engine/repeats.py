@@ -9,6 +9,7 @@ import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
 
+from starkiln.engine.disk import disk_trouble
 from starkiln.tables.hashes import canonical_ids
 
 RECORD = np.dtype([("id_hash", "<i8"), ("more_hash", "<i8"), ("row", "<i8")])
@@ -65,19 +66,27 @@ def copies(marks: NDArray[np.int64], rows: NDArray[np.int64]) -> NDArray[np.int8
     return copy
 
 
+def write_marks(marks: NDArray[np.int64], folder: Path, number: int) -> None:
+    """Write marks that `mark_repeats` returned as a file of a number of its own."""
+    path = folder / f"{number:06d}.npy"
+    with disk_trouble(path):
+        np.save(path, marks)
+
+
 def read_marks(folder: Path, first_row: int, last_row: int) -> NDArray[np.int64]:
     """Return the marks, ascending, of the rows from `first_row` to before `last_row`.
 
     Parameters
     ----------
     folder
-        The folder of marks that the plan wrote below its scratch folder.
+        The folder of the files of `write_marks`.
     first_row, last_row
         Places of rows, counted through all files.
     """
     found = []
     for path in sorted(folder.glob("*.npy")):
-        marks = np.load(path, mmap_mode="r")
+        with disk_trouble(path):
+            marks = np.load(path, mmap_mode="r")
         low, high = np.searchsorted(marks, [2 * first_row, 2 * last_row])
         found.append(np.array(marks[low:high]))
     return np.sort(np.concatenate([np.zeros(0, np.int64), *found]))

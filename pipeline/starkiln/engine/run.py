@@ -16,6 +16,7 @@ from typing import Any
 from starkiln.engine import provenance
 from starkiln.engine.closing import close_generation
 from starkiln.engine.directory import check_name, hold, scratch_folder
+from starkiln.engine.disk import disk_trouble
 from starkiln.engine.events import EventLog, open_log
 from starkiln.engine.executors import SMALL_RUN_ROWS, ClusterTrouble, Executor, SerialExecutor, open_cluster
 from starkiln.engine.generations import Generations
@@ -103,7 +104,7 @@ def run_settings(
     run_dir = settings.run.output
     start = datetime.now(UTC)
     noting = StopFlag() if stop is None else nullcontext(stop)
-    with noting as stop, _disk_trouble(run_dir), hold(run_dir):
+    with noting as stop, disk_trouble(run_dir), hold(run_dir):
         check_name(run_dir, settings.run.name)
         with open_log(run_dir, start) as log, _end_logged(log):
             log.write("start", name=settings.run.name, starkiln=provenance.versions()["starkiln"])
@@ -116,15 +117,6 @@ def run_settings(
                 raise
             log.write("end", exit_code=result.exit_code, message=result.message)
             return result
-
-
-@contextmanager
-def _disk_trouble(run_dir: Path) -> Iterator[None]:
-    try:
-        yield
-    except OSError as error:
-        where = error.filename or run_dir
-        raise EnvironmentTrouble(f"{where}: {error.strerror or error}; mend it and run again") from error
 
 
 @contextmanager

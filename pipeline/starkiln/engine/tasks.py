@@ -14,6 +14,7 @@ import numpy as np
 import pyarrow as pa
 
 from starkiln.engine.closing import part_path
+from starkiln.engine.disk import disk_trouble
 from starkiln.engine.job import Job, SavedJob, open_job
 from starkiln.engine.plan import BATCH_ROWS, Unit, file_stamp, row_positions
 from starkiln.engine.repeats import copies, read_marks
@@ -112,7 +113,7 @@ def _deal_rows(batches: Iterator[pa.Table], parts: list[Part], unit: Unit) -> No
     rest: pa.Table | None = None
     for part in parts:
         missing, writer = part.rows, None
-        with pa.OSFile(str(part.path), "wb") as sink:
+        with disk_trouble(part.path), pa.OSFile(str(part.path), "wb") as sink:
             while missing:
                 if rest is None or not rest.num_rows:
                     rest = next(batches, None)
@@ -132,7 +133,7 @@ def _deal_rows(batches: Iterator[pa.Table], parts: list[Part], unit: Unit) -> No
 def fit_part(job: Job | SavedJob, part: Part) -> Fitted:
     """Make the output tables of a part and write them under temporary names beside their places."""
     job = open_job(job)
-    with pa.OSFile(str(part.path), "rb") as file:
+    with disk_trouble(part.path), pa.OSFile(str(part.path), "rb") as file:
         table = pa.ipc.open_file(file).read_all()
     started = time.perf_counter()
     tables, audit = process_rows(job, table)
