@@ -66,6 +66,7 @@ FLAGS: tuple[Flag, ...] = (
         "duplicate_id",
         "The id occurs more than once in the input; this is the first copy, the one fitted.",
     ),
+    Flag(18, "distance_at_bound", "More than 2.5 % of the posterior lies within 5 % of a bound on the distance."),
 )
 
 BY_NAME: dict[str, Flag] = {flag.name: flag for flag in FLAGS}

@@ -91,3 +91,10 @@ def test_parallax_against_the_bounds_leaves_draws_at_the_bound():
     drawn = draw(PARALLAX, 100.0, 0.01, 1350.0, ln_omega, (np.log(1.0), np.log(2.0)))
     assert drawn.kept_share[0] == 0.0
     np.testing.assert_allclose(drawn.ln_dist_pc[0] + 0.5 * ln_omega, 0.0, atol=1e-9)
+
+
+def test_a_sharp_parallax_far_beyond_the_length_scale_is_followed():
+    # The likelihood's peak lies between two nodes of the coarse grid, where the prior has long died out.
+    draws = np.exp(draw(PARALLAX, 0.0101, 1e-8, 10.0, np.zeros(2000)).ln_dist_pc[0])
+    assert np.median(draws) == pytest.approx(1e3 / 0.0101, rel=1e-3)
+    assert draws.std() < 1.0

@@ -23,6 +23,7 @@ FROZEN = {
     "ultraviolet_excess": 15,
     "blackbody_chosen": 16,
     "duplicate_id": 17,
+    "distance_at_bound": 18,
 }
 
 

@@ -162,3 +162,35 @@ def test_an_empty_table_gives_empty_tables_of_the_same_schema(table, whole, sett
     assert part.catalogue.num_rows == 0
     assert part.catalogue.schema.equals(whole.catalogue.schema)
     assert part.draws.schema.equals(whole.draws.schema)
+
+
+def test_garbage_harms_its_own_row_alone(table, whole, settings, model):
+    bad = odd_star(table, flux_2mass_j=1.7e308, error_2mass_j=5e-324, parallax=1e300, parallax_error=1e-300)
+    part = process_part(pa.concat_tables([bad, table.slice(1, 5)]), settings, model)
+    assert part.catalogue.num_rows + part.rejected.num_rows == 6
+    assert part.catalogue.slice(part.catalogue.num_rows - 5).equals(whole.catalogue.slice(1, 5))
+
+
+def test_an_upper_limit_is_no_excess(settings, model):
+    stars, _ = simulate(settings, model, 30, seed=8, noise=(0.002, 0.01))
+    bright = int(np.argmax(stars.flux_jy[:, 0] / stars.error_jy[:, 0]))
+    one = stars.at(np.array([bright]))
+    one.limit[:] = np.arange(len(model.passbands)) == len(model.passbands) - 1
+    one.flux_jy[0, -1] *= 10.0
+    part = process_part(as_table(one, model), settings, model)
+    assert not flagged(part, "infrared_excess")
+    assert part.catalogue["residual_wise_w2"][0].as_py() is None
+
+
+def test_limits_alone_are_quick_to_come_to_nothing(table, settings, model):
+    limits = {f"limit_{label}": True for label in model.passbands}
+    part = process_part(odd_star(table, **limits), settings, model)
+    assert flagged(part, "no_detection")
+    assert not flagged(part, "not_converged")
+    assert part.draws["teff"][0].as_py() is None
+
+
+def test_a_distance_piled_on_its_bound_is_flagged(table):
+    near = make_settings(model={"distance": {"length_scale_pc": 300.0, "bounds_pc": [0.1, 20.0]}})
+    part = process_part(odd_star(table, parallax=1.0, parallax_error=0.1), near, build_model(near))
+    assert flagged(part, "distance_at_bound")

@@ -204,7 +204,7 @@ class TestProblems:
             ({"model": {"distance": {"bounds_pc": [10.0, 1.0]}}}, "model.distance.bounds_pc = [10.0, 1.0]"),
             ({"sampling": {"walkers": 6}}, "sampling.walkers = 6"),
             ({"sampling": {"walkers": 33}}, "sampling.walkers = 33"),
-            ({"sampling": {"max_steps": 0}}, "sampling.max_steps = 0: should be greater than 0"),
+            ({"sampling": {"max_steps": 0}}, "sampling.max_steps = 0: should be greater than or equal to 64"),
             ({"output": {"rows_per_file": 0}}, "output.rows_per_file = 0: should be greater than 0"),
             ({"compute": {"workers": 0}}, 'compute.workers = 0: should be "auto" or a whole number above 0'),
             ({"compute": {"workers": "all"}}, "compute.workers = 'all'"),

@@ -6,6 +6,7 @@ from scipy.optimize import minimize
 from simulated import make_settings, simulate
 from starkiln.inference.ensemble import log_prob_function
 from starkiln.inference.start import climb, find_modes, inverse_positive, solve_positive
+from starkiln.physics.constants import MAS_PER_RAD
 from starkiln.stages.fit import pack_block
 from starkiln.stages.model import build_model
 
@@ -68,3 +69,17 @@ def test_small_linear_algebra():
     matrix, vector = a @ a.T + np.eye(4), rng.normal(size=4)
     np.testing.assert_allclose(solve_positive(matrix, vector), np.linalg.solve(matrix, vector), rtol=1e-12)
     np.testing.assert_allclose(inverse_positive(matrix), np.linalg.inv(matrix), rtol=1e-11)
+
+
+def test_a_band_that_is_grossly_off_hides_no_higher_peak():
+    settings = make_settings(**SECTIONS)
+    model = build_model(settings)
+    stars, truth = simulate(settings, model, 120, seed=12, noise=(0.002, 0.01))
+    stars.flux_jy[:, 4] *= 5.0
+    block = pack_block(stars, model, settings)
+    modes = find_modes(block, model.grid, model.prior)
+    ln_omega = 2.0 * np.log(0.5 * truth["ang_diam"] / MAS_PER_RAD)
+    coords = np.stack([1e4 / truth["teff"], ln_omega + np.log(truth["teff"]), truth["av"]], axis=1)
+    climb(block, model.grid, model.prior, coords)
+    from_the_truth = log_prob_function(block, model.grid, model.prior)(coords)
+    assert (modes.log_density[:, 0] > from_the_truth - 0.5).all()

@@ -1,7 +1,8 @@
-"""exp, log and log Phi in plain arithmetic: the same bits on every x86-64, and free to run in vector lanes.
+"""exp, log, sine and cosine in plain arithmetic: the same bits on every x86-64, and free to run in vector lanes.
 
-The C library's versions differ between CPUs by an ulp or more, which would make a catalogue depend on
-the machine. These use only IEEE add, multiply, divide and bit moves, which do not.
+The C library's versions differ between CPUs by an ulp or more, which would make a catalogue depend on the machine.
+These use only IEEE add, multiply, divide and bit moves, which do not. log Phi, for upper limits, still calls the C
+library.
 """
 
 from __future__ import annotations

@@ -20,7 +20,7 @@ class Agreement(NamedTuple):
     chi2
         (S, L) over measured bands, with the total variance.
     residual
-        (S, B): (observed - model) / total sigma at the first point; NaN for bands not used.
+        (S, B): (observed - model) / total sigma at the first point; NaN for limits and bands not used.
     outlier
         (S, B): chance that the band is an outlier, mean over the points; NaN for limits and bands not used.
     """
@@ -65,7 +65,7 @@ def _compare(points, block, grid, prior, result):
                 model = min(exp(lanes.flux[i] + points[star, 1, i]) * block.inverse_error[star, j], 1e30)
                 sigma = np.sqrt(1.0 + lanes.spread2[i] * model * model)
                 pull = (block.scaled_flux[star, j] - model) / sigma
-                if i == 0:
+                if i == 0 and not block.limit[star, j]:
                     result.residual[star, band] = pull
                 if not block.limit[star, j]:
                     q = pull * pull

@@ -109,7 +109,7 @@ def _diagnose(chain, order, scores, result):
                     for w in range(walkers):
                         ranked[t, w] = 1.0 if chain[star, p, t, w] <= cut else 0.0
                 ess = split_ess(ranked)
-                tail = min(tail, ess) if not np.isnan(ess) else ess
+                tail = min(tail, ess) if not (np.isnan(ess) or np.isnan(tail)) else np.nan
             result.ess_tail[star, p] = tail
             if _has_stray_walker(chain[star, p], result.autocorr_steps[star, p]):
                 result.stray_walker[star] = True

@@ -113,8 +113,9 @@ def _window(kind, value, error, length_scale_pc, low, high):
     best = -np.inf
     for i in range(COARSE + 1):
         height[i] = log_density_of_ln(points[i], kind, value, error, length_scale_pc)
+    _raise_peak(kind, value, error, length_scale_pc, points, height)
+    for i in range(COARSE + 1):
         best = max(best, height[i])
-    best = max(best, _golden_peak(kind, value, error, length_scale_pc, points, height))
     first, last = 0, COARSE
     while height[first] < best - DEPTH:
         first += 1
@@ -129,8 +130,8 @@ def _window(kind, value, error, length_scale_pc, low, high):
 
 
 @kernel
-def _golden_peak(kind, value, error, length_scale_pc, points, height):
-    """Return the log density at the peak, by golden section about the highest point."""
+def _raise_peak(kind, value, error, length_scale_pc, points, height):
+    """Move the highest point to the peak itself, by golden section between its neighbours."""
     top = 0
     for i in range(height.size):
         if height[i] > height[top]:
@@ -145,7 +146,9 @@ def _golden_peak(kind, value, error, length_scale_pc, points, height):
             b = d
         else:
             a = c
-    return log_density_of_ln(0.5 * (a + b), kind, value, error, length_scale_pc)
+    peak = log_density_of_ln(0.5 * (a + b), kind, value, error, length_scale_pc)
+    if peak > height[top]:
+        points[top], height[top] = 0.5 * (a + b), peak
 
 
 @kernel

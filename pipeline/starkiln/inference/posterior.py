@@ -166,10 +166,10 @@ def log_posterior(coords, block, grid, prior, out):
                 add_limit(lanes, ln_omega, block, star, j, total)
             else:
                 add_band(lanes, ln_omega, block, star, j, prior, total, product)
-                if j % 4 == 3:
-                    for i in range(n):
-                        total[i] += 0.5 * log(product[i])
-                        product[i] = 1.0
+            if j % 4 == 3:
+                for i in range(n):
+                    total[i] += 0.5 * log(product[i])
+                    product[i] = 1.0
         for i in range(n):
             out[star * n + i] = total[i] + 0.5 * log(product[i]) + outside[i]
 

@@ -14,6 +14,7 @@ from starkiln.inference.posterior import (
     Block,
     Grid,
     Prior,
+    add_band,
     band_model,
     log_posterior,
     make_lanes,
@@ -85,27 +86,101 @@ def _search(block, grid, prior, ln_teff_nodes, av_nodes, modes):
     profile = np.empty(n_nodes)
     best_av = np.empty(n_nodes)
     best_ln_omega = np.empty(n_nodes)
-    ndim = modes.coords.shape[2]
-    point = np.empty(ndim)
-    curvature = np.empty((ndim, ndim))
     for star in range(block.n_bands.size):
         one = _one_star(block, star)
         _profile(one, grid, prior, ln_teff_nodes, av_nodes, profile, best_av, best_ln_omega)
-        for _ in range(MAX_MODES + 1):
-            peak = _highest_peak(profile)
-            if peak < 0:
-                break
-            point[0] = exp(LN_HEAT_K - ln_teff_nodes[peak])
-            point[1] = best_ln_omega[peak] + ln_teff_nodes[peak]
-            point[2:] = 0.0
-            if prior.fit_av:
-                point[2] = best_av[peak]
-            if prior.fit_jitter:
-                point[ndim - 1] = max(FIRST_LN_JITTER, prior.ln_jitter_min)
-            value = _climb(one, grid, prior, point, curvature)
-            profile[peak] = np.nan
-            if value > -np.inf:
-                _keep(modes, star, point, value, curvature)
+        _climb_peaks(one, grid, prior, ln_teff_nodes, profile, best_av, best_ln_omega, modes, star)
+        if prior.outlier_fraction > 0.0 and _has_outlier(one, grid, prior, modes.coords[star, :1]):
+            # Least squares bend to an outlier and may miss the peaks that leave it out.
+            _profile_by_band(one, grid, prior, ln_teff_nodes, av_nodes, profile, best_av, best_ln_omega)
+            _climb_peaks(one, grid, prior, ln_teff_nodes, profile, best_av, best_ln_omega, modes, star)
+
+
+@kernel
+def _climb_peaks(one, grid, prior, ln_teff_nodes, profile, best_av, best_ln_omega, modes, star):
+    """Climb from the highest peaks of a profile, and keep where that leads."""
+    ndim = modes.coords.shape[2]
+    point = np.empty(ndim)
+    curvature = np.empty((ndim, ndim))
+    for _ in range(MAX_MODES + 1):
+        peak = _highest_peak(profile)
+        if peak < 0:
+            break
+        point[0] = exp(LN_HEAT_K - ln_teff_nodes[peak])
+        point[1] = best_ln_omega[peak] + ln_teff_nodes[peak]
+        point[2:] = 0.0
+        if prior.fit_av:
+            point[2] = best_av[peak]
+        if prior.fit_jitter:
+            point[ndim - 1] = max(FIRST_LN_JITTER, prior.ln_jitter_min)
+        value = _climb(one, grid, prior, point, curvature)
+        profile[peak] = np.nan
+        if value > -np.inf:
+            _keep(modes, star, point, value, curvature)
+
+
+@kernel
+def _has_outlier(one, grid, prior, coords):
+    """Return whether a band is more likely an outlier than not at a point (1, ndim)."""
+    lanes = make_lanes(1, grid.loading.shape[0])
+    ln_teff, ln_omega, av = np.empty(1), np.empty(1), np.empty(1)
+    read_coords(coords, one.av_fixed[0], prior, ln_teff, ln_omega, av, lanes)
+    spline_weights(ln_teff, av, grid, lanes)
+    wide = 1.0 / (prior.outlier_width * prior.outlier_width)
+    for j in range(one.n_bands[0]):
+        if one.limit[0, j]:
+            continue
+        band_model(grid, one, 0, j, lanes)
+        model = min(exp(lanes.flux[0] + ln_omega[0]) * one.inverse_error[0, j], 1e30)
+        q = (one.scaled_flux[0, j] - model) ** 2 / (1.0 + lanes.spread2[0] * model * model)
+        core = (1.0 - prior.outlier_fraction) * exp(-0.5 * q * (1.0 - wide))
+        if core < prior.outlier_fraction / prior.outlier_width:
+            return True
+    return False
+
+
+@kernel
+def _profile_by_band(one, grid, prior, ln_teff, av_nodes, profile, best_av, best_ln_omega):
+    """Log-likelihood, outliers allowed for, at every temperature node: the best of A_V and of each band's own Omega."""
+    n = ln_teff.size
+    n_bands = one.n_bands[0]
+    lanes = make_lanes(n, grid.loading.shape[0])
+    av = np.empty(n)
+    ln_template = np.empty((n_bands, n))
+    spread2 = np.empty((n_bands, n))
+    ln_omega = np.empty(n)
+    total = np.empty(n)
+    product = np.empty(n)
+    profile[:] = -np.inf
+    for a in range(av_nodes.size):
+        av[:] = av_nodes[a] if prior.fit_av else one.av_fixed[0]
+        spline_weights(ln_teff, av, grid, lanes)
+        for j in range(n_bands):
+            band_model(grid, one, 0, j, lanes)
+            ln_template[j] = lanes.flux
+            spread2[j] = lanes.spread2
+        offset = av[0] - one.av_mean[0]
+        log_prior = -0.5 * offset * offset * one.av_inverse_variance[0] - av[0] * one.av_rate[0]
+        for leader in range(n_bands):
+            if one.limit[0, leader] or one.scaled_flux[0, leader] <= 1.0:
+                continue
+            ln_flux = log(one.scaled_flux[0, leader] / one.inverse_error[0, leader])
+            for i in range(n):
+                ln_omega[i] = min(max(ln_flux - ln_template[leader, i], prior.ln_omega_min), prior.ln_omega_max)
+            total[:] = log_prior
+            for j in range(n_bands):
+                lanes.flux[:] = ln_template[j]
+                lanes.spread2[:] = spread2[j]
+                if not one.limit[0, j]:
+                    product[:] = 1.0
+                    add_band(lanes, ln_omega, one, 0, j, prior, total, product)
+                    for i in range(n):
+                        total[i] += 0.5 * log(product[i])
+            for i in range(n):
+                if total[i] > profile[i]:
+                    profile[i] = total[i]
+                    best_av[i] = av[0]
+                    best_ln_omega[i] = ln_omega[i]
 
 
 @kernel
@@ -147,8 +222,6 @@ def _profile(one, grid, prior, ln_teff, av_nodes, profile, best_av, best_ln_omeg
         sum_ft[:] = 0.0
         sum_tt[:] = 1e-300
         for j in range(one.n_bands[0]):
-            if one.limit[0, j]:
-                continue
             band_model(grid, one, 0, j, lanes)
             for k in range(n_factors):
                 # Here the factors count as scatter of each band's own: one loading is the change for z = 1.
@@ -157,7 +230,7 @@ def _profile(one, grid, prior, ln_teff, av_nodes, profile, best_av, best_ln_omeg
                 band_model(grid, one, 0, j, lanes_up)
                 for i in range(n):
                     lanes.spread2[i] += (lanes_up.flux[i] - lanes.flux[i]) ** 2
-            observed = one.scaled_flux[0, j]
+            observed = 0.0 if one.limit[0, j] else one.scaled_flux[0, j]
             for i in range(n):
                 weight = 1.0 / (1.0 + lanes.spread2[i] * observed * observed)
                 template = exp(lanes.flux[i]) * one.inverse_error[0, j]

@@ -205,7 +205,7 @@ class PassbandFile(Section):
     detector: Literal["photon", "energy"]
     """What the detector counts, which tells how the curve weighs a spectrum."""
     zero_point_jy: Positive | None = None
-    """Flux density of magnitude zero in Jy; computed from the curve unless given."""
+    """Flux density of Vega magnitude zero in Jy; AB magnitudes need none."""
     zero_point_error: Annotated[float, Field(ge=0, lt=1)] = 0.0
     """Relative error of the zero point."""
     source: str = ""
@@ -215,9 +215,9 @@ class PassbandFile(Section):
 class Outliers(Section):
     """The share of bands that have nothing to do with the star, and how far off they lie."""
 
-    fraction: Annotated[float, Field(gt=0, lt=0.5)] = 0.02
+    fraction: Annotated[float, Field(ge=1e-6, lt=0.5)] = 0.02
     """Expected fraction of outlying bands."""
-    width: Annotated[float, Field(gt=1)] = 10.0
+    width: Annotated[float, Field(gt=1, le=1000)] = 10.0
     """Their scatter, in units of the band's total error."""
 
 
@@ -243,7 +243,7 @@ class Extinction(Section):
     """Scale of the prior in magnitudes (the sigma of "gaussian"): a number or a column."""
     mean: NumberOrColumn = 0.0
     """Mean of "gaussian", or the value of "fixed", in magnitudes: a number or a column."""
-    max: Positive = 6.0
+    max: Annotated[float, Field(gt=0, le=100)] = 6.0
     """Largest A_V in magnitudes."""
 
     def columns(self) -> list[str]:
@@ -308,7 +308,7 @@ class Sampling(Section):
     """Walkers per star: even, and at least twice the number of parameters plus one."""
     effective_samples: Count = 1000
     """Stop when every parameter has this many independent samples."""
-    max_steps: Count = 4000
+    max_steps: Annotated[int, Field(ge=64)] = 4000
     """Stop here in any case."""
     keep_draws: Annotated[int, Field(ge=0)] = 0
     """Posterior draws per star to store."""

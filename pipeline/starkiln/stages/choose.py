@@ -53,7 +53,7 @@ def log_evidence(stars: Stars, model: FitModel, settings: Settings) -> NDArray[n
 
 def _relative_distance_error(stars: Stars) -> NDArray[np.float64]:
     """Return the fractional error of the distance, infinite where there is none or it is negative."""
-    with np.errstate(invalid="ignore", divide="ignore"):
+    with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
         by_parallax = np.where(stars.parallax_mas > 0.0, stars.parallax_error_mas / stars.parallax_mas, np.inf)
         given = stars.distance_error_pc / stars.distance_pc
     return np.nan_to_num(np.where(np.isfinite(given), given, by_parallax), nan=np.inf)

@@ -25,6 +25,8 @@ class Derived(NamedTuple):
     ----------
     z
         (n_factors, K, N): the photosphere's common factors.
+    source
+        (K, N): the photometric draw that each joint draw takes.
     kept_share
         (K,): effective share of the draws left by the bounds on R.
     """
@@ -37,6 +39,7 @@ class Derived(NamedTuple):
     ln_ang_diam: NDArray[np.float64]
     ln_fbol: NDArray[np.float64]
     z: NDArray[np.float64]
+    source: NDArray[np.int64]
     kept_share: NDArray[np.float64]
 
 
@@ -76,6 +79,7 @@ def derive(stars: Stars, draws: Draws, model: FitModel, settings: Settings) -> D
         z=np.ascontiguousarray(
             photometric[:, model.first_factor : model.first_factor + len(model.grid.loading)].transpose(1, 0, 2)
         ),
+        source=distances.source,
         kept_share=distances.kept_share,
     )
 

@@ -80,7 +80,7 @@ def factor_scale(stars: Stars, modes: Modes) -> NDArray[np.float64]:
     star counts as a dwarf.
     """
     ln_teff = LN_HEAT_K - log_array(modes.coords[:, 0, 0])
-    with np.errstate(invalid="ignore", divide="ignore"):
+    with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
         parallax_pc = np.where(stars.parallax_mas > 3.0 * stars.parallax_error_mas, 1e3 / stars.parallax_mas, np.nan)
         distance_pc = np.where(stars.distance_pc > 3.0 * stars.distance_error_pc, stars.distance_pc, parallax_pc)
         ln_radius = np.log(distance_pc) + 0.5 * (modes.coords[:, 0, 1] - ln_teff) - LN_RSUN_PC

@@ -29,7 +29,12 @@ LN_FLUX_PER_MAG = 0.4 * np.log(10.0)
 MAG_PLACEHOLDER = 50.0
 """No star is this bright (negative) or faint; values beyond are placeholders such as 99 or -999."""
 
-_USABLE, _BAD, _NO_VALUE, _PLACEHOLDER, _NO_ERROR, _ERROR_NOT_POSITIVE = range(6)
+_USABLE, _BAD, _NO_VALUE, _PLACEHOLDER, _NO_ERROR, _ERROR_NOT_POSITIVE, _OUT_OF_RANGE = range(7)
+
+RANGE = 1e30
+"""Fluxes above this and errors beyond it or its inverse, in Jy, are placeholders or garbage."""
+SHARPEST = 1e12
+"""No measurement is this many times its error."""
 
 _NOT_REJECTED = -1
 
@@ -146,11 +151,22 @@ def read_band(table: pa.Table, band: PhotometryColumns, passband: Passband) -> B
     at_sigma = limit & (no_error | not_positive) & (flux_jy > 0)
     error_jy = np.where(at_sigma, flux_jy / band.limit_sigma, error_jy)
     fault = np.select(
-        [_marks(table, band.bad), no_value, placeholder, no_error & ~at_sigma, not_positive & ~at_sigma],
-        [_BAD, _NO_VALUE, _PLACEHOLDER, _NO_ERROR, _ERROR_NOT_POSITIVE],
+        [
+            _marks(table, band.bad),
+            no_value,
+            placeholder,
+            no_error & ~at_sigma,
+            not_positive & ~at_sigma,
+            ~_sane(flux_jy, error_jy),
+        ],
+        [_BAD, _NO_VALUE, _PLACEHOLDER, _NO_ERROR, _ERROR_NOT_POSITIVE, _OUT_OF_RANGE],
         _USABLE,
     ).astype(np.int8)
     return BandValues(flux_jy, error_jy, limit, fault)
+
+
+def _sane(value: NDArray[np.float64], error: NDArray[np.float64]) -> NDArray[np.bool_]:
+    return (np.abs(value) <= RANGE) & (error >= 1.0 / RANGE) & (error <= RANGE) & (np.abs(value) / SHARPEST <= error)
 
 
 def _marks(table: pa.Table, column: str | None) -> NDArray[np.bool_]:
@@ -224,7 +240,7 @@ def _distance_pc(table: pa.Table, settings: Settings) -> tuple[NDArray[np.float6
 def _measured(
     value: NDArray[np.float64], error: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    usable = np.isfinite(value) & np.isfinite(error) & (error > 0)
+    usable = _sane(value, error)
     return np.where(usable, value, np.nan), np.where(usable, error, np.nan)
 
 
@@ -296,6 +312,7 @@ def _fault_text(pattern: NDArray[np.int8], bands: Sequence[PhotometryColumns], n
         _PLACEHOLDER: "{0.value} is a placeholder",
         _NO_ERROR: "{0.error} has no value",
         _ERROR_NOT_POSITIVE: "{0.error} is not positive",
+        _OUT_OF_RANGE: "{0.value} or {0.error} is out of range",
     }
     faults = [told[fault].format(band) for band, fault in zip(bands, pattern.tolist(), strict=True) if fault]
     return f"{len(bands) - len(faults)} usable of {needed} needed: {', '.join(faults)}"

@@ -89,7 +89,7 @@ def _fit_rows(
         audited = combined(audited, audit(fitted, mode, model))
         _place(columns, rows[places], len(stars), summarise(some, fitted, derived, mode, model, settings))
         if settings.sampling.keep_draws:
-            _place(draws, rows[places], len(stars), kept_draws(derived, settings))
+            _place(draws, rows[places], len(stars), kept_draws(some, derived, settings))
     return audited
 
 
@@ -116,7 +116,9 @@ def _table(schema: pa.Schema, kept: pa.Table, columns: dict[str, np.ndarray]) ->
 def _array(values: np.ndarray, kind: pa.DataType) -> pa.Array:
     """Return an Arrow array of a type; NaN becomes null."""
     if pa.types.is_fixed_size_list(kind):
-        return pa.FixedSizeListArray.from_arrays(pa.array(values.ravel(), kind.value_type), kind.list_size)
+        flat = pa.array(values.ravel(), kind.value_type)
+        missing = pa.array(np.isnan(values).all(axis=1))
+        return pa.FixedSizeListArray.from_arrays(flat, kind.list_size, mask=missing)
     if values.dtype.kind == "f":
         return pa.array(values.astype(kind.to_pandas_dtype()), kind, mask=np.isnan(values))
     return pa.array(values, kind)

@@ -29,8 +29,7 @@ FEW_BANDS = 5
 POOR_PARALLAX = 5.0
 POOR_FIT = 0.001
 ODD_SIGMA = 2.0
-MOST_OUTLIERS = 6
-LEAST_KEPT_SHARE = 0.1
+LEAST_KEPT_SHARE = 0.5
 OUTLIER = 0.9
 EXCESS_SIGMA = 3.0
 CONTRADICTION_SIGMA = 1.0
@@ -73,7 +72,7 @@ def summarise(
     columns |= _correlations(derived, no_detection)
     columns |= _agreement(fitted, derived, mode, model)
     columns |= _diagnostics(fitted, derived)
-    columns |= _factors(derived, no_detection)
+    columns |= _factors(derived, no_detection, model)
     columns["photosphere"] = np.full(len(stars), model.photosphere)
     columns["ln_evidence_ratio"] = np.full(len(stars), np.nan)
     columns["n_bands"] = stars.usable.sum(axis=1)
@@ -82,14 +81,17 @@ def summarise(
     return columns
 
 
-def kept_draws(derived: Derived, settings: Settings) -> dict[str, NDArray[np.float32]]:
-    """Return evenly spaced joint draws (K, keep_draws) of each quantity, as they are reported."""
+def kept_draws(stars: Stars, derived: Derived, settings: Settings) -> dict[str, NDArray[np.float32]]:
+    """Return evenly spaced joint draws (K, keep_draws) of each quantity; NaN where the catalogue is null."""
+    no_detection = _detections(stars) < 2
     n = derived.ln_teff.shape[1]
     places = np.linspace(0, n - 1, settings.sampling.keep_draws).astype(np.int64)
     kept = {}
     for name, draws, logarithmic in _reported(derived):
         some = np.ascontiguousarray(draws[:, places])
         kept[name] = (exp_array(some) if logarithmic else some).astype(np.float32)
+        if name in NOT_WITHOUT_DETECTION:
+            kept[name][no_detection] = np.nan
     return kept
 
 
@@ -122,8 +124,9 @@ def _correlations(derived: Derived, no_detection: NDArray[np.bool_]) -> Columns:
 
 
 def mode_points(fitted: Fitted, derived: Derived, model: FitModel) -> NDArray[np.float64]:
-    """Return the posterior mode of each star, (K, 3 or more, 1) as `_points`: the best draw, climbed from."""
-    best = np.argmax(fitted.draws.log_prob, axis=1)
+    """Return the posterior mode of each star, (K, 3 or more, 1) as `_points`: the best joint draw, climbed from."""
+    log_prob = np.take_along_axis(fitted.draws.log_prob, derived.source, axis=1)
+    best = np.take_along_axis(derived.source, np.argmax(log_prob, axis=1)[:, None], axis=1)[:, 0]
     chain = np.take_along_axis(fitted.draws.chain, best[:, None, None], axis=2)[:, :, 0]
     coords = chain.copy()
     coords[:, 0] = exp_array(LN_HEAT_K - chain[:, 0])
@@ -136,10 +139,10 @@ def mode_points(fitted: Fitted, derived: Derived, model: FitModel) -> NDArray[np
 
 
 def _thinned(fitted: Fitted, derived: Derived, model: FitModel) -> NDArray[np.float64]:
-    """Return PREDICTIVE_DRAWS evenly spaced photometric draws, as `_points` lays them out."""
-    chain = fitted.draws.chain
-    places = np.linspace(0, chain.shape[2] - 1, PREDICTIVE_DRAWS).astype(np.int64)
-    return _points(chain[:, :, places], derived, model)
+    """Return PREDICTIVE_DRAWS evenly spaced joint draws, as `_points` lays them out."""
+    places = np.linspace(0, derived.source.shape[1] - 1, PREDICTIVE_DRAWS).astype(np.int64)
+    chain = np.take_along_axis(fitted.draws.chain, derived.source[:, None, places], axis=2)
+    return _points(chain, derived, model)
 
 
 def _points(chain: NDArray[np.float64], derived: Derived, model: FitModel) -> NDArray[np.float64]:
@@ -150,10 +153,10 @@ def _points(chain: NDArray[np.float64], derived: Derived, model: FitModel) -> ND
     return np.ascontiguousarray(np.concatenate([chain[:, :2], av, chain[:, 2:]], axis=1))
 
 
-def _factors(derived: Derived, no_detection: NDArray[np.bool_]) -> Columns:
-    """Return the quantiles of the first common factor; NaN without factors."""
+def _factors(derived: Derived, no_detection: NDArray[np.bool_], model: FitModel) -> Columns:
+    """Return the quantiles of the first factor learnt from stars; NaN without one."""
     values = np.full((len(no_detection), len(QUANTILE_NAMES)), np.nan)
-    if len(derived.z):
+    if model.departures is not None and model.departures.factors[:1] not in ((), ("fallback",)):
         values = quantiles(derived.z[0])
         values[no_detection] = np.nan
     return {f"photosphere_z1_{name}": values[:, place] for name, place in (("lo68", 1), ("p50", 2), ("hi68", 3))}
@@ -193,7 +196,7 @@ def predictive_chance(chi2: NDArray[np.float64], n_bands: NDArray[np.int64], pri
     n = n_bands[:, None].astype(np.float64)
     none = gammaincc(np.maximum(n, 1.0) / 2.0, chi2 / 2.0)
     total = (1.0 - prior.outlier_fraction) ** n * none
-    for k in range(1, MOST_OUTLIERS + 1):
+    for k in range(1, int(n_bands.max(initial=0)) + 1):
         rest = np.maximum(chi2 - (n - k), 0.0) / prior.outlier_width**2
         weight = binom(n, k) * prior.outlier_fraction**k * (1.0 - prior.outlier_fraction) ** np.maximum(n - k, 0.0)
         total += weight * gammaincc(k / 2.0, rest / 2.0)
@@ -230,14 +233,14 @@ def _flags(
             "poor_parallax": has_parallax & (stars.parallax_mas < POOR_PARALLAX * stars.parallax_error_mas),
             "negative_parallax": has_parallax & (stars.parallax_mas < 0.0),
             "no_parallax": ~has_parallax & ~given,
-            "not_converged": ~fitted.draws.converged | (derived.kept_share < LEAST_KEPT_SHARE),
-            "several_modes": _several_modes(derived) & ~no_detection,
+            "not_converged": ~fitted.draws.converged | _lost_draws(columns, derived, settings),
+            "several_modes": _several_modes(fitted) & ~no_detection,
             "no_detection": no_detection,
             "poor_fit": columns["ppp_value"] < POOR_FIT,
             "band_outlier": _any_band(columns, "outlier", list(model.passbands), OUTLIER),
             "infrared_excess": _excess(stars, columns, model, is_infrared=True),
             "odd_photosphere": np.abs(columns["photosphere_z1_p50"]) > ODD_SIGMA,
-            "outside_calibration": _outside_calibration(stars, columns, model),
+            "outside_calibration": _outside_calibration(stars, columns, model) & ~no_detection,
             "blackbody_chosen": np.full(len(stars), settings.model.photosphere == "auto" and model.departures is None),
             "ultraviolet_excess": _excess(stars, columns, model, is_infrared=False),
             **_at_bounds(derived, model.prior, settings),
@@ -257,9 +260,23 @@ def _outside_calibration(stars: Stars, columns: Columns, model: FitModel) -> NDA
     return np.asarray((stars.usable & ~good).sum(axis=1) > 0.5 * stars.usable.sum(axis=1))
 
 
-def _several_modes(derived: Derived) -> NDArray[np.bool_]:
-    interval = quantiles(derived.ln_teff)
-    return has_gap(derived.ln_teff, interval[:, 3] - interval[:, 1])
+def _distance_at_bound(derived: Derived, settings: Settings) -> NDArray[np.bool_]:
+    nearest, farthest = np.log(settings.model.distance.bounds_pc)
+    ln_dist = quantiles(derived.ln_dist)
+    return np.asarray((ln_dist[:, 0] < nearest + 0.05) | (ln_dist[:, 4] > farthest - 0.05))
+
+
+def _lost_draws(columns: Columns, derived: Derived, settings: Settings) -> NDArray[np.bool_]:
+    """Return whether the bounds on R have left fewer effective draws than half of what was asked for."""
+    too_few = columns["ess_bulk"] < LEAST_KEPT_SHARE * settings.sampling.effective_samples
+    return np.asarray(too_few & (derived.kept_share < 1.0))
+
+
+def _several_modes(fitted: Fitted) -> NDArray[np.bool_]:
+    # The chain itself: joint draws may repeat, which looks like gaps.
+    ln_teff = np.ascontiguousarray(fitted.draws.chain[:, 0])
+    interval = quantiles(ln_teff)
+    return has_gap(ln_teff, interval[:, 3] - interval[:, 1])
 
 
 def _at_bounds(derived: Derived, prior: Prior, settings: Settings) -> dict[str, NDArray[np.bool_]]:
@@ -268,6 +285,7 @@ def _at_bounds(derived: Derived, prior: Prior, settings: Settings) -> dict[str, 
     return {
         "temperature_at_bound": (ln_teff[:, 0] < prior.ln_teff_min + 0.01) | (ln_teff[:, 4] > prior.ln_teff_max - 0.01),
         "extinction_at_bound": (av[:, 4] > 0.98 * prior.av_max) & prior.fit_av,
+        "distance_at_bound": _distance_at_bound(derived, settings),
         "radius_at_bound": (ln_radius[:, 0] < ln_radius_min + 0.05)
         | (ln_radius[:, 4] > ln_radius_max - 0.05)
         | (derived.kept_share == 0.0),

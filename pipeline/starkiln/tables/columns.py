@@ -119,7 +119,8 @@ _SINGLE = (
         pa.float32(),
         None,
         "stat.fit.chi2",
-        "Chi squared of the measured bands at the posterior mode, total variance (errors and floors)",
+        "Chi squared of the measured bands at the posterior mode (common departures fitted), with the total variance: "
+        "errors, floors, own scatter, jitter",
     ),
     Column("n_bands", pa.int16(), None, "meta.number", "Number of bands fitted, upper limits included"),
     Column("n_limits", pa.int16(), None, "meta.number", "Number of bands fitted as upper limits"),
