@@ -17,7 +17,7 @@ BELOW = {
     "calibration": {"errors", "physics"},
     "inference": {"errors", "flags", "physics"},
     "tables": {"errors", "flags", "settings"},
-    "stages": {"errors", "flags", "settings", "tables", "physics", "inference"},
+    "stages": {"errors", "flags", "settings", "tables", "physics", "calibration", "inference"},
     "engine": {"errors", "flags", "settings", "tables", "stages"},
     "report": {"errors", "flags", "settings", "tables", "physics", "inference", "stages", "engine"},
     "cli": {"errors", "flags", "settings", "tables", "physics", "inference", "stages", "engine", "report"},

@@ -342,8 +342,8 @@ class Calibrate(Section):
     """Extinction A_V of the stars in magnitudes: a number or a column."""
     good: Text | None = None
     """Boolean column: only rows where it is true are used."""
-    factors: Literal["auto", 0, 1, 2] = "auto"
-    """Number of common factors; "auto" leaves it to cross-validation."""
+    factors: Literal["auto", 0, 1] = "auto"
+    """Number of common factors, beside the scatter of the temperature scale; "auto" leaves it to cross-validation."""
     train: Annotated[float, Field(gt=0, lt=1)] = 0.5
     """Share of the stars that the held-out figures are learnt from; the file is learnt from all."""
 
