@@ -126,6 +126,7 @@ def raise_once(table: pa.Table, settings: Settings, model: NoModel) -> PartTable
 
 def kill_worker(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
     if _has_failing_id(table, settings):
+        time.sleep(1)
         os.kill(os.getpid(), signal.SIGKILL)
     return pass_through(table, settings, model)
 
@@ -133,6 +134,11 @@ def kill_worker(table: pa.Table, settings: Settings, model: NoModel) -> PartTabl
 def lose_a_row(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
     made = pass_through(table, settings, model)
     return PartTables(made.catalogue.slice(1), made.rejected, made.draws)
+
+
+def take_a_moment(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
+    time.sleep(0.5)
+    return pass_through(table, settings, model)
 
 
 def take_long(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:

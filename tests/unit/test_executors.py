@@ -7,6 +7,7 @@ import dask
 import psutil
 import pytest
 
+from real_runs import workers_of
 from starkiln.engine import executors
 from starkiln.engine.executors import ClusterTrouble, Finished, SerialExecutor, WorkerDied, open_cluster
 
@@ -100,15 +101,10 @@ def test_a_result_lost_with_its_worker_is_made_again_while_the_run_looks_on(clus
     cluster.submit("first", os.getpid)
     while cluster._done.empty():
         time.sleep(0.05)
-    for worker in workers_of_this_process():
+    for worker in workers_of(os.getpid()):
         worker.kill()
     assert cluster.next_finished() is None
-    assert next_of(cluster).result in {worker.pid for worker in workers_of_this_process()}
-
-
-def workers_of_this_process():
-    children = psutil.Process().children(recursive=True)
-    return [child for child in children if "spawn_main" in " ".join(child.cmdline())]
+    assert next_of(cluster).result in {worker.pid for worker in workers_of(os.getpid())}
 
 
 def close_nannies(executor):

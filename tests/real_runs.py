@@ -1,0 +1,69 @@
+"""Runs of fake stages in processes of their own, to be disturbed."""
+
+from __future__ import annotations
+
+import os
+import subprocess
+import sys
+import time
+from collections.abc import Callable
+from contextlib import suppress
+from pathlib import Path
+
+import psutil
+
+from starkiln.settings import Settings, dump_toml
+
+MAIN = """
+import sys
+import fake_stages
+from starkiln import cli
+from starkiln.engine import run
+if __name__ == "__main__":
+    stage, small = sys.argv.pop(), sys.argv.pop()
+    run.SMALL_RUN_ROWS = int(small)
+    run.fitting_stages = lambda: fake_stages.stages(getattr(fake_stages, stage))
+    cli.main()
+"""
+
+
+def start_run(folder: Path, settings: Settings, stage: str, *, cluster: bool = True) -> subprocess.Popen[str]:
+    """Start a run that does one of the fake stages, in a process group of its own."""
+    (folder / "run.toml").write_text(dump_toml(settings))
+    (folder / "main.py").write_text(MAIN)
+    return subprocess.Popen(
+        [sys.executable, folder / "main.py", "run", folder / "run.toml", "0" if cluster else "1000000000", stage],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+        start_new_session=True,
+        env=os.environ | {"PYTHONPATH": os.pathsep.join(sys.path)},
+    )
+
+
+def ended(process: subprocess.Popen[str]) -> tuple[int, str, str]:
+    """Wait for a run; return its exit code, output and errors."""
+    out, err = process.communicate(timeout=120)
+    return process.returncode, out, err
+
+
+def wait_until(process: subprocess.Popen[str], happens: Callable[[], object]) -> None:
+    deadline = time.monotonic() + 60
+    while not happens():
+        assert process.poll() is None, process.communicate()
+        assert time.monotonic() < deadline
+        time.sleep(0.02)
+
+
+def workers_of(pid: int) -> list[psutil.Process]:
+    """The worker processes that a process has started."""
+    workers = []
+    for child in psutil.Process(pid).children(recursive=True):
+        with suppress(psutil.Error):
+            if "spawn_main" in " ".join(child.cmdline()):
+                workers.append(child)
+    return workers
+
+
+def still_running(processes: list[psutil.Process]) -> list[psutil.Process]:
+    return [process for process in processes if process.is_running() and process.status() != psutil.STATUS_ZOMBIE]
