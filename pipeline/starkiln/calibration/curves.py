@@ -17,6 +17,7 @@ FloatArray = NDArray[np.float64]
 _ROBUST_STEPS = 10
 _BIWEIGHT = 4.685  # in robust sigmas: 95 per cent efficient for Gaussian errors (Huber & Ronchetti 2009)
 _MAD_TO_SIGMA = 1.4826
+_SETTLED = 1e-4
 _RIDGE = 1e-9  # keeps coefficients far from any point finite
 SMOOTHNESS_TRIED: FloatArray = np.geomspace(1e-2, 1e2, 9)
 
@@ -71,38 +72,61 @@ def fit_curve(teff_k: ArrayLike, values: ArrayLike, errors: ArrayLike, smoothnes
     smoothness : float
         Weight of the squared second differences of the coefficients.
     """
+    from scipy.linalg import solveh_banded
+
     values, errors = np.asarray(values, dtype=np.float64), np.asarray(errors, dtype=np.float64)
-    design = basis(teff_k)
-    n_coefficients = design.shape[1]
-    bend = np.diff(np.eye(n_coefficients), n=2, axis=0)
-    penalty = smoothness / np.mean(errors) ** 2 * 1e-2 * bend.T @ bend + _RIDGE * np.eye(n_coefficients)
+    first, splines = _local_basis(teff_k)
+    n_coefficients = len(LN_TEFF_NODES) + 2
+    penalty = smoothness / np.mean(errors) ** 2 * 1e-2 * _bend_penalty(n_coefficients)
+    penalty[0] += _RIDGE
     trust = np.ones(len(values))
     coefficients = np.zeros(n_coefficients)
     for _ in range(_ROBUST_STEPS):
         weight = trust / errors**2
-        found = np.linalg.solve(design.T @ (weight[:, np.newaxis] * design) + penalty, design.T @ (weight * values))
-        settled = np.max(np.abs(found - coefficients)) < 1e-4
+        normal, right = penalty.copy(), np.zeros(n_coefficients)
+        for a in range(4):
+            right += np.bincount(first + a, weight * values * splines[:, a], n_coefficients)
+            for b in range(a, 4):
+                normal[b - a] += np.bincount(first + a, weight * splines[:, a] * splines[:, b], n_coefficients)
+        found = solveh_banded(normal, right, lower=True)
+        settled = np.max(np.abs(found - coefficients)) < _SETTLED
         coefficients = found
         if settled:
             break
-        miss = (values - design @ coefficients) / errors
-        scale = max(_MAD_TO_SIGMA * float(np.median(np.abs(miss))), 1e-3)
+        curve = np.sum(splines * coefficients[first[:, np.newaxis] + np.arange(4)], axis=1)
+        miss = (values - curve) / errors
+        scale = max(_MAD_TO_SIGMA * float(np.median(np.abs(miss))), 1.0)  # what its error allows is not odd
         trust = np.clip(1.0 - (miss / (_BIWEIGHT * scale)) ** 2, 0.0, None) ** 2
     return coefficients
 
 
+def _bend_penalty(n: int) -> FloatArray:
+    """Return the matrix of squared second differences of n coefficients, its lower diagonals, (4, n)."""
+    bend = np.diff(np.eye(n), n=2, axis=0)
+    square = bend.T @ bend
+    diagonals = np.zeros((4, n))
+    for offset in range(3):
+        diagonals[offset, : n - offset] = np.diagonal(square, -offset)
+    return diagonals
+
+
 def basis(teff_k: ArrayLike) -> FloatArray:
     """Return the cubic B-splines on the nodes of the departures at temperatures [K], (n, n_nodes + 2)."""
+    first, splines = _local_basis(teff_k)
+    design = np.zeros((len(first), len(LN_TEFF_NODES) + 2))
+    design[np.arange(len(first))[:, np.newaxis], first[:, np.newaxis] + np.arange(4)] = splines
+    return design
+
+
+def _local_basis(teff_k: ArrayLike) -> tuple[NDArray[np.int64], FloatArray]:
+    """Return the first of the four splines that are not zero at each temperature, and their values (n, 4)."""
     position = (np.log(np.atleast_1d(np.asarray(teff_k, dtype=np.float64))) - LN_TEFF_NODES[0]) / LN_TEFF_STEP
     first = np.clip(np.floor(position), 0, len(LN_TEFF_NODES) - 2).astype(np.int64)
     t = position - first
-    design = np.zeros((len(position), len(LN_TEFF_NODES) + 2))
-    rows = np.arange(len(position))
-    design[rows, first] = (1.0 - t) ** 3 / 6.0
-    design[rows, first + 1] = (3.0 * t**3 - 6.0 * t**2 + 4.0) / 6.0
-    design[rows, first + 2] = (-3.0 * t**3 + 3.0 * t**2 + 3.0 * t + 1.0) / 6.0
-    design[rows, first + 3] = t**3 / 6.0
-    return design
+    splines = np.stack(
+        [(1.0 - t) ** 3, 3.0 * t**3 - 6.0 * t**2 + 4.0, -3.0 * t**3 + 3.0 * t**2 + 3.0 * t + 1.0, t**3], axis=1
+    )
+    return first, splines / 6.0
 
 
 def at_nodes(coefficients: FloatArray) -> FloatArray:

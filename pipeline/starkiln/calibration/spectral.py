@@ -15,6 +15,7 @@ FloatArray = NDArray[np.float64]
 _NODES_PER_UNIT = 60  # of ln wavelength
 _ITERATIONS = 6
 _BAND_ERROR = 0.01  # to which the known bands are met
+_RIDGE = 1e-6  # towards the mean of the known bands: one or two alone leave slopes free
 _BEND = 0.01  # second difference, from node to node, that counts as one error
 
 
@@ -71,12 +72,13 @@ def _fit(light: FloatArray, ln_d: FloatArray) -> FloatArray:
     """Return ln D at the nodes: Gauss-Newton steps for the band averages against the bends."""
     n_nodes = light.shape[1]
     bend = np.diff(np.eye(n_nodes), n=2, axis=0) / _BEND
-    normal_of_bend = bend.T @ bend + 1e-6 * np.eye(n_nodes)
-    spectrum = np.full(n_nodes, float(ln_d.mean()))
+    normal_of_bend = bend.T @ bend + _RIDGE * np.eye(n_nodes)
+    mean = float(ln_d.mean())
+    spectrum = np.full(n_nodes, mean)
     for _ in range(_ITERATIONS):
         parts = light * np.exp(spectrum)
         totals = parts.sum(axis=1)
         slopes = parts / totals[:, np.newaxis] / _BAND_ERROR
-        target = slopes.T @ ((ln_d - np.log(totals)) / _BAND_ERROR + slopes @ spectrum)
+        target = slopes.T @ ((ln_d - np.log(totals)) / _BAND_ERROR + slopes @ spectrum) + _RIDGE * mean
         spectrum = np.linalg.solve(slopes.T @ slopes + normal_of_bend, target)
     return spectrum
