@@ -38,7 +38,7 @@ def test_other_errors_pass():
 def write_on(folder, until):
     """Write as a worker does that has not noticed yet that its run is gone."""
     while time.monotonic() < until:
-        with suppress(FileNotFoundError):
+        with suppress(FileNotFoundError, FileExistsError):
             (folder / "below" / "deeper").mkdir(parents=True, exist_ok=True)
             for number in range(50):
                 (folder / "below" / "deeper" / f"{number}").touch()
