@@ -221,6 +221,15 @@ def test_a_spoilt_file_is_refused(tmp_path, old, new, message):
     assert str(path) in str(caught.value)
 
 
+def test_a_file_that_lacks_a_row_is_refused(tmp_path):
+    path = tmp_path / "departures.ecsv"
+    write_departures(made(), path)
+    lines = path.read_text().splitlines(keepends=True)
+    path.write_text("".join(lines[:-1]))
+    with pytest.raises(SettingsError, match="'2mass_ks': its rows are not the nodes of its range"):
+        read_departures(path)
+
+
 def test_a_missing_file_is_named(tmp_path):
     with pytest.raises(SettingsError, match=r"nowhere\.ecsv: no such file"):
         read_departures(tmp_path / "nowhere.ecsv")

@@ -19,8 +19,8 @@ FloatArray = NDArray[np.float64]
 
 OUTLIER_FRACTION, OUTLIER_WIDTH = 0.02, 10.0
 
-_ITERATIONS = 300
-_TOLERANCE = 1e-4
+_ITERATIONS = 1000
+_TOLERANCE = 1e-5
 _SMALLEST_SCATTER = 0.015
 _FIRST_SHIFT = 0.01
 _LARGEST_Z = 4.0  # a star beyond is no member of the family that the factors describe
