@@ -167,6 +167,9 @@ def _add_references(curves: Curves, rows: MeanSequence, dwarfs: Dwarfs) -> None:
         kind: Kind = "sequence" if band in of_rows else "stars"
         if band.startswith("sdss"):
             kind, sources[0] = "chain", f"UBVRcIc of the sequence through {relations.JESTER} and {relations.TONRY}"
+            sources[0] += f"; below {_COOLEST_RELATION_K:.0f} K J of the sequence and the dwarfs' colours"
+        elif band.startswith("gaia"):
+            sources[0] += f", averaged with its V and Ic through {relations.GAIA_DR3}"
         curves.add(band, ln_d, inside, kind, "; ".join(sources))
     for found, alone in ((of_rows, curves.of_sequence), (of_dwarfs, curves.of_dwarfs)):
         alone |= {band: np.where(inside, curve, np.nan) for band, (curve, inside) in found.items()}
