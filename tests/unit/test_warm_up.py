@@ -33,12 +33,14 @@ QUICK = {"effective_samples": 300, "max_steps": 600}
     "model",
     [
         {},
-        {"outliers": False},
+        {"photosphere": "blackbody"},
+        {"photosphere": "auto"},
+        {"photosphere": "blackbody", "outliers": False},
         {"extinction": {"prior": "fixed", "mean": 0.2}},
         {"extinction": {"prior": "fixed"}, "outliers": False},
         {"temperature_k": [4000.0, 5000.0], "extinction": {"prior": "exponential", "scale": 0.05, "max": 0.1}},
     ],
-    ids=["usual", "no outliers", "fixed dust", "fixed dust, no outliers", "narrow range"],
+    ids=["usual", "blackbody", "either", "no outliers", "fixed dust", "fixed dust, no outliers", "narrow range"],
 )
 def test_no_kernel_is_compiled_for_other_types_afterwards(repository, model):
     sections = {"model": model, "sampling": QUICK | {"keep_draws": 10}}

@@ -42,7 +42,7 @@ def process_part(table: pa.Table, settings: Settings, model: FitModel) -> PartTa
         The used columns with ``_input_file``, ``_input_row`` and ``_duplicate`` (0 unique, 1 first copy, 2 later).
     """
     ingested = ingest(table, settings, model)
-    columns, draws, audited = _fit_columns(ingested.stars, model, settings)
+    columns, draws, audited = fit_columns(ingested.stars, model, settings)
     if len(ingested.stars):
         columns["row_hash"] = row_hashes(table, settings)[ingested.is_kept]
         first_copy = ingested.kept["_duplicate"].to_numpy() == 1
@@ -55,7 +55,7 @@ def process_part(table: pa.Table, settings: Settings, model: FitModel) -> PartTa
     return PartTables(catalogue, ingested.rejected, kept, audited)
 
 
-def _fit_columns(
+def fit_columns(
     stars: Stars, model: FitModel, settings: Settings
 ) -> tuple[dict[str, np.ndarray], dict[str, np.ndarray], AuditSums]:
     """Return the fitted columns and the kept draws of every star, in the order of the stars, and the audit's sums."""

@@ -6,13 +6,10 @@ import numpy as np
 
 from starkiln.physics.bandtable import ln_flux
 from starkiln.settings import Settings
-from starkiln.stages.audit import audit
-from starkiln.stages.derive import derive
-from starkiln.stages.fit import fit
 from starkiln.stages.ingest import magnitudes_to_jy
 from starkiln.stages.model import FitModel
+from starkiln.stages.process import fit_columns
 from starkiln.stages.stars import Stars
-from starkiln.stages.summarise import mode_points, summarise
 
 FEWEST_STEPS = 64
 
@@ -33,12 +30,9 @@ def warm_up(settings: Settings, model: FitModel) -> None:
     sampling = settings.sampling.model_copy(update={"max_steps": FEWEST_STEPS})
     short = settings.model_copy(update={"sampling": sampling})
     stars = invented_stars(model)
-    for fitted in fit(stars, model, short):
-        some = stars.at(fitted.first + fitted.draws.stars)
-        derived = derive(some, fitted.draws, model, short)
-        mode = mode_points(fitted, derived, model)
-        audit(fitted, mode, model)
-        summarise(some, fitted, derived, mode, model, short)
+    fit_columns(stars, model, short)
+    if model.rival is not None:
+        fit_columns(stars, model.rival, short)
 
 
 def invented_stars(model: FitModel) -> Stars:
