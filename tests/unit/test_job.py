@@ -99,7 +99,7 @@ def test_a_model_that_is_not_the_one_of_the_run_is_trouble(job, monkeypatch):
     assert isinstance(open_job(other.save()).model, OtherModel)
     saved = other.save()
     monkeypatch.setattr(OtherModel, "curve", "changed")
-    with pytest.raises(EnvironmentTrouble, match="passband panstarrs_r has changed since the run began; run again"):
+    with pytest.raises(EnvironmentTrouble, match="not the same passbands, panstarrs_r as the run began with"):
         open_job(saved)
 
 

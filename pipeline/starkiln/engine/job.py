@@ -16,6 +16,7 @@ from typing import Any
 import pyarrow as pa
 
 from starkiln.engine.disk import disk_trouble
+from starkiln.engine.provenance import hashes
 from starkiln.errors import EnvironmentTrouble
 from starkiln.settings import Settings, build_settings, dump_toml
 from starkiln.tables.source import Source, SourceFile
@@ -32,7 +33,7 @@ class Stages:
     Attributes
     ----------
     build_model
-        From settings to whatever `process_part` needs, once in each process; `.digests()` tells two models apart.
+        From settings to whatever `process_part` needs, once in each process.
     process_part
         From a table of input rows, the settings and the model to the output tables.
     warm_up
@@ -95,7 +96,7 @@ class Job:
             "schema": base64.b64encode(self.source.schema.serialize()).decode(),
             "stamps": self.stamps,
             "parts": str(self.parts),
-            "digests": self.model.digests(),
+            "hashes": hashes(self.settings, self.model),
         }
         # Processes remember the job by its path, so no two jobs ever share one.
         path = self.scratch / f"job.{uuid.uuid4().hex}.json"
@@ -131,7 +132,7 @@ def _read_job(saved: SavedJob) -> Job:
     settings = build_settings(tomllib.loads(data["settings"]))
     stages = Stages(named(saved.build_model), named(saved.process_part))
     model = stages.build_model(settings)
-    _check_digests(model.digests(), data["digests"])
+    _check_hashes(hashes(settings, model), data["hashes"])
     return Job(
         source=Source(tuple(map(_source_file, data["files"])), _schema(data["schema"])),
         settings=settings,
@@ -143,10 +144,15 @@ def _read_job(saved: SavedJob) -> Job:
     )
 
 
-def _check_digests(found: dict[str, str], expected: dict[str, str]) -> None:
-    changed = [name for name in expected if found.get(name) != expected[name]]
+def _check_hashes(found: dict[str, Any], expected: dict[str, Any]) -> None:
+    changed = [name for name in expected if found[name] != expected[name] and name != "fit_key"]
+    if "passbands" in changed:
+        labels = expected["passbands"]
+        changed += [label for label in labels if found["passbands"].get(label) != labels[label]]
     if changed:
-        raise EnvironmentTrouble(f"passband {', '.join(changed)} has changed since the run began; run again")
+        raise EnvironmentTrouble(
+            f"a worker has not the same {', '.join(changed)} as the run began with: a file has changed; run again"
+        )
 
 
 def _source_file(data: dict[str, Any]) -> SourceFile:
