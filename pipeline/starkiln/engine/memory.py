@@ -45,7 +45,7 @@ def fit_table(
 
     Returns
     -------
-    The catalogue. The rejected rows are a DataFrame in its `.attrs["rejected"]`.
+    The catalogue. The rejected rows are in its `.attrs["rejected"]`, a list of dictionaries.
 
     Raises
     ------
@@ -65,7 +65,8 @@ def fit_table(
         rejected.append(made.rejected)
         first += count
     frame = _frame(catalogue)
-    frame.attrs["rejected"] = _frame(rejected)
+    # Plain records: a DataFrame among the attributes would break pandas.concat and to_parquet.
+    frame.attrs["rejected"] = pa.concat_tables(rejected).to_pylist()
     return frame
 
 
