@@ -1,3 +1,5 @@
+import asyncio
+import gc
 import os
 import signal
 import time
@@ -153,6 +155,20 @@ def test_nothing_listens_beyond_this_machine(cluster):
     ]
     assert listening
     assert set(listening) == {"127.0.0.1"}
+
+
+def test_errors_that_nobody_fetched_are_not_told_while_there_is_a_cluster(tmp_path, caplog):
+    async def leave_an_error():
+        async def fail_unseen():
+            raise ArithmeticError("unseen")
+
+        asyncio.ensure_future(fail_unseen())  # noqa: RUF006
+        await asyncio.sleep(0.1)
+
+    with open_cluster(1, MEMORY, tmp_path) as executor:
+        executor._cluster.sync(leave_an_error)
+    gc.collect()
+    assert "unseen" not in caplog.text
 
 
 def test_closing_in_the_middle_of_a_task_is_quick_and_leaves_no_worker(tmp_path):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+import gc
 import logging
 import os
 import queue
@@ -175,7 +176,7 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
         # What goes wrong comes back with the task; dask's own lines would only repeat it.
         "logging": {"distributed": "critical"},
     }
-    with dask.config.set(options), ExitStack() as stack:
+    with dask.config.set(options), _asyncio_silenced(), ExitStack() as stack:
         try:
             with _interrupts_blocked():
                 cluster = stack.enter_context(
@@ -204,6 +205,19 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
             with suppress(Exception):
                 _kill_workers(cluster)
             raise
+
+
+@contextmanager
+def _asyncio_silenced() -> Iterator[None]:
+    """Keep asyncio from telling of errors that nobody fetched: dask leaves some behind when workers die."""
+    logger = logging.getLogger("asyncio")
+    level = logger.level
+    logger.setLevel(logging.CRITICAL)
+    try:
+        yield
+    finally:
+        gc.collect()  # asyncio tells when it finds the error thrown away
+        logger.setLevel(level)
 
 
 @contextmanager
