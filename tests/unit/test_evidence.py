@@ -5,8 +5,9 @@ import pytest
 
 from plain_posterior import log_evidence as log_evidence_by_grid
 from simulated import invented_departures, make_settings, simulate
+from starkiln.inference.arithmetic import HALF_LN_2PI
 from starkiln.inference.evidence import importance_draws, log_mean_exp
-from starkiln.inference.posterior import HALF_LN_2PI, LN_HEAT_K
+from starkiln.inference.posterior import LN_HEAT_K
 from starkiln.inference.start import find_modes
 from starkiln.inference.streams import star_streams
 from starkiln.physics.departures import write_departures

@@ -26,6 +26,7 @@ _MANTISSA = np.int64(0x000FFFFFFFFFFFFF)
 _ONE_BITS = np.int64(0x3FF0000000000000)
 _TWO_52_BITS = np.int64(0x4330000000000000)
 _SQRT2 = 1.4142135623730951
+HALF_LN_2PI = 0.9189385332046727
 
 
 def _float_bits(typing_context: Any, value: Any) -> Any:
@@ -142,14 +143,14 @@ def _log_flat(x, out):
 def exp_array(x: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return exp of every element; NaN stays NaN."""
     out = np.empty(x.shape)
-    _exp_flat(np.ravel(x), out.ravel())
+    _exp_flat(x.flatten(), out.ravel())  # a copy: read-only input would be compiled for again
     return np.where(np.isnan(x), np.nan, out)
 
 
 def log_array(x: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return log of every element, all positive."""
     out = np.empty(x.shape)
-    _log_flat(np.ravel(x), out.ravel())
+    _log_flat(x.flatten(), out.ravel())
     return out
 
 
@@ -163,4 +164,4 @@ def log_normal_cdf(x):
         return np.log(0.5 * erfc(-x / sqrt(2.0)))
     z = 1.0 / (x * x)
     series = 1.0 - z * (1.0 - 3.0 * z * (1.0 - 5.0 * z * (1.0 - 7.0 * z * (1.0 - 9.0 * z))))
-    return -0.5 * x * x - 0.9189385332046727 - np.log(-x) + np.log(series)
+    return -0.5 * x * x - HALF_LN_2PI - np.log(-x) + np.log(series)

@@ -8,10 +8,11 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from starkiln.inference.arithmetic import HALF_LN_2PI
 from starkiln.inference.compile import kernel
 from starkiln.inference.ensemble import burn_in, log_prob_function
 from starkiln.inference.moves import TAIL, add_log_independent, draw_independent, make_scratch
-from starkiln.inference.posterior import HALF_LN_2PI, Block, Grid, Prior
+from starkiln.inference.posterior import Block, Grid, Prior
 from starkiln.inference.start import Modes
 
 

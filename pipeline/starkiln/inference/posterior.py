@@ -18,7 +18,6 @@ from starkiln.inference.compile import kernel
 
 HEAT_K = 1e4
 LN_HEAT_K = float(np.log(HEAT_K))
-HALF_LN_2PI = 0.9189385332046727
 
 
 class Grid(NamedTuple):

@@ -7,7 +7,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.inference.arithmetic import exp, log, log_normal_cdf
+from starkiln.inference.arithmetic import HALF_LN_2PI, exp, log, log_normal_cdf
 from starkiln.inference.compile import kernel
 from starkiln.inference.posterior import (
     LN_HEAT_K,
@@ -371,7 +371,7 @@ def _slopes(one, grid, prior, point, gradient, curvature):
         if one.limit[0, j]:
             sigma = 1.0 / np.sqrt(inverse_variance)
             x = (one.scaled_flux[0, j] - model) / sigma
-            hazard = np.exp(-0.5 * x * x - 0.9189385332046727 - log_normal_cdf(x)) / sigma
+            hazard = np.exp(-0.5 * x * x - HALF_LN_2PI - log_normal_cdf(x)) / sigma
             force = -hazard * model
             weight = max(hazard * (hazard + x / sigma), 0.0)
         else:

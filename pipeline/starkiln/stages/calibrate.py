@@ -14,8 +14,9 @@ from numpy.typing import NDArray
 from starkiln.calibration.individual import Learnt, ReferenceStars, TooFewStars, learn_departures, with_figures
 from starkiln.errors import InputError, SettingsError
 from starkiln.physics.bandtable import ln_flux
-from starkiln.physics.constants import MAS_PER_RAD, PARSEC_M, RSUN_M, STEFAN_BOLTZMANN_W_PER_M2_K4, TSUN_K
+from starkiln.physics.constants import MAS_PER_RAD, PARSEC_M, RSUN_M, TSUN_K
 from starkiln.physics.departures import Departures, write_departures
+from starkiln.physics.planck import bolometric_exitance
 from starkiln.settings import Settings
 from starkiln.settings.models import Calibrate
 from starkiln.stages.bands import Bands, build_bands
@@ -139,7 +140,7 @@ def _ln_omega(rows: pa.Table, stars: Stars, teff_k: NDArray[np.float64], section
     if section.angular_diameter is not None:
         return 2.0 * np.log(0.5 * float64_values(rows[section.angular_diameter]) / MAS_PER_RAD)
     if section.fbol is not None:
-        return np.log(float64_values(rows[section.fbol]) / (STEFAN_BOLTZMANN_W_PER_M2_K4 * teff_k**4))
+        return np.log(float64_values(rows[section.fbol]) / bolometric_exitance(teff_k))
     distance_pc = np.where(np.isfinite(stars.distance_pc), stars.distance_pc, 1e3 / stars.parallax_mas)
     distance_pc = np.where(distance_pc > 0.0, distance_pc, np.nan)
     return 2.0 * np.log(float64_values(rows[section.radius]) * RSUN_M / (distance_pc * PARSEC_M))

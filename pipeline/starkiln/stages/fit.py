@@ -8,9 +8,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.inference.arithmetic import log_array
+from starkiln.inference.arithmetic import HALF_LN_2PI, log_array
 from starkiln.inference.ensemble import Draws, Stopping, chain_bytes, sample_block
-from starkiln.inference.posterior import HALF_LN_2PI, LN_HEAT_K, Block
+from starkiln.inference.posterior import LN_HEAT_K, Block
 from starkiln.inference.start import Modes, find_modes
 from starkiln.inference.streams import star_streams
 from starkiln.settings import Settings

@@ -11,8 +11,7 @@ import pyarrow as pa
 from astropy import units as u
 from numpy.typing import NDArray
 
-from starkiln.inference.arithmetic import exp
-from starkiln.inference.compile import kernel
+from starkiln.inference.arithmetic import exp_array
 from starkiln.physics.passbands import Passband, zero_point_jy
 from starkiln.settings import Settings
 from starkiln.settings.models import PhotometryColumns
@@ -194,16 +193,8 @@ def magnitudes_to_jy(
     zero_flux_jy
         Flux density of magnitude zero.
     """
-    flux_jy = zero_flux_jy * _exp(-LN_FLUX_PER_MAG * mag)
+    flux_jy = zero_flux_jy * exp_array(-LN_FLUX_PER_MAG * mag)
     return flux_jy, LN_FLUX_PER_MAG * flux_jy * mag_error
-
-
-@kernel
-def _exp(x):  # type: ignore[no-untyped-def]
-    result = np.empty_like(x)
-    for k in range(x.size):
-        result[k] = exp(x[k])
-    return result
 
 
 def jy_per_unit(unit: str, pivot_um: float) -> float:

@@ -14,7 +14,8 @@ from starkiln.inference.checks import Agreement, compare
 from starkiln.inference.posterior import LN_HEAT_K, Block, Prior
 from starkiln.inference.start import climb
 from starkiln.inference.summaries import correlations, has_gap, means, quantiles
-from starkiln.physics.constants import LSUN_W, LUMINOSITY_MBOL_ZERO_W, WIEN_M_K
+from starkiln.physics.constants import LSUN_W, LUMINOSITY_MBOL_ZERO_W
+from starkiln.physics.planck import wien_peak_nm
 from starkiln.settings import Settings
 from starkiln.stages.derive import Derived
 from starkiln.stages.fit import Fitted
@@ -67,7 +68,7 @@ def summarise(
             values[no_detection] = np.nan
         for place, suffix in enumerate(QUANTILE_NAMES):
             columns[f"{name}_{suffix}"] = values[:, place]
-    columns["lambda_peak_p50"] = WIEN_M_K * 1e9 / columns["teff_p50"]
+    columns["lambda_peak_p50"] = wien_peak_nm(columns["teff_p50"])
     columns["mbol_p50"] = -2.5 * np.log10(columns["lum_p50"] * (LSUN_W / LUMINOSITY_MBOL_ZERO_W))
     columns |= _correlations(derived, no_detection)
     columns |= _agreement(fitted, derived, mode, model)
