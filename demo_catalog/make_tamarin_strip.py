@@ -176,12 +176,11 @@ def observe(
 ) -> tuple[np.ndarray, ...]:
     """Return measured fluxes, their stated errors, and which of them are outliers.
 
-    The scatter is the stated error, the star's own in this band, and the error of the zero point, drawn anew for each
-    star: the survey's calibration wanders from place to place.
+    The scatter is the stated error and the star's own in this band. The departures have been learnt with the survey's
+    own zero points, so whatever is wrong with those is in the departures.
     """
     stated_jy = np.hypot(band.noise_jy, band.relative_noise * flux_jy)
-    relative = np.hypot(own_scatter, load_passband(band.passband).zero_point_error)
-    total_jy = np.hypot(stated_jy, relative * flux_jy)
+    total_jy = np.hypot(stated_jy, own_scatter * flux_jy)
     outlier = random.random(len(flux_jy)) < OUTLIER_FRACTION
     blend = OUTLIER_WIDTH * np.abs(random.standard_normal(len(flux_jy)))  # another star's light
     scatter = random.standard_normal(len(flux_jy))

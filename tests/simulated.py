@@ -97,7 +97,13 @@ def simulate(
     av_mean, av_scale = _av_parameters(settings, n, rng)
     av = _draw_av(settings, av_mean, av_scale, rng)
     ln_omega = 2.0 * (ln_radius + LN_RSUN_PC - np.log(dist_pc))
-    true_jy = np.exp(ln_flux(model.table, np.exp(ln_teff), av) + ln_omega[:, None])
+    seen_ln_teff = ln_teff
+    if model.temperature_scatter.any():
+        # What the bands show lies on the departures' scale; the truth scatters about it at the same luminosity.
+        seen_ln_teff = ln_teff - model.temperature_scatter_at(ln_teff) * rng.normal(size=n)
+        seen_ln_teff = np.clip(seen_ln_teff, *np.log(settings.model.temperature_k))
+    seen_ln_omega = ln_omega + 4.0 * (ln_teff - seen_ln_teff)
+    true_jy = np.exp(ln_flux(model.table, np.exp(seen_ln_teff), av) + seen_ln_omega[:, None])
     typical_av = float(np.median(av_scale))
     typical_jy = np.exp(
         ln_flux(model.table, 4500.0, typical_av) + 2.0 * (np.log(0.7) + LN_RSUN_PC - np.log(2.0 * length))
@@ -107,7 +113,7 @@ def simulate(
     spread = np.broadcast_to(model.floor, (n, b))
     if model.departures is not None:
         widening = giant_scale(np.exp(ln_teff), np.exp(ln_radius)) if giants else np.ones(n)
-        at = model.departures.at(np.exp(ln_teff))
+        at = model.departures.at(np.exp(seen_ln_teff))
         z = rng.normal(size=(len(at.loading), n))
         true_jy = true_jy * np.exp(widening[:, None] * (at.loading * z[:, None]).sum(axis=0).T)
         spread = np.hypot(spread, widening[:, None] * at.scatter.T)

@@ -54,7 +54,7 @@ class PlainPosterior:
             ln_band_flux(band, extinction_ratio("G23", 3.1, band.quadrature[0]), teff_k, av_mag) for band in passbands
         ]
         self.ln_model = np.stack(blackbody) + chosen.ln_d[:, :, np.newaxis]  # (n_bands, n_teff, n_av)
-        self.loading, self.scatter = chosen.loading, chosen.scatter
+        self.loading, self.scatter, self.tau = chosen.loading, chosen.scatter, chosen.temperature_scatter
         self.ln_zero = np.log(zero_points_jy or [band.zero_point_jy for band in passbands])
 
     def fit(self, magnitude, error):
@@ -76,6 +76,8 @@ class PlainPosterior:
         row, column = np.divmod(rng.choice(post.size, 2000, p=(post / post.sum()).ravel()), post.shape[1])
         omega = ln_omega_mean[row, column] + rng.standard_normal(2000) / np.sqrt(weight[row])
         ln_teff = self.ln_teff[row] + 0.0025 * (rng.random(2000) - 0.5)
+        off_scale = self.tau[row] * rng.standard_normal(2000)  # at the same bolometric flux
+        ln_teff, omega = ln_teff + off_scale, omega - 4.0 * off_scale
         draws = (ln_teff, omega, omega + 4.0 * (ln_teff - np.log(TSUN_K)))
         return [np.quantile(values, [0.025, 0.16, 0.5, 0.84, 0.975]) for values in draws]
 

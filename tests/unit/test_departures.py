@@ -44,7 +44,8 @@ def made(n_factors=1, ranges=((2500.0, 30_000.0), (2400.0, 30_000.0), (2000.0, 2
         ln_d=np.stack([extended(curve, held) for curve, held in zip(curves, inside, strict=True)]),
         loading=np.array(loading).reshape(n_factors, 3, len(LN_TEFF_NODES)),
         scatter=np.stack([extended_scatter(np.full(len(held), 0.03), held) for held in inside]),
-        factors=("photosphere", "temperature")[:n_factors],
+        factors=("photosphere", "activity")[:n_factors],
+        temperature_scatter=np.where(TEFF_NODES_K < 4000.0, 0.02, 0.01),
         provenance={"curves": "invented", "stars": 12},
     )
 
@@ -154,7 +155,7 @@ def test_a_fallback_beyond_the_last_band_takes_that_one():
 
 def test_two_factors_leave_no_room_so_fallbacks_share_the_second():
     chosen = made(n_factors=2).for_bands([load_passband("johnson_v"), load_passband("sdss_r"), load_passband("sdss_i")])
-    assert chosen.factors == ("photosphere", "temperature")
+    assert chosen.factors == ("photosphere", "activity")
     np.testing.assert_allclose(chosen.loading[1, 1:], 0.20 * np.sqrt(0.5))
     np.testing.assert_array_equal(chosen.loading[:, 0], made(n_factors=2).loading[:, 1])
 
@@ -178,6 +179,13 @@ def test_a_file_gives_back_what_was_written(tmp_path, n_factors):
     teff_k = np.geomspace(1500.0, 60_000.0, 50)
     for got, expected in zip(read.at(teff_k), departures.at(teff_k), strict=True):
         np.testing.assert_allclose(got, expected, atol=3e-5)
+
+
+def test_without_scatter_about_the_scale_the_file_is_silent_of_it(tmp_path):
+    path = tmp_path / "departures.ecsv"
+    write_departures(replace(made(), temperature_scatter=np.zeros(len(LN_TEFF_NODES))), path)
+    assert "temperature_scatter" not in path.read_text()
+    assert not read_departures(path).temperature_scatter.any()
 
 
 def test_the_same_departures_are_the_same_bytes(tmp_path):
@@ -212,6 +220,7 @@ def spoilt(tmp_path, old, new):
             "'johnson_v': its rows",
         ),
         (" 0.03\njohnson_v", " -0.03\njohnson_v", "'johnson_b', column 'scatter'"),
+        ("temperature_scatter: [0.02,", "temperature_scatter: [", "temperature_scatter needs 129 numbers"),
     ],
 )
 def test_a_spoilt_file_is_refused(tmp_path, old, new, message):
@@ -248,7 +257,8 @@ def test_any_other_file_is_refused(tmp_path):
 def test_every_built_in_passband_has_departures_of_its_own_curve():
     chosen = builtin_departures().for_bands([load_passband(name) for name in builtin_names()])
     assert chosen.served.all()
-    assert chosen.factors == ("photosphere", "temperature")
+    assert chosen.factors == ("photosphere",)
+    assert np.all(chosen.temperature_scatter > 0.0)
 
 
 def test_built_in_departures_are_finite_and_their_scatter_positive():

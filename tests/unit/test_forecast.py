@@ -13,6 +13,7 @@ from typer.testing import CliRunner
 import starkiln.settings
 from starkiln import cli
 from starkiln.errors import SettingsError
+from starkiln.physics.bandtable import ln_flux as ln_flux_at
 from starkiln.physics.constants import PARSEC_M, RSUN_M, TSUN_K
 from starkiln.physics.passbands import load_passband
 from starkiln.physics.planck import planck_nu
@@ -124,7 +125,11 @@ class TestKnownAnswers:
         ln_flux = np.log(invent(grid_points(survey.settings)[0], survey)["flux_jy"])
         at = survey.model.departures.at(5000.0)
         loading, scatter = at.loading[:, :, 0], at.scatter[:, 0]
-        expected = loading.T @ loading + np.diag(scatter**2)
+        table, step = survey.model.table, 1e-3
+        slope = (ln_flux_at(table, 5000.0 * np.exp(step), 0.0) - ln_flux_at(table, 5000.0 * np.exp(-step), 0.0))[0]
+        reference = list(survey.model.passbands).index(survey.settings.forecast.brightness.label)
+        off_scale = at.temperature_scatter[0] * (slope - slope[reference]) / (2.0 * step)  # at one magnitude there
+        expected = loading.T @ loading + np.diag(scatter**2) + np.outer(off_scale, off_scale)
         assert np.cov(ln_flux.T) == pytest.approx(expected, abs=0.1 * expected.max())
 
     @pytest.mark.parametrize(

@@ -416,7 +416,7 @@ def learn_builtin(rows: MeanSequence, dwarfs: Dwarfs, locus: Locus) -> Departure
     inside = np.stack([curves.inside[name] for name in bands])
     ln_d = np.stack([extended(curves.ln_d[name], curves.inside[name]) for name in bands])
     cool = cool_covariance(curves, dwarfs)
-    loading = _loadings(cool, passbands, ln_d)
+    loading = _loadings(cool, passbands)
     scatter = _scatters(cool, passbands, curves)
     return Departures(
         bands=tuple(bands),
@@ -426,9 +426,10 @@ def learn_builtin(rows: MeanSequence, dwarfs: Dwarfs, locus: Locus) -> Departure
         pivot_um=np.array([passband.pivot_um for passband in passbands]),
         range_k=np.stack([TEFF_NODES_K[held][[0, -1]] for held in inside]),
         ln_d=ln_d,
-        loading=np.stack([[extended(row, held) for row, held in zip(rows_, inside, strict=True)] for rows_ in loading]),
+        loading=np.stack([[extended(row, held) for row, held in zip(loading, inside, strict=True)]]),
         scatter=np.stack([extended_scatter(row, held) for row, held in zip(scatter, inside, strict=True)]),
-        factors=("photosphere", "temperature"),
+        factors=("photosphere",),
+        temperature_scatter=_temperature_scatter(cool),
         provenance={
             "curves": f"{sequence.SOURCE}; {nearby.SOURCE}",
             "temperature_scale": f"of the sequence; below {_COOL_K[0]:.0f} K {_DWARFS_WEIGHT:.0f} parts of the "
@@ -510,17 +511,21 @@ def _half_gap(curves: Curves, band: str) -> FloatArray:
     return np.asarray(np.interp(LN_TEFF_NODES, LN_TEFF_NODES[known], gap[known], right=0.0))
 
 
-def _loadings(cool: CoolCovariance, passbands: list[Passband], ln_d: FloatArray) -> FloatArray:
-    """Return the loadings at the nodes, (2, n_bands, n_nodes): of the photosphere, and of the temperature."""
+def _loadings(cool: CoolCovariance, passbands: list[Passband]) -> FloatArray:
+    """Return the photosphere's loadings at the nodes, (n_bands, n_nodes)."""
     cold, hot = 1.0 - _rise(_COOL_K), _rise(_HOT_RANGE_K)
     metals = np.array([_METALLICITY.get(passband.name, 0.0) for passband in passbands])
     dust = np.array([float(extinction_ratio("G23", 3.1, passband.pivot_um)) for passband in passbands])
     dust *= -0.4 * np.log(10.0) * _REDDENING_MAG
-    photosphere = cold * _across_bands(cool.bands, cool.loading, passbands)
-    photosphere += np.outer(metals, (1.0 - cold) * (1.0 - hot)) + np.outer(dust, hot)
-    shift = cold * cool.temperature + (1.0 - cold) * _WARM_SHIFT + hot * (_HOT_SHIFT - _WARM_SHIFT)
-    loading = np.stack([photosphere, shift * temperature_slope(passbands, ln_d)])
+    loading = cold * _across_bands(cool.bands, cool.loading, passbands)
+    loading += np.outer(metals, (1.0 - cold) * (1.0 - hot)) + np.outer(dust, hot)
     return loading * np.array([passband.pivot_um > _OF_PHOTOSPHERE_UM for passband in passbands])[:, np.newaxis]
+
+
+def _temperature_scatter(cool: CoolCovariance) -> FloatArray:
+    """Return the scatter of ln T about the scale at the nodes."""
+    cold, hot = 1.0 - _rise(_COOL_K), _rise(_HOT_RANGE_K)
+    return np.asarray(cold * cool.temperature + (1.0 - cold) * _WARM_SHIFT + hot * (_HOT_SHIFT - _WARM_SHIFT))
 
 
 def _scatters(cool: CoolCovariance, passbands: list[Passband], curves: Curves) -> FloatArray:

@@ -84,8 +84,8 @@ def learn_departures(
     stars : ReferenceStars
         The stars.
     n_factors : int or None
-        Number of common factors, 0 or 1, beside the scatter of the published temperatures about their scale, which is a
-        factor of its own; None leaves it to cross-validation.
+        Number of common factors, 0 or 1, beside the scatter of the published temperatures about their scale; None
+        leaves it to cross-validation.
     provenance : dict
         Goes into the departures' own.
 
@@ -114,8 +114,7 @@ def learn_departures(
     factors = learn_factors(stars.teff_k, residual, errors, n_factors, slope)
     ranges = [_range_k(stars.teff_k[np.isfinite(points[:, place])]) for place in range(len(bands))]
     inside = [inside_range(range_k) for range_k in ranges]
-    photosphere = factors.loading(np.exp(LN_TEFF_NODES)) * _sign(factors.coefficient)
-    loading = np.concatenate([photosphere, factors.shift * node_slope[np.newaxis]])
+    loading = factors.loading(np.exp(LN_TEFF_NODES)) * _sign(factors.coefficient)
     departures = Departures(
         bands=tuple(band.name for band in bands),
         digests=tuple(band.digest() for band in bands),
@@ -128,7 +127,8 @@ def learn_departures(
         scatter=np.stack(
             [extended_scatter(np.full(len(LN_TEFF_NODES), u), h) for u, h in zip(factors.scatter, inside, strict=True)]
         ),
-        factors=(*("photosphere",)[:n_factors], "temperature scale"),
+        factors=("photosphere",)[:n_factors],
+        temperature_scatter=np.full(len(LN_TEFF_NODES), abs(factors.shift)),
         provenance=provenance | {"stars": len(stars.teff_k), "smoothness": smoothness},
     )
     return Learnt(departures, points, errors, scores)

@@ -88,3 +88,19 @@ def fill_normal(uniforms, out):
             sine, cosine = sine_cosine_turns(uniforms[k + 1, i])
             out[k, i] = radius * cosine
             out[k + 1, i] = radius * sine
+
+
+def normal_draws(streams: NDArray[np.uint64], n_draws: int) -> NDArray[np.float64]:
+    """Return standard normal draws (S, n_draws) of S streams (S, 4), which advance."""
+    pairs = (n_draws + 1) // 2
+    out = np.empty((len(streams), 2, pairs))
+    _fill_normals(streams, out)
+    return np.ascontiguousarray(out.reshape(len(streams), -1)[:, :n_draws])
+
+
+@kernel
+def _fill_normals(streams, out):
+    uniforms = np.empty(out.shape[1:])
+    for star in range(out.shape[0]):
+        fill_uniform(streams[star], uniforms)
+        fill_normal(uniforms, out[star])

@@ -2,7 +2,8 @@
 
 A star's flux density in band b is ``ln f_b = ln Ω + g_b(T, A_V) + ln D_b(T) + Σ_k Λ_bk(T) z_k + e_b``: g of the
 blackbody of its effective temperature, D the mean departure of the reference stars, the factors z_k ~ N(0, 1) what
-makes one star odd in all bands together, and e_b ~ N(0, u_b²) what is left.
+makes one star odd in all bands together, and e_b ~ N(0, u_b²) what is left. The temperatures of reference stars
+themselves scatter about the scale that their colours define, at the same luminosity, by τ(T) in ln T.
 """
 
 from __future__ import annotations
@@ -41,11 +42,12 @@ class DepartureMismatch(SettingsError):
 
 
 class DeparturesAt(NamedTuple):
-    """Departures at some temperatures: ln_d and scatter (n_bands, n), loading (n_factors, n_bands, n)."""
+    """Departures at n temperatures: (n_bands, n); loading is (n_factors, n_bands, n), temperature_scatter (n,)."""
 
     ln_d: FloatArray
     loading: FloatArray
     scatter: FloatArray
+    temperature_scatter: FloatArray
 
 
 @dataclass(frozen=True, eq=False)
@@ -70,6 +72,9 @@ class Departures:
         (n_factors, n_bands, n_nodes): Λ.
     factors
         What each factor stands for.
+    temperature_scatter
+        (n_nodes,): τ, scatter in ln T of the reference stars about their scale, at their luminosity. No band can show
+        it, so it widens a posterior as it is.
     provenance
         What the departures were learnt from, for people and for records of a run.
     origin
@@ -88,6 +93,7 @@ class Departures:
     factors: tuple[str, ...]
     provenance: dict[str, Any] = field(default_factory=dict)
     ln_teff: FloatArray = field(default_factory=LN_TEFF_NODES.copy)
+    temperature_scatter: FloatArray = field(default_factory=lambda: np.zeros_like(LN_TEFF_NODES))
     origin: str = ""
 
     @property
@@ -108,7 +114,8 @@ class Departures:
             CubicSpline(self.ln_teff, values, axis=-1)(inside)
             for values in (self.ln_d, self.loading, np.log(self.scatter))
         )
-        return DeparturesAt(ln_d, loading, np.hypot(np.exp(ln_scatter), _GROWTH * (ln_teff - inside)))
+        scatter = np.hypot(np.exp(ln_scatter), _GROWTH * (ln_teff - inside))
+        return DeparturesAt(ln_d, loading, scatter, np.interp(inside, self.ln_teff, self.temperature_scatter))
 
     def holds(self, teff_k: ArrayLike) -> NDArray[np.bool_]:
         """Return whether temperatures [K] lie in the range of each band, of shape (n_bands, n)."""
@@ -270,6 +277,7 @@ def write_departures(departures: Departures, path: str | Path) -> None:
         "content": "departures of photospheres from blackbodies",
         "format": 1,
         "factors": list(departures.factors),
+        **_temperature_facts(departures),
         "provenance": departures.provenance,
         "bands": [_facts(departures, place) for place in range(len(departures.bands))],
     }
@@ -282,6 +290,12 @@ def write_departures(departures: Departures, path: str | Path) -> None:
     table["ln_d"].description = "ln of observed flux over that of a blackbody of the same T and R/d"
     table["scatter"].description = "scatter of one band that no factor explains, in ln flux"
     table.write(path, format="ascii.ecsv", overwrite=True)
+
+
+def _temperature_facts(departures: Departures) -> dict[str, list[float]]:
+    """Return the scatter about the temperature scale at the nodes, nothing where there is none."""
+    scatter = departures.temperature_scatter
+    return {"temperature_scatter": [round(float(value), _DECIMALS) for value in scatter]} if scatter.any() else {}
 
 
 def _facts(departures: Departures, place: int) -> dict[str, Any]:
@@ -332,6 +346,7 @@ def read_departures(path: str | Path) -> Departures:
         scatter=values[-1],
         factors=factors,
         provenance=dict(table.meta["provenance"]),
+        temperature_scatter=_temperature_scatter(table, path),
         origin=str(path),
     )
 
@@ -359,6 +374,13 @@ def _check_form(table: Any, path: Path) -> None:
             )
     if len(table.meta["factors"]) > MAX_FACTORS:
         raise SettingsError(f"{path}: {len(table.meta['factors'])} factors; at most {MAX_FACTORS} are used")
+
+
+def _temperature_scatter(table: Any, path: Path) -> FloatArray:
+    scatter = np.array(table.meta.get("temperature_scatter", np.zeros_like(LN_TEFF_NODES)), dtype=np.float64)
+    if scatter.shape != LN_TEFF_NODES.shape or not np.all(np.isfinite(scatter) & (scatter >= 0.0)):
+        raise SettingsError(f"{path}: temperature_scatter needs {len(LN_TEFF_NODES)} numbers, one for each node")
+    return scatter
 
 
 def _on_nodes(table: Any, facts: dict[str, Any], columns: list[str], path: Path) -> FloatArray:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import NamedTuple
 
 from starkiln.errors import SettingsError, UnknownPassband, nearest
@@ -80,7 +81,9 @@ def _passband(settings: Settings, band: PhotometryColumns, key: str) -> Passband
         except UnknownPassband as error:
             near = nearest(band.passband, own) if band.passband not in builtin_names() else ""
             raise UnknownPassband(f"{key}.passband: {error}{near}") from None
-    if band.system is not None and band.zero_point_jy is None:
+    if band.zero_point_jy is not None:
+        return replace(passband, zero_point_jy=band.zero_point_jy)  # departures learnt with another are refused
+    if band.system is not None:
         try:
             zero_point_jy(passband, band.system)
         except SettingsError as error:

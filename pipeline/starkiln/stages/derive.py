@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from starkiln.inference.distances import GAUSSIAN, NONE, PARALLAX, DistanceData, draw_distances
 from starkiln.inference.ensemble import Draws
-from starkiln.inference.streams import star_streams
+from starkiln.inference.streams import normal_draws, star_streams
 from starkiln.physics.constants import LSUN_W, MAS_PER_RAD, RSUN_M, STEFAN_BOLTZMANN_W_PER_M2_K4
 from starkiln.settings import Settings
 from starkiln.stages.model import LN_RSUN_PC, FitModel
@@ -43,29 +43,34 @@ class Derived(NamedTuple):
     kept_share: NDArray[np.float64]
 
 
-def derive(stars: Stars, draws: Draws, model: FitModel, settings: Settings) -> Derived:
+def derive(
+    stars: Stars, draws: Draws, model: FitModel, settings: Settings, widening: NDArray[np.float64] | float = 1.0
+) -> Derived:
     """Draw distances and compute every quantity of every joint draw.
 
     Parameters
     ----------
     stars
         The K stars of ``draws``, in its order.
+    widening
+        By how much the scatter of each star's temperature about the departures' scale is wider than a dwarf's.
 
     Notes
     -----
     R = d sqrt(Omega); L = 4 pi R^2 sigma T^4 (Stefan-Boltzmann); F_bol = Omega sigma T^4; the angular diameter
     is 2 sqrt(Omega).
     """
+    ln_teff, ln_omega = scattered_temperatures(stars, draws, model, settings, widening)
     streams = star_streams(stars.ids, settings.run.seed, b"distance")
     distances = draw_distances(
-        np.ascontiguousarray(draws.chain[:, 1]),
+        ln_omega,
         distance_data(stars),
         settings.model.distance.bounds_pc,
         model.ln_radius_bounds_pc,
         streams,
     )
     photometric = np.take_along_axis(draws.chain, distances.source[:, None], axis=2)
-    ln_teff, ln_omega = photometric[:, 0], photometric[:, 1]
+    ln_teff, ln_omega = (np.take_along_axis(values, distances.source, axis=1) for values in (ln_teff, ln_omega))
     av = photometric[:, 2] if model.prior.fit_av else np.broadcast_to(stars.av_mean[:, None], ln_teff.shape)
     ln_radius = distances.ln_dist_pc + 0.5 * ln_omega - LN_RSUN_PC
     return Derived(
@@ -82,6 +87,25 @@ def derive(stars: Stars, draws: Draws, model: FitModel, settings: Settings) -> D
         source=distances.source,
         kept_share=distances.kept_share,
     )
+
+
+def scattered_temperatures(
+    stars: Stars, draws: Draws, model: FitModel, settings: Settings, widening: NDArray[np.float64] | float = 1.0
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return ln T and ln Omega (K, N) of every draw, scattered about the scale of the departures.
+
+    What the bands see is a star's place on that scale. Stars of one such place have temperatures that scatter by tau in
+    ln T at the same bolometric flux: T goes by exp(tau e), Omega by exp(-4 tau e), with e ~ N(0, 1). No band can tell
+    e, so it is drawn, and not sampled with the rest.
+    """
+    ln_teff, ln_omega = draws.chain[:, 0], np.ascontiguousarray(draws.chain[:, 1])
+    if not model.temperature_scatter.any():
+        return ln_teff, ln_omega
+    streams = star_streams(stars.ids, settings.run.seed, b"temperature")
+    tau = model.temperature_scatter_at(ln_teff) * np.reshape(widening, (-1, 1))
+    shifted = ln_teff + tau * normal_draws(streams, ln_teff.shape[1])
+    shifted = np.clip(shifted, model.prior.ln_teff_min, model.prior.ln_teff_max)
+    return shifted, ln_omega - 4.0 * (shifted - ln_teff)
 
 
 def distance_data(stars: Stars) -> DistanceData:

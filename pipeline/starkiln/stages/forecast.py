@@ -174,14 +174,16 @@ def invent(point: Point, survey: Survey) -> Columns:
     n, n_bands = settings.forecast.stars, len(model.floor)
     rng = np.random.default_rng(star_streams([point.name.encode()], settings.run.seed, b"forecast")[0])
     av = draw_extinction(settings.model.extinction, rng.random(n))
-    ln_band = ln_flux(model.table, point.teff_k, av)
+    widening = giant_scale(np.array(point.teff_k), np.array(point.radius_rsun))
+    off_scale = model.temperature_scatter_at(np.log(np.full(n, point.teff_k))) * widening * rng.normal(size=n)
+    ln_band = ln_flux(model.table, point.teff_k * np.exp(-off_scale), av)
     reference = list(model.passbands).index(settings.forecast.brightness.label)
-    ln_omega = np.log(survey.zero_mag_jy) - LN_FLUX_PER_MAG * point.mag - ln_band[:, reference]
-    dist_pc = point.radius_rsun * np.exp(LN_RSUN_PC - 0.5 * ln_omega)
+    seen_ln_omega = np.log(survey.zero_mag_jy) - LN_FLUX_PER_MAG * point.mag - ln_band[:, reference]
+    dist_pc = point.radius_rsun * np.exp(LN_RSUN_PC - 0.5 * (seen_ln_omega - 4.0 * off_scale))
     _check_distance(point, dist_pc, settings)
     shift, scatter = _photosphere(point, model, rng, n)
-    true_jy = np.exp(ln_band + ln_omega[:, None] + shift)
-    sigma_jy = np.hypot(survey.error_jy, np.hypot(model.floor, scatter) * true_jy)
+    true_jy = np.exp(ln_band + seen_ln_omega[:, None] + widening * shift)
+    sigma_jy = np.hypot(survey.error_jy, np.hypot(model.floor, widening * scatter) * true_jy)
     outlying = rng.random((n, n_bands)) < model.prior.outlier_fraction
     noise = np.where(outlying, model.prior.outlier_width, 1.0) * rng.normal(size=(n, n_bands))
     return {
@@ -211,14 +213,13 @@ def draw_extinction(extinction: Extinction, chance: FloatArray) -> FloatArray:
 def _photosphere(
     point: Point, model: FitModel, rng: np.random.Generator, n: int
 ) -> tuple[FloatArray, FloatArray | float]:
-    """Return each star's common departure (n, b) from the mean photosphere, and the scatter (b,) that is its own."""
+    """Return each dwarf's common departure (n, b) from the mean photosphere, and the scatter (b,) that is its own."""
     if model.departures is None:
         return np.zeros((n, 1)), 0.0
     at = model.departures.at(point.teff_k)
-    scale = giant_scale(np.array(point.teff_k), np.array(point.radius_rsun))
     z = rng.normal(size=(n, len(at.loading)))
     shift = (z[:, :, None] * at.loading[None, :, :, 0]).sum(axis=1)
-    return scale * shift, scale * at.scatter[:, 0]
+    return shift, at.scatter[:, 0]
 
 
 def _check_distance(point: Point, dist_pc: FloatArray, settings: ForecastSettings) -> None:

@@ -17,7 +17,7 @@ from starkiln.settings import Settings
 from starkiln.settings.models import PhotometryColumns
 from starkiln.stages.bands import build_bands
 
-METHOD_VERSION = 3
+METHOD_VERSION = 4
 """Goes up with every change of the method that changes a number of the catalogue."""
 
 LN_JITTER_MIN = float(np.log(1e-3))
@@ -35,7 +35,8 @@ class FitModel:
     passbands
         By label, in the order of the settings.
     floor
-        (B,): each band's fractional floor with the error of its zero point, in quadrature.
+        (B,): each band's fractional floor with the error of its zero point, in quadrature. Where departures were
+        learnt with the built-in zero point they have its error in them, and only the floor is left.
     table
         Band fluxes against temperature and A_V, departures included.
     grid, prior
@@ -44,6 +45,8 @@ class FitModel:
         Bounds on ln R, R in parsecs.
     departures
         Of the bands, in their order; None for a blackbody.
+    temperature_scatter
+        (n_teff,): at the table's nodes, scatter in ln T, at the luminosity, of stars about the departures' scale.
     rival
         The blackbody that each star may prefer, for photosphere = "auto".
     """
@@ -56,12 +59,18 @@ class FitModel:
     prior: Prior
     ln_radius_bounds_pc: tuple[float, float]
     departures: Departures | None
+    temperature_scatter: NDArray[np.float64]
     rival: FitModel | None
 
     @property
     def first_factor(self) -> int:
         """The place of z_1 among a walker's coordinates."""
         return 3 if self.prior.fit_av else 2
+
+    def temperature_scatter_at(self, ln_teff: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Return the scatter in ln T about the departures' scale, straight between the table's nodes."""
+        nodes = self.table.ln_teff_min + self.table.ln_teff_step * np.arange(self.table.n_teff)
+        return np.interp(ln_teff, nodes, self.temperature_scatter)
 
     def digests(self) -> dict[str, str]:
         """Return the digest of each label's curve, detector and zero point."""
@@ -72,7 +81,8 @@ class FitModel:
         if self.departures is None:
             return ""
         digest = hashlib.sha256()
-        for values in (self.departures.ln_d, self.departures.loading, self.departures.scatter):
+        learnt = self.departures
+        for values in (learnt.ln_d, learnt.loading, learnt.scatter, learnt.temperature_scatter):
             digest.update(np.ascontiguousarray(values, dtype="<f8").tobytes())
         return digest.hexdigest()
 
@@ -88,27 +98,31 @@ def build_model(settings: Settings) -> FitModel:
     """
     passbands, table, departures = build_bands(settings)
     prior, ln_radius_bounds = _prior(settings)
-    floor = np.array([_floor(band, passbands[band.label]) for band in settings.input.photometry])
+    photometry = settings.input.photometry
+    floor = np.array([np.hypot(band.floor, zero_point_error(band, passbands[band.label])) for band in photometry])
 
     def blackbody(scatter: float) -> FitModel:
         grid = _grid(
             table, np.zeros((0, len(passbands), table.n_teff)), np.full((len(passbands), table.n_teff), scatter)
         )
-        return FitModel("blackbody", passbands, floor, table, grid, prior, ln_radius_bounds, None, None)
+        no_scatter = np.zeros(table.n_teff)
+        return FitModel("blackbody", passbands, floor, table, grid, prior, ln_radius_bounds, None, no_scatter, None)
 
     if departures is None:
         return blackbody(0.0)
     at_nodes = departures.at(table.teff_nodes_k)
     lifted = replace(table, coef=table.coef + spline_coefficients(at_nodes.ln_d.T).T[:, :, np.newaxis])
+    own_error = np.array([band.zero_point_error is not None for band in photometry])
     return FitModel(
         photosphere="calibrated",
         passbands=passbands,
-        floor=floor,
+        floor=np.where(departures.served & ~own_error, [band.floor for band in photometry], floor),
         table=lifted,
         grid=_grid(lifted, at_nodes.loading, at_nodes.scatter),
         prior=prior,
         ln_radius_bounds_pc=ln_radius_bounds,
         departures=departures,
+        temperature_scatter=at_nodes.temperature_scatter,
         rival=blackbody(settings.model.blackbody.scatter) if settings.model.photosphere == "auto" else None,
     )
 
@@ -154,7 +168,3 @@ def _grid(table: BandTable, loading: NDArray[np.float64], scatter: NDArray[np.fl
 def zero_point_error(band: PhotometryColumns, passband: Passband) -> float:
     """Return the fractional error of a band's zero point: its own where the settings give one, or the passband's."""
     return passband.zero_point_error if band.zero_point_error is None else band.zero_point_error
-
-
-def _floor(band: PhotometryColumns, passband: Passband) -> float:
-    return float(np.hypot(band.floor, zero_point_error(band, passband)))

@@ -84,7 +84,7 @@ def _fit_rows(
     for fitted in fit(chosen, model, settings):
         places = fitted.first + fitted.draws.stars
         some = chosen.at(places)
-        derived = derive(some, fitted.draws, model, settings)
+        derived = derive(some, fitted.draws, model, settings, fitted.block.factor_scale)
         mode = mode_points(fitted, derived, model)
         audited = combined(audited, audit(fitted, mode, model))
         _place(columns, rows[places], len(stars), summarise(some, fitted, derived, mode, model, settings))
