@@ -90,19 +90,17 @@ def simulate(
     """
     rng = np.random.default_rng(seed)
     b = len(model.floor)
-    ln_teff = rng.uniform(*np.log(settings.model.temperature_k), n)
+    # What the bands show lies on the departures' scale, about which the truth scatters.
+    seen_ln_teff = rng.uniform(*np.log(settings.model.temperature_k), n)
+    tau, gamma = model.off_scale_at(seen_ln_teff)
+    ln_teff = np.clip(seen_ln_teff + tau * rng.normal(size=n), *np.log(settings.model.temperature_k))
     ln_radius = rng.uniform(*np.log(settings.model.radius_rsun), n)
     length = float(settings.model.distance.length_scale_pc)
     dist_pc = rng.gamma(3.0, length, n)
     av_mean, av_scale = _av_parameters(settings, n, rng)
     av = _draw_av(settings, av_mean, av_scale, rng)
     ln_omega = 2.0 * (ln_radius + LN_RSUN_PC - np.log(dist_pc))
-    seen_ln_teff = ln_teff
-    if model.temperature_scatter.any():
-        # What the bands show lies on the departures' scale; the truth scatters about it at the same luminosity.
-        seen_ln_teff = ln_teff - model.temperature_scatter_at(ln_teff) * rng.normal(size=n)
-        seen_ln_teff = np.clip(seen_ln_teff, *np.log(settings.model.temperature_k))
-    seen_ln_omega = ln_omega + 4.0 * (ln_teff - seen_ln_teff)
+    seen_ln_omega = ln_omega + 4.0 * (ln_teff - seen_ln_teff) - gamma * rng.normal(size=n)
     true_jy = np.exp(ln_flux(model.table, np.exp(seen_ln_teff), av) + seen_ln_omega[:, None])
     typical_av = float(np.median(av_scale))
     typical_jy = np.exp(

@@ -2,9 +2,10 @@
 
     python tests/benchmarks/rank_statistics.py [STARS] [CONFIGURATION ...]
 
-Truth comes from the priors, data from the likelihood: outliers, floors, upper limits, departures with a common factor
-and own scatter, jitter. If sampler and likelihood are right, the rank of the truth among draws of its posterior is
-uniform. Every star counts, also one that nothing has detected: no cut, on data or on truth, touches the ranks.
+Truth comes from the priors, data from the likelihood: outliers, floors, upper limits, departures with a common factor,
+own scatter and scatter about the scale, jitter; invented departures, and the built-in ones. If sampler and likelihood
+are right, the rank of the truth among draws of its posterior is uniform. Every star counts, also one that nothing has
+detected: no cut, on data or on truth, touches the ranks.
 
 Chains run to a bulk effective size of 1,000; 63 draws, evenly spaced in steps and each of another walker, leave 64
 ranks. The bounds on R can make the distance step take one draw of the photometry twice, so equal values are possible;
@@ -19,6 +20,7 @@ from __future__ import annotations
 
 import sys
 import time
+from dataclasses import replace
 from pathlib import Path
 from tempfile import TemporaryDirectory
 from typing import Any
@@ -32,7 +34,7 @@ sys.path.insert(0, str(Path(__file__).parents[1]))
 from simulated import THIRTEEN_BANDS, invented_departures, make_settings, simulate
 from starkiln.inference.ensemble import Stopping, sample_block
 from starkiln.inference.streams import star_streams
-from starkiln.physics.departures import write_departures
+from starkiln.physics.departures import LN_TEFF_NODES, write_departures
 from starkiln.stages.derive import derive
 from starkiln.stages.fit import pack_block
 from starkiln.stages.model import build_model
@@ -42,6 +44,7 @@ BINS = 32
 BAR = 0.01
 BLOCK = 250
 SEED = 41
+TAU, GAMMA = np.full(len(LN_TEFF_NODES), 0.012), np.full(len(LN_TEFF_NODES), 0.02)
 FOUR_BANDS = ("panstarrs_g", "gaia_dr3_rp", "2mass_j", "2mass_ks")
 NO_DUST = {"extinction": {"prior": "fixed"}}
 POOR_PARALLAX_MAS = (0.3, 5.0)
@@ -52,9 +55,11 @@ CONFIGURATIONS: dict[str, dict[str, Any]] = {
     "13 bands, poor parallaxes": {"parallax_error_mas": POOR_PARALLAX_MAS},
     "13 bands, jitter": {"model": {"jitter": True}},
     "13 bands, blackbody": {"model": {"photosphere": "blackbody"}},
+    "13 bands, built-in": {"departures": "builtin"},
     "4 bands": {"bands": FOUR_BANDS},
     "4 bands, no dust": {"bands": FOUR_BANDS, "model": NO_DUST},
     "4 bands, poor parallaxes": {"bands": FOUR_BANDS, "parallax_error_mas": POOR_PARALLAX_MAS},
+    "4 bands, built-in": {"bands": FOUR_BANDS, "departures": "builtin"},
 }
 
 
@@ -63,12 +68,13 @@ def ranks(n: int, configuration: dict[str, Any], seed: int = SEED) -> dict[str, 
     bands = configuration.get("bands", THIRTEEN_BANDS)
     with TemporaryDirectory() as folder:
         departures = Path(folder) / "invented.ecsv"
-        write_departures(invented_departures(bands), departures)
+        off_scale = {"temperature_scatter": TAU, "luminosity_scatter": GAMMA}
+        write_departures(replace(invented_departures(bands), **off_scale), departures)
         settings = make_settings(
             bands,
             model={
                 "photosphere": "calibrated",
-                "departures": str(departures),
+                "departures": configuration.get("departures", str(departures)),
                 "temperature_k": [2500.0, 20000.0],
                 "radius_rsun": [0.1, 20.0],
                 "distance": {"length_scale_pc": 300.0},

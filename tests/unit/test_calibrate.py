@@ -100,11 +100,15 @@ def test_held_out_stars_are_right_and_covered(learnt):
     assert abs(figures["lum"]["median"]) < 0.02
     assert 0.5 < figures["teff"]["inside_68"] < 0.85
     assert figures["teff"]["inside_95"] > 0.85
+    assert abs(figures["fbol"]["median"]) < 0.02
+    assert 0.5 < figures["fbol"]["inside_68"] < 0.9
 
 
 def test_pictures_and_text_are_left(learnt):
     _, text, folder = learnt
     assert "held out, T" in text
+    assert "held out, F_bol" in text
+    assert "scatter about the scale by" in text
     for band in BANDS:
         assert (folder / "learnt" / f"departure_{band}.png").stat().st_size > 5000
     assert (folder / "learnt" / "departure_correlations.pdf").stat().st_size > 5000

@@ -46,6 +46,7 @@ def made(n_factors=1, ranges=((2500.0, 30_000.0), (2400.0, 30_000.0), (2000.0, 2
         scatter=np.stack([extended_scatter(np.full(len(held), 0.03), held) for held in inside]),
         factors=("photosphere", "activity")[:n_factors],
         temperature_scatter=np.where(TEFF_NODES_K < 4000.0, 0.02, 0.01),
+        luminosity_scatter=np.where(TEFF_NODES_K < 4000.0, 0.03, 0.04),
         provenance={"curves": "invented", "stars": 12},
     )
 
@@ -183,9 +184,12 @@ def test_a_file_gives_back_what_was_written(tmp_path, n_factors):
 
 def test_without_scatter_about_the_scale_the_file_is_silent_of_it(tmp_path):
     path = tmp_path / "departures.ecsv"
-    write_departures(replace(made(), temperature_scatter=np.zeros(len(LN_TEFF_NODES))), path)
+    none = np.zeros(len(LN_TEFF_NODES))
+    write_departures(replace(made(), temperature_scatter=none, luminosity_scatter=none), path)
     assert "temperature_scatter" not in path.read_text()
+    assert "luminosity_scatter" not in path.read_text()
     assert not read_departures(path).temperature_scatter.any()
+    assert not read_departures(path).luminosity_scatter.any()
 
 
 def test_the_same_departures_are_the_same_bytes(tmp_path):
@@ -259,6 +263,7 @@ def test_every_built_in_passband_has_departures_of_its_own_curve():
     assert chosen.served.all()
     assert chosen.factors == ("photosphere",)
     assert np.all(chosen.temperature_scatter > 0.0)
+    assert np.all(chosen.luminosity_scatter > 0.0)
 
 
 def test_built_in_departures_are_finite_and_their_scatter_positive():

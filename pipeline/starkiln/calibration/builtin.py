@@ -68,6 +68,7 @@ _REDDENING_MAG = 0.03  # of A_V, above
 # Scatter of ln T of warm and of hot stars about the scale: assumed. Temperatures of FGK dwarfs from different
 # methods agree to about one per cent (common practice, no source).
 _WARM_SHIFT, _HOT_SHIFT = 0.01, 0.02
+_WARM_LUMINOSITY, _HOT_LUMINOSITY = 0.02, 0.04  # of ln L, likewise: twice that of ln T, as for the cool dwarfs
 _OF_PHOTOSPHERE_UM = 0.3  # bluer bands are of the chromosphere, and have no part in the factors
 # Metallicity at fixed T, ln flux for +0.2 dex, the scatter of nearby dwarfs: B from Casagrande et al. 2010, A&A 512,
 # A54, table 4, near the Sun; U from the ultraviolet excess of metal-poor dwarfs, 0.25 mag per dex in U-B (from memory).
@@ -429,7 +430,8 @@ def learn_builtin(rows: MeanSequence, dwarfs: Dwarfs, locus: Locus) -> Departure
         loading=np.stack([[extended(row, held) for row, held in zip(loading, inside, strict=True)]]),
         scatter=np.stack([extended_scatter(row, held) for row, held in zip(scatter, inside, strict=True)]),
         factors=("photosphere",),
-        temperature_scatter=_temperature_scatter(cool),
+        temperature_scatter=_about_scale(cool.temperature, _WARM_SHIFT, _HOT_SHIFT),
+        luminosity_scatter=_about_scale(cool.luminosity, _WARM_LUMINOSITY, _HOT_LUMINOSITY),
         provenance={
             "curves": f"{sequence.SOURCE}; {nearby.SOURCE}",
             "temperature_scale": f"of the sequence; below {_COOL_K[0]:.0f} K {_DWARFS_WEIGHT:.0f} parts of the "
@@ -438,6 +440,8 @@ def learn_builtin(rows: MeanSequence, dwarfs: Dwarfs, locus: Locus) -> Departure
             f"from {_HOT_RANGE_K[0]:.0f} K on a reddening of {_REDDENING_MAG} mag (assumed)",
             "temperature": "scatter of the published temperatures of those dwarfs about the scale, and half of what "
             f"divides the two scales; {_WARM_SHIFT} in ln T for warm stars and {_HOT_SHIFT} for hot ones (assumed)",
+            "luminosity": f"likewise of the published luminosities; {_WARM_LUMINOSITY} in ln L for warm stars and "
+            f"{_HOT_LUMINOSITY} for hot ones (assumed)",
         },
     )
 
@@ -446,13 +450,15 @@ def learn_builtin(rows: MeanSequence, dwarfs: Dwarfs, locus: Locus) -> Departure
 class CoolCovariance:
     """How K and M dwarfs scatter in their bands.
 
-    ``loading`` and ``scatter`` are (n_bands, n_nodes), ``temperature`` (n_nodes,) the scatter of ln T.
+    ``loading`` and ``scatter`` are (n_bands, n_nodes), ``temperature`` and ``luminosity`` (n_nodes,) the scatter of
+    ln T and of ln L about the scale.
     """
 
     bands: list[str]
     loading: FloatArray
     scatter: FloatArray
     temperature: FloatArray
+    luminosity: FloatArray
 
 
 def cool_covariance(curves: Curves, dwarfs: Dwarfs) -> CoolCovariance:
@@ -461,13 +467,15 @@ def cool_covariance(curves: Curves, dwarfs: Dwarfs) -> CoolCovariance:
     scatter = np.repeat(factors.scatter[:, np.newaxis], len(TEFF_NODES_K), axis=1)
     slope = _dwarf_slopes(curves, bands)
     gap = np.stack([_half_gap(curves, band) for band in bands])
-    # The part of the gap that is a shift in T widens the temperatures, the rest joins what is each band's own.
-    shift = np.sum(gap * slope, axis=0) / np.sum(slope**2, axis=0)
+    # What of the gap is a shift in T or in L widens those, the rest joins what is each band's own.
+    patterns = np.stack([slope.T, np.ones_like(slope.T)], axis=2)  # (n_nodes, n_bands, 2)
+    shift = np.einsum("nkb,bn->nk", np.linalg.pinv(patterns), gap)
     return CoolCovariance(
         bands,
         factors.loading(TEFF_NODES_K)[0],
-        np.hypot(scatter, gap - shift * slope),
-        np.hypot(factors.shift, shift),
+        np.hypot(scatter, gap - np.einsum("nbk,nk->bn", patterns, shift)),
+        np.hypot(factors.shift[0], shift[:, 0]),
+        np.hypot(factors.shift[1], shift[:, 1]),
     )
 
 
@@ -522,10 +530,10 @@ def _loadings(cool: CoolCovariance, passbands: list[Passband]) -> FloatArray:
     return loading * np.array([passband.pivot_um > _OF_PHOTOSPHERE_UM for passband in passbands])[:, np.newaxis]
 
 
-def _temperature_scatter(cool: CoolCovariance) -> FloatArray:
-    """Return the scatter of ln T about the scale at the nodes."""
+def _about_scale(cool: FloatArray, of_warm: float, of_hot: float) -> FloatArray:
+    """Return a scatter of cool, warm and hot stars about the scale at the nodes."""
     cold, hot = 1.0 - _rise(_COOL_K), _rise(_HOT_RANGE_K)
-    return np.asarray(cold * cool.temperature + (1.0 - cold) * _WARM_SHIFT + hot * (_HOT_SHIFT - _WARM_SHIFT))
+    return np.asarray(cold * cool + (1.0 - cold) * of_warm + hot * (of_hot - of_warm))
 
 
 def _scatters(cool: CoolCovariance, passbands: list[Passband], curves: Curves) -> FloatArray:

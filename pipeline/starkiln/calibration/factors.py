@@ -1,11 +1,14 @@
 """Factor analysis of individual stars: what is odd about a star in all its bands together, and what in one alone.
 
-Residuals of star s in band b: ``r_sb = τ a_sb z_s0 + Σ_k (Λ_bk0 + Λ_bk1 x_s) z_sk + e_sb`` with z ~ N(0, 1) and
-e ~ N(0, u_b² + σ_sb²). The first term is a star whose published temperature is off the scale by τ in ln T, at the
-luminosity that was published with it: a_sb is known, ``d ln f_b / d ln T - 4``. x_s is ln T scaled to the sample, σ the
-known photometric error. Expectation-maximisation after Rubin & Thayer 1982, Psychometrika 47, 69, with missing bands,
-known errors, and the two-Gaussian mixture per band that the fit of a star uses (Hogg, Bovy & Lang 2010), so that bad
-photometry stays out of Λ and u.
+Residuals of star s in band b: ``r_sb = τ a_sb z_s0 + γ z_s1 + Σ_k (Λ_bk0 + Λ_bk1 x_s) z_sk + e_sb`` with z ~ N(0, 1)
+and e ~ N(0, u_b² + σ_sb²). The first term is a star whose published temperature is off the scale by τ in ln T, at the
+luminosity that was published with it: a_sb is known, ``d ln f_b / d ln T - 4``. The second is one whose luminosity is
+off by γ in ln L, which shifts all bands alike. Left out, both would pass for scatter of the bands. x_s is ln T scaled
+to the sample, σ the known photometric error.
+
+Expectation-maximisation after Rubin & Thayer 1982, Psychometrika 47, 69, with missing bands, known errors, and the
+two-Gaussian mixture per band that the fit of a star uses (Hogg, Bovy & Lang 2010), so that bad photometry stays out of
+Λ and u.
 """
 
 from __future__ import annotations
@@ -21,7 +24,7 @@ OUTLIER_FRACTION, OUTLIER_WIDTH = 0.02, 10.0
 
 _ITERATIONS = 1000
 _TOLERANCE = 1e-5
-_SMALLEST_SCATTER = 0.015
+_SMALLEST_SCATTER = 0.005
 _FIRST_SHIFT = 0.01
 _LARGEST_Z = 4.0  # a star beyond is no member of the family that the factors describe
 _STUDENT_DOF = 4.0  # of the likelihood that models are compared with: one odd star must not decide
@@ -37,18 +40,18 @@ class Sample:
         (n_stars,): published temperatures [K].
     residual, error
         (n_stars, n_bands): ln of the observed flux over the expected one, NaN where missing, and its known error.
-    slope
-        (n_stars, n_bands): d ln f / d ln T at constant luminosity, a.
+    known
+        (n_known, n_bands, n_stars): the patterns that errors of published values leave, of temperature and luminosity.
     """
 
     teff_k: FloatArray
     residual: FloatArray
     error: FloatArray
-    slope: FloatArray
+    known: FloatArray
 
     def only(self, stars: NDArray[np.bool_]) -> Sample:
         """Return some of the stars."""
-        return Sample(self.teff_k[stars], self.residual[stars], self.error[stars], self.slope[stars])
+        return Sample(self.teff_k[stars], self.residual[stars], self.error[stars], self.known[:, :, stars])
 
 
 @dataclass(frozen=True, eq=False)
@@ -58,7 +61,8 @@ class Factors:
     Attributes
     ----------
     shift
-        τ: scatter of the published temperatures about the scale, in ln T.
+        (n_known,): scatter of the published temperatures about the scale, τ in ln T, and of the luminosities, γ in
+        ln L; empty where neither was asked for.
     coefficient
         (n_factors, 2, n_bands): loadings at the middle of the sample, and their slopes.
     scatter
@@ -67,7 +71,7 @@ class Factors:
         The temperatures [K] of the sample; loadings are held outside.
     """
 
-    shift: float
+    shift: FloatArray
     coefficient: FloatArray
     scatter: FloatArray
     teff_range_k: tuple[float, float]
@@ -78,8 +82,8 @@ class Factors:
         return self.coefficient[:, 0, :, np.newaxis] + self.coefficient[:, 1, :, np.newaxis] * x
 
     def loadings_of(self, sample: Sample) -> FloatArray:
-        """Return the loadings of a sample's stars, that of the temperature first, (1 + n_factors, n_bands, n_stars)."""
-        return np.concatenate([self.shift * sample.slope.T[np.newaxis], self.loading(sample.teff_k)])
+        """Return a sample's loadings, of the known patterns first, (n_known + n_factors, n_bands, n_stars)."""
+        return np.concatenate([self.shift[:, np.newaxis, np.newaxis] * sample.known, self.loading(sample.teff_k)])
 
 
 def learn_factors(
@@ -97,7 +101,7 @@ def learn_factors(
         How many factors to look for.
     slope : ndarray, optional
         (n_stars, n_bands): d ln f / d ln T at constant luminosity, a. If given, the scatter of the published
-        temperatures about the scale is found beside the factors; else it is a part of them.
+        temperatures and luminosities about the scale is found beside the factors; else it is a part of them.
     """
     return _learn(_sample(teff_k, residual, error, slope), n_factors)
 
@@ -131,7 +135,8 @@ def _learn(sample: Sample, n_factors: int) -> Factors:
 
 
 def _sample(teff_k: FloatArray, residual: FloatArray, error: FloatArray, slope: FloatArray | None) -> Sample:
-    return Sample(teff_k, residual, error, np.zeros_like(residual) if slope is None else slope)
+    patterns = [] if slope is None else [slope.T, np.ones_like(slope.T)]
+    return Sample(teff_k, residual, error, np.array(patterns).reshape(len(patterns), *residual.T.shape))
 
 
 def ln_likelihood(factors: Factors, sample: Sample) -> FloatArray:
@@ -177,7 +182,7 @@ def _expectation_maximisation(sample: Sample, n_factors: int) -> Factors:
         trust = _trust(loadings, found.scatter, sample, mean, covariance)
         renewed = _maximise(found, sample, trust, mean, covariance)
         change = max(
-            abs(renewed.shift - found.shift),
+            float(np.max(np.abs(renewed.shift - found.shift), initial=0.0)),
             float(np.max(np.abs(renewed.scatter - found.scatter))),
             float(np.max(np.abs(renewed.coefficient - found.coefficient), initial=0.0)),
         )
@@ -196,13 +201,13 @@ def _start(sample: Sample, n_factors: int) -> Factors:
     coefficient = np.zeros((n_factors, 2, filled.shape[1]))
     coefficient[:, 0] = strength[:, np.newaxis] * patterns[:n_factors] * scale
     teff_range_k = (float(sample.teff_k.min()), float(sample.teff_k.max()))
-    return Factors(_FIRST_SHIFT, coefficient, 0.5 * scale + _SMALLEST_SCATTER, teff_range_k)
+    return Factors(np.full(len(sample.known), _FIRST_SHIFT), coefficient, 0.5 * scale + _SMALLEST_SCATTER, teff_range_k)
 
 
 def _posterior(
     loadings: FloatArray, scatter: FloatArray, sample: Sample, trust: FloatArray
 ) -> tuple[FloatArray, FloatArray]:
-    """Return mean (n_stars, 1 + n_factors) and covariance of each star's z."""
+    """Return mean (n_stars, n_known + n_factors) and covariance of each star's z."""
     weight = trust / (scatter**2 + np.nan_to_num(sample.error) ** 2)
     precision = np.einsum("jbs,sb,kbs->sjk", loadings, weight, loadings) + np.eye(len(loadings))
     covariance = np.linalg.inv(precision)
@@ -224,14 +229,14 @@ def _trust(
 
 
 def _maximise(found: Factors, sample: Sample, trust: FloatArray, mean: FloatArray, covariance: FloatArray) -> Factors:
-    """Return the factors that the stars' z ask for: loadings, then the shift, then the scatters."""
+    """Return the factors that the stars' z ask for: loadings, then the shifts, then the scatters."""
     x = _scaled(sample.teff_k, found.teff_range_k)
     second = covariance + mean[:, :, np.newaxis] * mean[:, np.newaxis, :]
     residual, variance = np.nan_to_num(sample.residual), np.nan_to_num(sample.error) ** 2
     weight = trust / (found.scatter**2 + variance)
     coefficient = _best_loadings(found, sample, weight, residual, x, mean, second)
     factors = Factors(found.shift, coefficient, found.scatter, found.teff_range_k)
-    shift = _best_shift(factors, sample, weight, residual, mean, second)
+    shift = _best_shifts(factors, sample, weight, residual, mean, second)
     factors = Factors(shift, coefficient, found.scatter, found.teff_range_k)
     loadings = factors.loadings_of(sample)
     left = residual**2 - 2.0 * residual * np.einsum("kbs,sk->sb", loadings, mean)
@@ -252,13 +257,14 @@ def _best_loadings(
     mean: FloatArray,
     second: FloatArray,
 ) -> FloatArray:
-    """Return the coefficients of the free factors: per band a weighted regression on (z, x z), the shift taken out."""
-    n_factors = len(found.coefficient)
-    free, crossed = second[:, 1:, 1:], second[:, 1:, 0]
+    """Return the coefficients of the free factors: per band a weighted regression on (z, x z), the shifts taken out."""
+    n_factors, n_known = len(found.coefficient), len(sample.known)
+    free = second[:, n_known:, n_known:]
+    shifted = np.einsum("k,kbs,skj->bsj", found.shift, sample.known, second[:, :n_known, n_known:])
     powers = x[:, np.newaxis] ** np.arange(3)
     coefficient = np.empty_like(found.coefficient)
     for band in range(len(found.scatter) if n_factors else 0):
-        target = mean[:, 1:] * residual[:, [band]] - crossed * (found.shift * sample.slope[:, [band]])
+        target = mean[:, n_known:] * residual[:, [band]] - shifted[band]
         parts = [np.einsum("s,sij->ij", weight[:, band] * powers[:, power], free) for power in range(3)]
         normal = np.block([[parts[0], parts[1]], [parts[1], parts[2]]]) + 1e-6 * np.eye(2 * n_factors)
         right = np.concatenate([(weight[:, band] * powers[:, power]) @ target for power in range(2)])
@@ -266,13 +272,20 @@ def _best_loadings(
     return coefficient
 
 
-def _best_shift(
+def _best_shifts(
     found: Factors, sample: Sample, weight: FloatArray, residual: FloatArray, mean: FloatArray, second: FloatArray
-) -> float:
-    free = np.einsum("kbs,sk->sb", found.loading(sample.teff_k), second[:, 1:, 0])
-    weighted = weight * sample.slope
-    below = float(np.sum(weighted * sample.slope * second[:, :1, 0]))
-    return float(np.sum(weighted * (residual * mean[:, [0]] - free))) / below if below > 0.0 else 0.0
+) -> FloatArray:
+    """Return the size of each known pattern in turn, the other terms taken out."""
+    shift = found.shift.copy()
+    for place, pattern in enumerate(sample.known):
+        own = np.zeros(len(shift))
+        own[place] = shift[place]
+        others = Factors(shift - own, found.coefficient, found.scatter, found.teff_range_k).loadings_of(sample)
+        taken = np.einsum("kbs,sk->sb", others, second[:, :, place])
+        weighted = weight * pattern.T
+        below = float(np.sum(weighted * pattern.T * second[:, [place], place]))
+        shift[place] = np.sum(weighted * (residual * mean[:, [place]] - taken)) / below if below > 0.0 else 0.0
+    return shift
 
 
 def _all_trusted(sample: Sample) -> FloatArray:

@@ -84,8 +84,8 @@ def learn_departures(
     stars : ReferenceStars
         The stars.
     n_factors : int or None
-        Number of common factors, 0 or 1, beside the scatter of the published temperatures about their scale; None
-        leaves it to cross-validation.
+        Number of common factors, 0 or 1, beside the scatter of the published temperatures and luminosities about
+        their scale; None leaves it to cross-validation.
     provenance : dict
         Goes into the departures' own.
 
@@ -128,7 +128,8 @@ def learn_departures(
             [extended_scatter(np.full(len(LN_TEFF_NODES), u), h) for u, h in zip(factors.scatter, inside, strict=True)]
         ),
         factors=("photosphere",)[:n_factors],
-        temperature_scatter=np.full(len(LN_TEFF_NODES), abs(factors.shift)),
+        temperature_scatter=np.full(len(LN_TEFF_NODES), abs(factors.shift[0])),
+        luminosity_scatter=np.full(len(LN_TEFF_NODES), abs(factors.shift[1])),
         provenance=provenance | {"stars": len(stars.teff_k), "smoothness": smoothness},
     )
     return Learnt(departures, points, errors, scores)

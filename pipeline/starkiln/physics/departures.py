@@ -2,8 +2,9 @@
 
 A star's flux density in band b is ``ln f_b = ln Ω + g_b(T, A_V) + ln D_b(T) + Σ_k Λ_bk(T) z_k + e_b``: g of the
 blackbody of its effective temperature, D the mean departure of the reference stars, the factors z_k ~ N(0, 1) what
-makes one star odd in all bands together, and e_b ~ N(0, u_b²) what is left. The temperatures of reference stars
-themselves scatter about the scale that their colours define, at the same luminosity, by τ(T) in ln T.
+makes one star odd in all bands together, and e_b ~ N(0, u_b²) what is left. The reference stars themselves scatter
+about the scale that their colours define: in temperature by τ(T) in ln T at the same luminosity, and in luminosity by
+γ(T) in ln L at the same temperature.
 """
 
 from __future__ import annotations
@@ -31,6 +32,7 @@ MAX_FACTORS = 2
 BUILTIN_PATH = Path(__file__).with_name("builtin_departures.ecsv")
 
 _FALLBACK: Kind = "fallback"
+_OFF_SCALE = ("temperature_scatter", "luminosity_scatter")
 _HOLD_WIDTH = 0.03  # in ln T: how soon the slope of ln D dies outside its range
 _GROWTH = 1.0  # of the scatter per unit of ln T outside the range; departures have slopes of this order
 _DECIMALS = 5
@@ -42,12 +44,13 @@ class DepartureMismatch(SettingsError):
 
 
 class DeparturesAt(NamedTuple):
-    """Departures at n temperatures: (n_bands, n); loading is (n_factors, n_bands, n), temperature_scatter (n,)."""
+    """Departures at n temperatures: (n_bands, n); loading is (n_factors, n_bands, n), the last two (n,)."""
 
     ln_d: FloatArray
     loading: FloatArray
     scatter: FloatArray
     temperature_scatter: FloatArray
+    luminosity_scatter: FloatArray
 
 
 @dataclass(frozen=True, eq=False)
@@ -72,9 +75,9 @@ class Departures:
         (n_factors, n_bands, n_nodes): Λ.
     factors
         What each factor stands for.
-    temperature_scatter
-        (n_nodes,): τ, scatter in ln T of the reference stars about their scale, at their luminosity. No band can show
-        it, so it widens a posterior as it is.
+    temperature_scatter, luminosity_scatter
+        (n_nodes,): τ, scatter in ln T of the reference stars about their scale at their luminosity, and γ, in ln L at
+        their temperature. No band can show either, so they widen a posterior as they are.
     provenance
         What the departures were learnt from, for people and for records of a run.
     origin
@@ -94,6 +97,7 @@ class Departures:
     provenance: dict[str, Any] = field(default_factory=dict)
     ln_teff: FloatArray = field(default_factory=LN_TEFF_NODES.copy)
     temperature_scatter: FloatArray = field(default_factory=lambda: np.zeros_like(LN_TEFF_NODES))
+    luminosity_scatter: FloatArray = field(default_factory=lambda: np.zeros_like(LN_TEFF_NODES))
     origin: str = ""
 
     @property
@@ -115,7 +119,10 @@ class Departures:
             for values in (self.ln_d, self.loading, np.log(self.scatter))
         )
         scatter = np.hypot(np.exp(ln_scatter), _GROWTH * (ln_teff - inside))
-        return DeparturesAt(ln_d, loading, scatter, np.interp(inside, self.ln_teff, self.temperature_scatter))
+        tau, gamma = (
+            np.interp(inside, self.ln_teff, values) for values in (self.temperature_scatter, self.luminosity_scatter)
+        )
+        return DeparturesAt(ln_d, loading, scatter, tau, gamma)
 
     def holds(self, teff_k: ArrayLike) -> NDArray[np.bool_]:
         """Return whether temperatures [K] lie in the range of each band, of shape (n_bands, n)."""
@@ -277,7 +284,7 @@ def write_departures(departures: Departures, path: str | Path) -> None:
         "content": "departures of photospheres from blackbodies",
         "format": 1,
         "factors": list(departures.factors),
-        **_temperature_facts(departures),
+        **_off_scale(departures),
         "provenance": departures.provenance,
         "bands": [_facts(departures, place) for place in range(len(departures.bands))],
     }
@@ -292,10 +299,10 @@ def write_departures(departures: Departures, path: str | Path) -> None:
     table.write(path, format="ascii.ecsv", overwrite=True)
 
 
-def _temperature_facts(departures: Departures) -> dict[str, list[float]]:
-    """Return the scatter about the temperature scale at the nodes, nothing where there is none."""
-    scatter = departures.temperature_scatter
-    return {"temperature_scatter": [round(float(value), _DECIMALS) for value in scatter]} if scatter.any() else {}
+def _off_scale(departures: Departures) -> dict[str, list[float]]:
+    """Return the scatters about the scale at the nodes, nothing where there are none."""
+    scatters = {name: getattr(departures, name) for name in _OFF_SCALE}
+    return {name: [round(float(v), _DECIMALS) for v in values] for name, values in scatters.items() if values.any()}
 
 
 def _facts(departures: Departures, place: int) -> dict[str, Any]:
@@ -346,7 +353,7 @@ def read_departures(path: str | Path) -> Departures:
         scatter=values[-1],
         factors=factors,
         provenance=dict(table.meta["provenance"]),
-        temperature_scatter=_temperature_scatter(table, path),
+        **{name: _at_all_nodes(table, name, path) for name in _OFF_SCALE},
         origin=str(path),
     )
 
@@ -376,10 +383,10 @@ def _check_form(table: Any, path: Path) -> None:
         raise SettingsError(f"{path}: {len(table.meta['factors'])} factors; at most {MAX_FACTORS} are used")
 
 
-def _temperature_scatter(table: Any, path: Path) -> FloatArray:
-    scatter = np.array(table.meta.get("temperature_scatter", np.zeros_like(LN_TEFF_NODES)), dtype=np.float64)
+def _at_all_nodes(table: Any, name: str, path: Path) -> FloatArray:
+    scatter = np.array(table.meta.get(name, np.zeros_like(LN_TEFF_NODES)), dtype=np.float64)
     if scatter.shape != LN_TEFF_NODES.shape or not np.all(np.isfinite(scatter) & (scatter >= 0.0)):
-        raise SettingsError(f"{path}: temperature_scatter needs {len(LN_TEFF_NODES)} numbers, one for each node")
+        raise SettingsError(f"{path}: {name} needs {len(LN_TEFF_NODES)} numbers, one for each node")
     return scatter
 
 

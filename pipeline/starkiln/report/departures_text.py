@@ -6,7 +6,7 @@ from pathlib import Path
 
 from starkiln.stages.calibrate import Calibration
 
-NAMES = {"teff": "T", "radius": "R", "lum": "L"}
+NAMES = {"teff": "T", "radius": "R", "lum": "L", "fbol": "F_bol"}
 
 
 def describe_calibration(found: Calibration, path: Path) -> str:
@@ -23,6 +23,11 @@ def describe_calibration(found: Calibration, path: Path) -> str:
     lines.append(
         f"common factors: {len(departures.factors)}"
         + (f" (log-likelihood of left-out stars{scores})" if scores else "")
+    )
+    middle = departures.at([(departures.range_k[:, 0].min() * departures.range_k[:, 1].max()) ** 0.5])
+    lines.append(
+        f"the stars' own values scatter about the scale by {middle.temperature_scatter[0]:.2%} in T and "
+        f"{middle.luminosity_scatter[0]:.2%} in L"
     )
     for name, figures in found.figures.items():
         lines.append(

@@ -38,7 +38,8 @@ class Calibration:
     teff_k
         (n,), the stars' temperatures.
     figures
-        By quantity ("teff", "radius", "lum"): median offset, robust scatter and coverage on the held-out stars.
+        By quantity ("teff", "fbol", and "radius", "lum" where a radius is given): median offset, robust scatter and
+        coverage on the held-out stars.
     """
 
     learnt: Learnt
@@ -83,7 +84,8 @@ def calibrate(table: pa.Table, settings: Settings) -> Calibration:
     training = _in_training(rows, settings, section.train)
     try:
         half = learn_departures(passbands, stars.only(training), n_factors, facts)
-        figures = held_out_figures(rows.filter(pa.array(~training)), half.departures, settings)
+        others = ~training
+        figures = held_out_figures(rows.filter(pa.array(others)), stars.only(others), half.departures, settings)
         learnt = learn_departures(passbands, stars, n_factors, facts)
     except TooFewStars as error:
         raise InputError(f"{settings.input.tables}: {error}") from None
@@ -153,8 +155,10 @@ def _in_training(rows: pa.Table, settings: Settings, share: float) -> NDArray[np
     return np.asarray(rank < share * len(rank))
 
 
-def held_out_figures(rows: pa.Table, departures: Departures, settings: Settings) -> dict[str, dict[str, float]]:
-    """Fit held-out stars with departures, and return how their temperatures, radii and luminosities come out."""
+def held_out_figures(
+    rows: pa.Table, stars: ReferenceStars, departures: Departures, settings: Settings
+) -> dict[str, dict[str, float]]:
+    """Fit held-out stars with departures, and return how their temperatures, fluxes and radii come out."""
     section = section_of(settings)
     with tempfile.TemporaryDirectory() as folder:
         path = Path(folder) / "departures.ecsv"
@@ -162,10 +166,10 @@ def held_out_figures(rows: pa.Table, departures: Departures, settings: Settings)
         fitting = with_model(settings, photosphere="calibrated", departures=path)
         model: FitModel = build_model(fitting)
     catalogue = process_part(rows, fitting, model).catalogue
-    truth = {"teff": float64_values(catalogue[section.teff])}
+    truth = {"teff": stars.teff_k, "fbol": np.exp(stars.ln_omega) * bolometric_exitance(stars.teff_k)}
     if section.radius is not None:
         truth["radius"] = float64_values(catalogue[section.radius])
-        truth["lum"] = truth["radius"] ** 2 * (truth["teff"] / TSUN_K) ** 4
+        truth["lum"] = truth["radius"] ** 2 * (stars.teff_k / TSUN_K) ** 4
     return {name: _figures(catalogue, name, values) for name, values in truth.items()}
 
 

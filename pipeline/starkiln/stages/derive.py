@@ -53,14 +53,14 @@ def derive(
     stars
         The K stars of ``draws``, in its order.
     widening
-        By how much the scatter of each star's temperature about the departures' scale is wider than a dwarf's.
+        By how much the scatter of each star about the departures' scale is wider than a dwarf's.
 
     Notes
     -----
     R = d sqrt(Omega); L = 4 pi R^2 sigma T^4 (Stefan-Boltzmann); F_bol = Omega sigma T^4; the angular diameter
     is 2 sqrt(Omega).
     """
-    ln_teff, ln_omega = scattered_temperatures(stars, draws, model, settings, widening)
+    ln_teff, ln_omega = scattered(stars, draws, model, settings, widening)
     streams = star_streams(stars.ids, settings.run.seed, b"distance")
     distances = draw_distances(
         ln_omega,
@@ -89,23 +89,24 @@ def derive(
     )
 
 
-def scattered_temperatures(
+def scattered(
     stars: Stars, draws: Draws, model: FitModel, settings: Settings, widening: NDArray[np.float64] | float = 1.0
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return ln T and ln Omega (K, N) of every draw, scattered about the scale of the departures.
 
     What the bands see is a star's place on that scale. Stars of one such place have temperatures that scatter by tau in
-    ln T at the same bolometric flux: T goes by exp(tau e), Omega by exp(-4 tau e), with e ~ N(0, 1). No band can tell
-    e, so it is drawn, and not sampled with the rest.
+    ln T at the same bolometric flux, and fluxes that scatter by gamma at the same temperature. With e, g ~ N(0, 1), T
+    goes by exp(tau e), Omega by exp(gamma g - 4 tau e). No band can tell e or g, so they are drawn, and not sampled
+    with the rest.
     """
     ln_teff, ln_omega = draws.chain[:, 0], np.ascontiguousarray(draws.chain[:, 1])
-    if not model.temperature_scatter.any():
+    if not model.off_scale.any():
         return ln_teff, ln_omega
-    streams = star_streams(stars.ids, settings.run.seed, b"temperature")
-    tau = model.temperature_scatter_at(ln_teff) * np.reshape(widening, (-1, 1))
-    shifted = ln_teff + tau * normal_draws(streams, ln_teff.shape[1])
-    shifted = np.clip(shifted, model.prior.ln_teff_min, model.prior.ln_teff_max)
-    return shifted, ln_omega - 4.0 * (shifted - ln_teff)
+    n = ln_teff.shape[1]
+    normal = normal_draws(star_streams(stars.ids, settings.run.seed, b"off scale"), 2 * n)
+    tau, gamma = (scale * np.reshape(widening, (-1, 1)) for scale in model.off_scale_at(ln_teff))
+    shifted = np.clip(ln_teff + tau * normal[:, :n], model.prior.ln_teff_min, model.prior.ln_teff_max)
+    return shifted, ln_omega + gamma * normal[:, n:] - 4.0 * (shifted - ln_teff)
 
 
 def distance_data(stars: Stars) -> DistanceData:

@@ -45,8 +45,9 @@ class FitModel:
         Bounds on ln R, R in parsecs.
     departures
         Of the bands, in their order; None for a blackbody.
-    temperature_scatter
-        (n_teff,): at the table's nodes, scatter in ln T, at the luminosity, of stars about the departures' scale.
+    off_scale
+        (2, n_teff): at the table's nodes, scatter of stars about the departures' scale, in ln T at their luminosity and
+        in ln L at their temperature.
     rival
         The blackbody that each star may prefer, for photosphere = "auto".
     """
@@ -59,7 +60,7 @@ class FitModel:
     prior: Prior
     ln_radius_bounds_pc: tuple[float, float]
     departures: Departures | None
-    temperature_scatter: NDArray[np.float64]
+    off_scale: NDArray[np.float64]
     rival: FitModel | None
 
     @property
@@ -67,10 +68,11 @@ class FitModel:
         """The place of z_1 among a walker's coordinates."""
         return 3 if self.prior.fit_av else 2
 
-    def temperature_scatter_at(self, ln_teff: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Return the scatter in ln T about the departures' scale, straight between the table's nodes."""
+    def off_scale_at(self, ln_teff: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Return the scatter in ln T and in ln L about the departures' scale, straight between the table's nodes."""
         nodes = self.table.ln_teff_min + self.table.ln_teff_step * np.arange(self.table.n_teff)
-        return np.interp(ln_teff, nodes, self.temperature_scatter)
+        tau, gamma = (np.interp(ln_teff, nodes, values) for values in self.off_scale)
+        return tau, gamma
 
     def digests(self) -> dict[str, str]:
         """Return the digest of each label's curve, detector and zero point."""
@@ -82,7 +84,7 @@ class FitModel:
             return ""
         digest = hashlib.sha256()
         learnt = self.departures
-        for values in (learnt.ln_d, learnt.loading, learnt.scatter, learnt.temperature_scatter):
+        for values in (learnt.ln_d, learnt.loading, learnt.scatter, self.off_scale):
             digest.update(np.ascontiguousarray(values, dtype="<f8").tobytes())
         return digest.hexdigest()
 
@@ -105,7 +107,7 @@ def build_model(settings: Settings) -> FitModel:
         grid = _grid(
             table, np.zeros((0, len(passbands), table.n_teff)), np.full((len(passbands), table.n_teff), scatter)
         )
-        no_scatter = np.zeros(table.n_teff)
+        no_scatter = np.zeros((2, table.n_teff))
         return FitModel("blackbody", passbands, floor, table, grid, prior, ln_radius_bounds, None, no_scatter, None)
 
     if departures is None:
@@ -122,7 +124,7 @@ def build_model(settings: Settings) -> FitModel:
         prior=prior,
         ln_radius_bounds_pc=ln_radius_bounds,
         departures=departures,
-        temperature_scatter=at_nodes.temperature_scatter,
+        off_scale=np.stack([at_nodes.temperature_scatter, at_nodes.luminosity_scatter]),
         rival=blackbody(settings.model.blackbody.scatter) if settings.model.photosphere == "auto" else None,
     )
 
