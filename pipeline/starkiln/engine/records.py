@@ -311,7 +311,7 @@ class Identity:
     nonce_file: Path
 
 
-class StartedBefore(Exception):  # noqa: N818 - a finding, not an error of its own
+class StartedBefore(Exception):
     """A task had begun before, and did not come to an end: it was "slow", or its worker "died"."""
 
     def __init__(self, kind: str, trace: str = "") -> None:
@@ -320,7 +320,7 @@ class StartedBefore(Exception):  # noqa: N818 - a finding, not an error of its o
         self.trace = trace
 
 
-class WorkerDisagrees(Exception):  # noqa: N818
+class WorkerDisagrees(Exception):
     """A worker is not of this run's version, or does not see its folder."""
 
     def __init__(self, address: str, text: str) -> None:
