@@ -11,9 +11,10 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from small_survey import band, settings_for, stars, with_column
-from starkiln.tables.hashes import canonical_ids, id_hashes, marked, row_hashes
+from starkiln.tables.hashes import canonical_ids, id_digests, id_hashes, marked, row_hashes
 
 SETTINGS = settings_for("/survey")
+ONE, ABC = [298446160052855758, 3775155053490983273], [3138212647195331279, 1619088549062707489]
 FLOATS32 = st.floats(width=32, allow_nan=True, allow_infinity=True)
 
 
@@ -47,13 +48,21 @@ def test_integer_ids_are_exact_next_to_nulls(ids):
     assert canonical_ids(pa.array(ids, pa.int64())) == expected
 
 
-def test_id_hashes_are_frozen():
-    # BLAKE2b with 8 bytes of b"1" and b"abc", little-endian, from hashlib.
-    found, has_id = id_hashes(pa.array(["1", "abc", None]))
+def test_id_digests_are_frozen():
+    # BLAKE2b with 16 bytes of b"1" and b"abc", as two little-endian integers each, from hashlib.
+    found, has_id = id_digests(pa.array(["1", "abc", None]))
     assert found.dtype == np.int64
-    assert found.tolist() == [8518482412311870710, 6455300059550759896, 0]
+    assert found.tolist() == [ONE, ABC, [0, 0]]
     assert has_id.tolist() == [True, True, False]
-    assert id_hashes(pa.array([1], pa.uint8()))[0].tolist() == [8518482412311870710]
+    assert id_digests(pa.array([1], pa.uint8()))[0].tolist() == [ONE]
+    assert id_digests(pa.array([], pa.string()))[0].shape == (0, 2)
+
+
+def test_the_hash_of_an_id_is_the_first_half_of_its_digest():
+    found, has_id = id_hashes(pa.array(["1", None, "abc", ""]))
+    assert found.tolist() == [ONE[0], 0, ABC[0], 0]
+    assert has_id.tolist() == [True, False, True, False]
+    assert found.flags.c_contiguous
 
 
 # ---- rows
@@ -109,14 +118,10 @@ def test_integers_and_decimals_hash_as_the_floats_the_fit_sees():
     huge = with_column(stars(1), "panstarrs_g", pa.array([2**63 - 1], pa.int64()))
     assert hashes(huge) == hashes(with_column(stars(1), "panstarrs_g", [2.0**63]))
     tenth = pa.array(["0.125"]).cast(pa.decimal128(6, 3))
-    assert hashes(with_column(stars(1), "panstarrs_g", tenth)) == hashes(
-        with_column(stars(1), "panstarrs_g", [0.125])
-    )
+    assert hashes(with_column(stars(1), "panstarrs_g", tenth)) == hashes(with_column(stars(1), "panstarrs_g", [0.125]))
 
 
-@pytest.mark.parametrize(
-    "column", ["star_id", "parallax", "parallax_error", "panstarrs_g", "panstarrs_i_error"]
-)
+@pytest.mark.parametrize("column", ["star_id", "parallax", "parallax_error", "panstarrs_g", "panstarrs_i_error"])
 def test_every_used_value_counts(column):
     table = stars(2)
     changed = with_column(table, column, pa.array([table[column][0].as_py(), 99], table[column].type))

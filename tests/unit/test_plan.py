@@ -8,7 +8,6 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from small_survey import settings_for, stars, with_column
-from starkiln.engine import repeats
 from starkiln.engine.plan import (
     even_parts,
     file_stamp,
@@ -17,6 +16,7 @@ from starkiln.engine.plan import (
 )
 from starkiln.engine.repeats import copies, read_marks
 from starkiln.errors import EnvironmentTrouble, InputError
+from starkiln.tables import hashes
 from starkiln.tables.source import open_source
 
 
@@ -137,7 +137,7 @@ def test_stamps_tell_size_and_time_of_each_file(tmp_path):
 
 
 def test_ids_whose_hashes_agree_in_half_their_bits_are_no_repeats(tmp_path, monkeypatch):
-    monkeypatch.setattr(repeats, "digest", lambda star_id: b"the same" + star_id.rjust(8))
+    monkeypatch.setattr(hashes, "id_digest", lambda star_id: b"the same" + star_id.rjust(8))
     tables = [with_column(stars(3), "star_id", ids) for ids in ([5, 6, 7], [8, 6, 9])]
     _, plan = plan_of(tmp_path, tables)
     assert plan.duplicates == 1

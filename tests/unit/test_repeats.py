@@ -1,8 +1,6 @@
-import hashlib
 from collections import Counter
 
 import numpy as np
-import pyarrow as pa
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
@@ -10,8 +8,8 @@ from hypothesis import strategies as st
 import starkiln
 from fake_stages import pass_through, stages
 from small_survey import settings_for, stars, with_column
-from starkiln.engine import repeats
-from starkiln.engine.repeats import copies, id_digests, mark_repeats
+from starkiln.engine.repeats import copies, mark_repeats
+from starkiln.tables import hashes
 
 
 def expected_copies(ids):
@@ -34,22 +32,13 @@ def test_the_first_copy_in_input_order_is_told_from_later_ones(ids, order):
     assert copies(marks, rows).tolist() == expected_copies(ids)
 
 
-def test_digests_are_of_the_canonical_ids():
-    digests, has_id = id_digests(pa.array([12, None, -3], pa.int64()))
-    assert has_id.tolist() == [True, False, True]
-    assert digests[0].tobytes() == hashlib.blake2b(b"12", digest_size=16).digest()
-    assert digests[1].tolist() == [0, 0]
-    assert id_digests(pa.array(["12", "", None]))[0].tolist() == [digests[0].tolist(), [0, 0], [0, 0]]
-    assert id_digests(pa.array([], pa.string()))[0].shape == (0, 2)
-
-
 @pytest.mark.parametrize("half", [0, 1])
 def test_ids_that_share_half_of_their_digests_are_no_repeats(half, monkeypatch):
     def weak(star_id):
         halves = [b"\0" * 8, star_id.rjust(8)]
         return halves[half] + halves[1 - half]
 
-    monkeypatch.setattr(repeats, "digest", weak)
+    monkeypatch.setattr(hashes, "id_digest", weak)
     table = with_column(stars(5), "star_id", [7, 8, 7, 9, 10])
     frame = starkiln.fit_table(table, settings_for("a"), stages=stages(pass_through))
     assert frame["star_id"].tolist() == [7, 8, 9, 10]

@@ -49,10 +49,12 @@ class Buckets:
         return top_bits * len(self._paths) >> 32
 
     def drain(self) -> Iterator[NDArray[np.void]]:
-        """Yield the records of each file in turn, in the order they came, and remove the file."""
+        """Yield the records of each range in turn, in the order they came, and remove the file.
+
+        A range without records yields an empty array, so two sets of as many buckets can be walked side by side.
+        """
         for path in self._paths:
-            if path.exists():
-                with disk_trouble(path):
-                    records = np.fromfile(path, self._dtype)
-                    path.unlink()
-                yield records
+            with disk_trouble(path):
+                records = np.fromfile(path, self._dtype) if path.exists() else np.empty(0, self._dtype)
+                path.unlink(missing_ok=True)
+            yield records

@@ -2,34 +2,18 @@
 
 from __future__ import annotations
 
-import hashlib
 from pathlib import Path
 
 import numpy as np
-import pyarrow as pa
 from numpy.typing import NDArray
 
 from starkiln.engine.disk import disk_trouble
-from starkiln.tables.hashes import canonical_ids
+from starkiln.tables.hashes import id_digests
+
+__all__ = ["copies", "id_digests", "mark_repeats", "read_marks", "write_marks"]
 
 RECORD = np.dtype([("id_hash", "<i8"), ("more_hash", "<i8"), ("row", "<i8")])
 """What is remembered of a row until its bucket is searched: the two halves of its id's digest, and its place."""
-
-
-def id_digests(ids: pa.Array | pa.ChunkedArray) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
-    """Return the 128-bit digest of each id as two integers, (n, 2), and whether the row has an id (0 where not).
-
-    Among n ids, two share a digest with a chance of n**2 / 2**129: 1e-21 for a billion (the birthday bound).
-    """
-    canonical = canonical_ids(ids)
-    has_id = np.array([star_id is not None for star_id in canonical], bool)
-    digests = np.frombuffer(b"".join(digest(star_id or b"") for star_id in canonical), "<i8").reshape(-1, 2)
-    return np.where(has_id[:, None], digests, 0).astype(np.int64), has_id
-
-
-def digest(star_id: bytes) -> bytes:
-    """Return the 16 bytes that stand for an id."""
-    return hashlib.blake2b(star_id, digest_size=16).digest()
 
 
 def mark_repeats(digests: NDArray[np.int64], rows: NDArray[np.int64]) -> NDArray[np.int64]:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from starkiln.settings import Settings
 
-_HASH_BYTES = 8
+_ROW_HASH_BYTES = 8
 
 
 def canonical_ids(ids: pa.Array | pa.ChunkedArray) -> list[bytes | None]:
@@ -25,14 +25,26 @@ def canonical_ids(ids: pa.Array | pa.ChunkedArray) -> list[bytes | None]:
     return pc.if_else(pc.equal(texts, ""), None, texts).cast(pa.binary()).to_pylist()
 
 
-def id_hashes(ids: pa.Array | pa.ChunkedArray) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
-    """Return the 64-bit BLAKE2b hash of each canonical id, and whether the row has an id (0 where not)."""
+def id_digests(ids: pa.Array | pa.ChunkedArray) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
+    """Return the 128-bit digest of each id as two integers, (n, 2), and whether the row has an id (0 where not).
+
+    Among n ids, two share a digest with a chance of n**2 / 2**129: 1e-21 for a billion (the birthday bound).
+    """
     canonical = canonical_ids(ids)
     has_id = np.array([star_id is not None for star_id in canonical], bool)
-    digests = b"".join(
-        hashlib.blake2b(star_id or b"", digest_size=_HASH_BYTES).digest() for star_id in canonical
-    )
-    return np.where(has_id, np.frombuffer(digests, "<i8"), 0).astype(np.int64), has_id
+    digests = np.frombuffer(b"".join(id_digest(star_id or b"") for star_id in canonical), "<i8").reshape(-1, 2)
+    return np.where(has_id[:, None], digests, 0).astype(np.int64), has_id
+
+
+def id_digest(star_id: bytes) -> bytes:
+    """Return the 16 bytes that stand for an id: its BLAKE2b digest of that size."""
+    return hashlib.blake2b(star_id, digest_size=16).digest()
+
+
+def id_hashes(ids: pa.Array | pa.ChunkedArray) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
+    """Return the first half of each id's digest, and whether the row has an id (0 where not)."""
+    digests, has_id = id_digests(ids)
+    return np.ascontiguousarray(digests[:, 0]), has_id
 
 
 def row_hashes(table: pa.Table, settings: Settings) -> NDArray[np.int64]:
@@ -65,7 +77,7 @@ def row_hashes(table: pa.Table, settings: Settings) -> NDArray[np.int64]:
 
 
 def _digests(rows: NDArray[np.uint8], ids: list[bytes | None], person: bytes) -> NDArray[np.int64]:
-    base = hashlib.blake2b(digest_size=_HASH_BYTES, person=person)
+    base = hashlib.blake2b(digest_size=_ROW_HASH_BYTES, person=person)
     width, everything = rows.shape[1], rows.tobytes()
     digests = bytearray()
     for k, star_id in enumerate(ids):
