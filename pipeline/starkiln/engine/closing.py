@@ -11,8 +11,8 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from starkiln.engine.buckets import BUCKET_ROWS, Buckets
-from starkiln.engine.disk import remove_folder
-from starkiln.engine.plan import Plan
+from starkiln.engine.disk import disk_trouble, remove_folder
+from starkiln.engine.records import Plan
 from starkiln.settings import Settings
 from starkiln.tables.columns import (
     catalogue_schema,
@@ -33,11 +33,12 @@ def close_generation(
     plan: Plan,
     settings: Settings,
     input_schema: pa.Schema,
-    partial: Path,
+    parts: Path,
+    target: Path,
     scratch: Path,
     check: Callable[[], None],
 ) -> dict[str, list[PackedFile]]:
-    """Pack the parts of a partial generation into its tables, write its index, and remove the parts.
+    """Pack parts into the tables of a generation, and write its index; the parts stay.
 
     Parameters
     ----------
@@ -47,8 +48,10 @@ def close_generation(
         The settings.
     input_schema
         Schema of the input tables, which says how ids and carried columns are stored.
-    partial
-        The folder of the generation, with the parts in `parts/`.
+    parts
+        The folder of the parts.
+    target
+        The folder of the generation; what an earlier attempt left there is removed.
     scratch
         A folder for temporary files.
     check
@@ -58,7 +61,7 @@ def close_generation(
     -------
     The files of each table, in order.
     """
-    parts = partial / "parts"
+    _make_empty(target)
     id_field, carry_fields = output_fields(input_schema, settings)
     schemas = {
         "catalogue": catalogue_schema(settings, id_field, carry_fields),
@@ -70,13 +73,21 @@ def close_generation(
     files: dict[str, list[PackedFile]] = defaultdict(list)
     for (table, folder), numbers in shelves.items():
         check()
-        target = partial / table / folder
-        target.mkdir(parents=True, exist_ok=True)
+        shelf = target / table / folder
+        with disk_trouble(shelf):
+            shelf.mkdir(parents=True, exist_ok=True)
         paths = [part_path(parts, table, number) for number in numbers]
-        files[table] += pack(paths, target, schemas[table], settings.output.rows_per_file)
-    files["index"] = _write_index(plan, shelves, settings.output.rows_per_file, partial, scratch, check)
-    remove_folder(parts)
+        files[table] += pack(paths, shelf, schemas[table], settings.output.rows_per_file)
+    index = target / "index"
+    _make_empty(index)
+    files["index"] = _write_index(plan, shelves, settings.output.rows_per_file, parts, index, scratch, check)
     return dict(files)
+
+
+def _make_empty(folder: Path) -> None:
+    with disk_trouble(folder):
+        remove_folder(folder)
+        folder.mkdir()
 
 
 def part_path(parts: Path, table: str, number: int) -> Path:
@@ -98,20 +109,21 @@ def _write_index(
     plan: Plan,
     shelves: dict[Shelf, list[int]],
     rows_per_file: int,
-    partial: Path,
+    parts: Path,
+    target: Path,
     scratch: Path,
     check: Callable[[], None],
 ) -> list[PackedFile]:
     """Write the index sorted by the hash of the id, with the rows' places in the packed files."""
-    buckets = Buckets(scratch / "index", plan.selected, _RECORD)
+    folder = scratch / "index"
+    remove_folder(folder)
+    buckets = Buckets(folder, plan.selected, _RECORD)
     names = list(shelves)
     for table in ("catalogue", "rejected"):
         for shelf, (name, folder) in enumerate(names):
             if name == table:
-                _collect(partial / "parts", table, shelf, shelves[name, folder], buckets)
+                _collect(parts, table, shelf, shelves[name, folder], buckets)
                 check()
-    target = partial / "index"
-    target.mkdir()
     widths = {"file": max(len(_file_name(shelf, plan.selected // rows_per_file)) for shelf in names)}
     with Packer(target, index_schema(), BUCKET_ROWS, widths) as packer:
         for records in buckets.drain():

@@ -14,9 +14,11 @@ from pathlib import Path
 from typing import Any
 
 import pyarrow as pa
+from distributed import get_worker
 
 from starkiln.engine.disk import disk_trouble
 from starkiln.engine.provenance import hashes
+from starkiln.engine.records import EarlierFile, Identity, WorkerDisagrees
 from starkiln.errors import EnvironmentTrouble
 from starkiln.settings import Settings, build_settings, dump_toml
 from starkiln.tables.source import Source, SourceFile
@@ -65,9 +67,13 @@ class Job:
     stamps
         Size and modification time of each input file when the run was planned.
     scratch
-        Folder of the cut files and of the marks of repeated ids.
+        Folder of the cut files.
     parts
         Folder of the output of the parts.
+    notes
+        Folder of the notes about rows.
+    earlier
+        The files of earlier results; notes count from this list.
     """
 
     source: Source
@@ -77,9 +83,17 @@ class Job:
     stamps: tuple[tuple[int, int], ...]
     scratch: Path
     parts: Path
+    notes: Path
+    earlier: tuple[EarlierFile, ...] = ()
 
-    def save(self) -> SavedJob:
-        """Write the job's data into the scratch folder, and return what a worker needs to take it up."""
+    def save(self, identity: Identity | None = None) -> SavedJob:
+        """Write the job's data into the scratch folder, and return what a worker needs to take it up.
+
+        Parameters
+        ----------
+        identity
+            What workers that this run has not started must agree on.
+        """
         files = [
             {
                 "path": str(file.path),
@@ -96,22 +110,30 @@ class Job:
             "schema": base64.b64encode(self.source.schema.serialize()).decode(),
             "stamps": self.stamps,
             "parts": str(self.parts),
+            "notes": str(self.notes),
+            "earlier": [[str(file.path), file.draws and str(file.draws), file.table] for file in self.earlier],
             "hashes": hashes(self.settings, self.model),
         }
         # Processes remember the job by its path, so no two jobs ever share one.
         path = self.scratch / f"job.{uuid.uuid4().hex}.json"
         with disk_trouble(path):
             path.write_text(json.dumps(data))
-        return SavedJob(path, name_of(self.stages.build_model), name_of(self.stages.process_part))
+        stages = (self.stages.build_model, self.stages.process_part, self.stages.warm_up)
+        return SavedJob(path, *map(name_of, stages), identity)
 
 
 @dataclass(frozen=True)
 class SavedJob:
-    """Where a job's data lie, and the names of its stages; small enough to go with every task."""
+    """Where a job's data lie, and the names of its stages; small enough to go with every task.
+
+    Workers that the run has not started must agree with the `identity`, and warm up before their first task.
+    """
 
     path: Path
     build_model: str
     process_part: str
+    warm_up: str
+    identity: Identity | None = None
 
 
 def open_job(job: Job | SavedJob) -> Job:
@@ -121,18 +143,26 @@ def open_job(job: Job | SavedJob) -> Job:
     ------
     EnvironmentTrouble
         If the model is not the one that the run began with.
+    WorkerDisagrees
+        If this process is not what the run expects of its workers.
     """
     return job if isinstance(job, Job) else _read_job(job)
 
 
 @lru_cache(maxsize=1)
 def _read_job(saved: SavedJob) -> Job:
+    from starkiln.engine.identity import identify
+
+    if saved.identity is not None and (disagreement := identify(saved.identity)):
+        raise WorkerDisagrees(_worker_address(), disagreement)
     with disk_trouble(saved.path):
         data = json.loads(saved.path.read_text())
     settings = build_settings(tomllib.loads(data["settings"]))
-    stages = Stages(named(saved.build_model), named(saved.process_part))
+    stages = Stages(named(saved.build_model), named(saved.process_part), named(saved.warm_up))
     model = stages.build_model(settings)
     _check_hashes(hashes(settings, model), data["hashes"])
+    if saved.identity is not None:
+        stages.warm_up(settings, model)
     return Job(
         source=Source(tuple(map(_source_file, data["files"])), _schema(data["schema"])),
         settings=settings,
@@ -141,7 +171,16 @@ def _read_job(saved: SavedJob) -> Job:
         stamps=tuple((size, modified_ns) for size, modified_ns in data["stamps"]),
         scratch=saved.path.parent,
         parts=Path(data["parts"]),
+        notes=Path(data["notes"]),
+        earlier=tuple(EarlierFile(Path(path), draws and Path(draws), table) for path, draws, table in data["earlier"]),
     )
+
+
+def _worker_address() -> str:
+    try:
+        return str(get_worker().address)
+    except ValueError:
+        return "this process"
 
 
 def _check_hashes(found: dict[str, Any], expected: dict[str, Any]) -> None:

@@ -31,14 +31,15 @@ class WrittenFile:
     ----------
     tmp_path
         Where it lies; a hidden name that no reader of the folder takes.
-    rows
-        Number of rows.
+    rows, size
+        Number of rows, and of bytes.
     sha256
         Digest of the file's bytes, in hexadecimal.
     """
 
     tmp_path: Path
     rows: int
+    size: int
     sha256: str
 
 
@@ -63,9 +64,7 @@ def write_part(table: pa.Table, path: Path) -> WrittenFile:
     tmp_path = _temporary_name(path)
     with _disk_trouble(path), _removed_on_failure(tmp_path):
         with _open_writer(tmp_path, schema) as writer:
-            writer.write_table(
-                table.replace_schema_metadata(schema.metadata), row_group_size=group_rows(schema)
-            )
+            writer.write_table(table.replace_schema_metadata(schema.metadata), row_group_size=group_rows(schema))
         return _finish(tmp_path, table.num_rows)
 
 
@@ -253,8 +252,8 @@ def pack(paths: Sequence[Path], folder: Path, schema: pa.Schema, rows_per_file: 
     return packer.files
 
 
-def read_groups(path: Path) -> Iterator[pa.Table]:
-    """Yield the row groups of a file this package wrote, page checksums verified.
+def read_groups(path: Path, groups: Sequence[int] | None = None) -> Iterator[pa.Table]:
+    """Yield row groups, all unless some are asked for, of a file this package wrote, page checksums verified.
 
     Raises
     ------
@@ -265,8 +264,21 @@ def read_groups(path: Path) -> Iterator[pa.Table]:
         _disk_trouble(path, _READ_FAILURES),
         pq.ParquetFile(path, pre_buffer=False, page_checksum_verification=True) as file,
     ):
-        for group in range(file.num_row_groups):
+        for group in range(file.num_row_groups) if groups is None else groups:
             yield file.read_row_group(group, use_threads=False)
+
+
+def group_sizes(path: Path) -> list[int]:
+    """Return the rows of each row group of a file.
+
+    Raises
+    ------
+    EnvironmentTrouble
+        If the file is gone or damaged.
+    """
+    with _disk_trouble(path, _READ_FAILURES):
+        metadata = pq.read_metadata(path)
+        return [metadata.row_group(group).num_rows for group in range(metadata.num_row_groups)]
 
 
 def _open_writer(path: Path, schema: pa.Schema) -> pq.ParquetWriter:
@@ -306,10 +318,8 @@ def _finish(tmp_path: Path, rows: int) -> WrittenFile:
         os.close(descriptor)
     found = pq.read_metadata(tmp_path).num_rows
     if found != rows:
-        raise EnvironmentTrouble(
-            f"{tmp_path}: {rows} rows were written but {found} are in the file; check the disk"
-        )
-    return WrittenFile(tmp_path, rows, file_sha256(tmp_path))
+        raise EnvironmentTrouble(f"{tmp_path}: {rows} rows were written but {found} are in the file; check the disk")
+    return WrittenFile(tmp_path, rows, tmp_path.stat().st_size, file_sha256(tmp_path))
 
 
 @contextmanager
