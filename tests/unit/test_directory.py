@@ -67,3 +67,31 @@ def test_scratch_is_private_empty_and_gone_afterwards(tmp_path, inside):
 def test_two_run_directories_do_not_share_scratch(tmp_path):
     with scratch_folder(tmp_path / "a", tmp_path) as one, scratch_folder(tmp_path / "b", tmp_path) as other:
         assert one != other
+
+
+def test_who_holds_a_directory_may_hold_it_again(tmp_path):
+    with hold(tmp_path):
+        holder = (tmp_path / "lock").read_text()
+        with hold(tmp_path):
+            pass
+        assert refused(tmp_path).startswith(f"{tmp_path} is in use by another run (process {os.getpid()} on ")
+        assert (tmp_path / "lock").read_text() == holder
+    assert refused(tmp_path) == ""
+
+
+def refused(run_dir):
+    """Try to hold a directory in another process, and return what that was told."""
+    attempt = (
+        "import sys; from pathlib import Path; from starkiln.engine.directory import hold\n"
+        "with hold(Path(sys.argv[1])): pass"
+    )
+    done = subprocess.run([sys.executable, "-c", attempt, run_dir], capture_output=True, text=True)
+    return done.stderr.splitlines()[-1].partition(": ")[2] if done.returncode else ""
+
+
+def test_a_lock_is_asked_for_without_loading_what_runs_need():
+    ask = (
+        "import sys, starkiln.engine.directory\n"
+        "print([name for name in ('numpy', 'pyarrow', 'dask', 'distributed', 'astropy') if name in sys.modules])"
+    )
+    assert subprocess.run([sys.executable, "-c", ask], capture_output=True, text=True).stdout == "[]\n"

@@ -8,7 +8,7 @@ from pathlib import Path
 import pytest
 
 from starkiln.engine import disk
-from starkiln.engine.disk import disk_trouble, remove_folder
+from starkiln.engine.disk import disk_trouble, remove_folder, sweep
 from starkiln.engine.events import EventLog
 from starkiln.errors import EnvironmentTrouble
 
@@ -68,3 +68,29 @@ def test_a_log_on_a_full_disk_stops_nothing():
         EventLog(full).write("plan", parts=3)
         with pytest.raises(OSError, match=os.strerror(errno.ENOSPC)):
             full.write(b"full indeed")
+
+
+def test_what_killed_writers_left_is_swept_and_nothing_else(tmp_path):
+    keep, elsewhere = tmp_path / "run", tmp_path / "elsewhere"
+    for folder in (keep / "parts" / "catalogue", elsewhere):
+        folder.mkdir(parents=True)
+        for name in (".part-000001.abc.tmp", "part-000001.parquet", "part.tmp", ".lock"):
+            (folder / name).touch()
+    (keep / "parts" / "link").symlink_to(elsewhere)
+    (keep / ".current.abc.tmp").symlink_to(elsewhere)
+    sweep(keep)
+    left = sorted(path.relative_to(keep).as_posix() for path in keep.rglob("*"))
+    assert left == [
+        "parts",
+        "parts/catalogue",
+        "parts/catalogue/.lock",
+        "parts/catalogue/part-000001.parquet",
+        "parts/catalogue/part.tmp",
+        "parts/link",
+    ]
+    assert len(list(elsewhere.iterdir())) == 4
+
+
+def test_there_is_nothing_to_sweep_where_there_is_no_folder(tmp_path):
+    sweep(tmp_path / "none")
+    assert list(tmp_path.iterdir()) == []

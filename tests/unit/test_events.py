@@ -23,3 +23,11 @@ def test_the_oldest_logs_go(tmp_path):
     names = sorted(path.name for path in (tmp_path / "logs").iterdir())
     assert len(names) == LOGS_KEPT
     assert names[0].startswith("20260106")
+
+
+def test_any_fact_can_be_told(tmp_path):
+    with open_log(tmp_path, datetime(2026, 1, 1, tzinfo=UTC)) as log:
+        log.write("refused", path=tmp_path, name="\udcff\n")
+        (line,) = next((tmp_path / "logs").iterdir()).read_text().splitlines()
+    assert json.loads(line)["path"] == str(tmp_path)
+    assert json.loads(line)["name"] == "\udcff\n"

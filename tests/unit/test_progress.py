@@ -60,3 +60,17 @@ def test_a_terminal_gets_a_bar_on_standard_error(monkeypatch, capsys):
     assert "fitting" in terminal.getvalue()
     assert "100/100" in terminal.getvalue()
     assert capsys.readouterr().out == ""
+
+
+class Heard(list):
+    def begin(self, what, rows):
+        self.append((what, rows))
+
+    def advance(self, rows):
+        self.append(rows)
+
+
+def test_two_are_told_the_same():
+    first, second = Heard(), Heard()
+    tell(progress.Both(first, second))
+    assert first == second == [("planning", 10), 10, ("fitting", 100), *[10] * 10]

@@ -8,7 +8,7 @@ import os
 import shutil
 import socket
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from datetime import UTC, datetime
 from pathlib import Path
 
@@ -21,6 +21,8 @@ from starkiln.errors import DirectoryBusy, EnvironmentTrouble, SettingsError
 @contextmanager
 def hold(run_dir: Path) -> Iterator[None]:
     """Create the run directory if need be and hold its lock; the kernel frees it if this process dies.
+
+    Whoever holds it may do so again, in the same thread: the lock goes when all have left.
 
     Parameters
     ----------
@@ -37,7 +39,7 @@ def hold(run_dir: Path) -> Iterator[None]:
     try:
         run_dir.mkdir(parents=True, exist_ok=True)
         # A lock that is only a file outlives its holder, so there is no falling back to one.
-        lock = FileLock(run_dir / "lock", timeout=0, fallback_to_soft=False)
+        lock = FileLock(run_dir / "lock", timeout=0, fallback_to_soft=False, is_singleton=True)
         lock.acquire()
     except Timeout:
         raise DirectoryBusy(f"{run_dir} is in use by another run{_holder(run_dir)}; wait for it") from None
@@ -46,15 +48,22 @@ def hold(run_dir: Path) -> Iterator[None]:
             f"cannot use {run_dir} as the run directory ({_reason(error)}): set run.output to a folder you can write to"
         ) from error
     try:
-        holder = {
-            "host": socket.gethostname(),
-            "pid": os.getpid(),
-            "start": datetime.now(UTC).isoformat(timespec="seconds"),
-        }
-        (run_dir / "lock").write_text(json.dumps(holder) + "\n")
+        if lock.lock_counter == 1:
+            _name_holder(run_dir / "lock")
         yield
     finally:
         lock.release()
+
+
+def _name_holder(path: Path) -> None:
+    holder = {
+        "host": socket.gethostname(),
+        "pid": os.getpid(),
+        "start": datetime.now(UTC).isoformat(timespec="seconds"),
+    }
+    # In place: the file is the lock, and one put there instead would be another. A full disk is told where it matters.
+    with suppress(OSError):
+        path.write_text(json.dumps(holder) + "\n")
 
 
 def _reason(error: BaseException) -> str:

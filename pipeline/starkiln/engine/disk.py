@@ -7,6 +7,7 @@ import shutil
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
+from fnmatch import fnmatchcase
 from pathlib import Path
 
 from starkiln.errors import EnvironmentTrouble
@@ -48,3 +49,20 @@ def remove_folder(folder: Path) -> None:
             if time.monotonic() > until:
                 raise
             time.sleep(0.1)
+
+
+def sweep(folder: Path, pattern: str = ".*.tmp") -> None:
+    """Remove the files and links of a name below a folder, if it is there: what killed writers left half done.
+
+    Parameters
+    ----------
+    folder
+        Where to look, folders in it included; links to folders are not followed.
+    pattern
+        The names to remove.
+    """
+    for root, folders, names in os.walk(folder):
+        links = [name for name in folders if os.path.islink(os.path.join(root, name))]
+        for name in (*names, *links):
+            if fnmatchcase(name, pattern):
+                Path(root, name).unlink(missing_ok=True)

@@ -22,7 +22,7 @@ class EventLog:
         """Append an event with the time it happened and its fields."""
         line = {"time": datetime.now(UTC).isoformat(timespec="milliseconds"), "event": event, **fields}
         with suppress(OSError):
-            self._file.write((json.dumps(line) + "\n").encode())
+            self._file.write((json.dumps(line, default=str) + "\n").encode())
 
 
 @contextmanager

@@ -31,6 +31,23 @@ class Silence:
         """Tell nothing."""
 
 
+class Both:
+    """Hands on to two."""
+
+    def __init__(self, first: Progress, second: Progress) -> None:
+        self._told = (first, second)
+
+    def begin(self, what: str, rows: int) -> None:
+        """Tell both."""
+        for told in self._told:
+            told.begin(what, rows)
+
+    def advance(self, rows: int) -> None:
+        """Tell both."""
+        for told in self._told:
+            told.advance(rows)
+
+
 class Lines:
     """Writes a line to standard error about once a minute."""
 
