@@ -36,7 +36,8 @@ def packed_together(packed: Iterable[bytes]) -> bytes:
 def pack(record: Any) -> bytes:
     """Return a named tuple or dataclass of arrays, or of others like it, as bytes."""
     file = io.BytesIO()
-    np.savez_compressed(file, **dict(_leaves(record, "")))
+    arrays: dict[str, Any] = dict(_leaves(record, ""))
+    np.savez_compressed(file, **arrays)
     return file.getvalue()
 
 

@@ -73,11 +73,11 @@ def close_generation(
     files: dict[str, list[PackedFile]] = defaultdict(list)
     for (table, folder), numbers in shelves.items():
         check()
-        shelf = target / table / folder
-        with disk_trouble(shelf):
-            shelf.mkdir(parents=True, exist_ok=True)
+        place = target / table / folder
+        with disk_trouble(place):
+            place.mkdir(parents=True, exist_ok=True)
         paths = [part_path(parts, table, number) for number in numbers]
-        files[table] += pack(paths, shelf, schemas[table], settings.output.rows_per_file)
+        files[table] += pack(paths, place, schemas[table], settings.output.rows_per_file)
     index = target / "index"
     _make_empty(index)
     files["index"] = _write_index(plan, shelves, settings.output.rows_per_file, parts, index, scratch, check)
@@ -115,9 +115,8 @@ def _write_index(
     check: Callable[[], None],
 ) -> list[PackedFile]:
     """Write the index sorted by the hash of the id, with the rows' places in the packed files."""
-    folder = scratch / "index"
-    remove_folder(folder)
-    buckets = Buckets(folder, plan.selected, _RECORD)
+    remove_folder(scratch / "index")
+    buckets = Buckets(scratch / "index", plan.selected, _RECORD)
     names = list(shelves)
     for table in ("catalogue", "rejected"):
         for shelf, (name, folder) in enumerate(names):
@@ -127,7 +126,8 @@ def _write_index(
     widths = {"file": max(len(_file_name(shelf, plan.selected // rows_per_file)) for shelf in names)}
     with Packer(target, index_schema(), BUCKET_ROWS, widths) as packer:
         for records in buckets.drain():
-            packer.add(_index_table(np.sort(records, order="id_hash"), names, rows_per_file))
+            if len(records):
+                packer.add(_index_table(np.sort(records, order="id_hash"), names, rows_per_file))
             check()
     return packer.files
 

@@ -118,8 +118,14 @@ class Job:
         path = self.scratch / f"job.{uuid.uuid4().hex}.json"
         with disk_trouble(path):
             path.write_text(json.dumps(data))
-        stages = (self.stages.build_model, self.stages.process_part, self.stages.warm_up)
-        return SavedJob(path, *map(name_of, stages), identity)
+        stages = self.stages
+        return SavedJob(
+            path,
+            build_model=name_of(stages.build_model),
+            process_part=name_of(stages.process_part),
+            warm_up=name_of(stages.warm_up),
+            identity=identity,
+        )
 
 
 @dataclass(frozen=True)

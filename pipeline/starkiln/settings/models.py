@@ -370,6 +370,8 @@ class Compute(Section):
     """Worker processes; "auto" goes by the processors and memory that this process may use."""
     rows_per_part: Count = 5000
     """Rows of a part, the unit of work and of restart."""
+    row_seconds: Positive = 45.0
+    """Seconds after which a row counts as hung; limits of whole parts follow from it."""
     memory_per_worker: Memory = "2GB"
     """Memory that each worker may use."""
     scratch: Annotated[FilePath | None, BeforeValidator(_scratch)] = None
