@@ -140,7 +140,7 @@ def test_the_pace_is_that_of_the_newest_parts_with_fits(ledger, monkeypatch):
     monkeypatch.setattr(ledger_module, "PARTS_OF_PACE", 20)
     ledger.begin_build(BUILD)
     for number in (*range(20, 1, -1), 0, 1):
-        ledger.add_part(1, replace(PART, number=number, fitted=4, seconds={"process": float(number)}))
+        ledger.add_part(1, replace(PART, number=number, fitted=4, seconds={"process": float(number), "keep": 1e3}))
     ledger.add_part(1, replace(PART, number=999, fitted=0))
     rates = ledger.fit_rates()
     assert len(rates) == 20

@@ -303,7 +303,7 @@ class Ledger(Checkpoints):
         rows = self._rows(
             f"SELECT seconds, fitted FROM parts WHERE fitted > 0 ORDER BY rowid DESC LIMIT {PARTS_OF_PACE:d}"
         )
-        return [sum(json.loads(seconds).values()) / fitted for seconds, fitted in rows]
+        return [(sum(spent.values()) - spent.get("keep", 0.0)) / fitted for spent, fitted in _decoded(rows)]
 
     def _insert(self, table: str, row: Mapping[str, Any]) -> None:
         """Write a row, in place of one that has the same key."""
@@ -318,6 +318,10 @@ class Ledger(Checkpoints):
     def _rows(self, statement: str, *values: Any) -> list[Any]:
         with _told(self._path):
             return self._connection.execute(statement, values).fetchall()
+
+
+def _decoded(rows: list[Any]) -> Iterator[tuple[dict[str, float], int]]:
+    return ((json.loads(seconds), fitted) for seconds, fitted in rows)
 
 
 def _done_part(
