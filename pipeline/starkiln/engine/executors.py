@@ -55,13 +55,21 @@ class Finished:
 class Executor(Protocol):
     """Runs plain functions of small arguments, each under a key of its own."""
 
-    workers: int
+    @property
+    def workers(self) -> int:
+        """How many tasks run at a time."""
 
     def submit(self, key: str, function: Callable[..., Any], *args: Any, urgent: bool = False) -> None:
         """Take a task; urgent ones go before the others."""
 
     def next_finished(self) -> Finished | None:
         """Return a task that has ended, or None if none did within a short while."""
+
+    def refuse(self, address: str) -> None:
+        """Give a worker no more tasks."""
+
+    def abandon(self) -> None:
+        """Give up the tasks that have not ended."""
 
 
 class SerialExecutor:
@@ -89,6 +97,13 @@ class SerialExecutor:
             return Finished(key, function(*args), None)
         except Exception as error:
             return Finished(key, None, error)
+
+    def refuse(self, address: str) -> None:
+        """Do nothing: this process is the only one."""
+
+    def abandon(self) -> None:
+        """Forget the tasks."""
+        self._tasks.clear()
 
 
 class ClusterExecutor:
@@ -127,6 +142,15 @@ class ClusterExecutor:
         # An erred future stays in the scheduler until it is released.
         future.release()
         return finished
+
+    def refuse(self, address: str) -> None:
+        """Do nothing: these workers are this program's own."""
+
+    def abandon(self) -> None:
+        """End the workers in the middle of their tasks."""
+        # They may be dying already, of the same signal that ends the run.
+        with suppress(Exception):
+            _kill_workers(self._cluster)
 
 
 def _plain_error(error: Exception) -> Exception:
@@ -198,12 +222,11 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
             raise ClusterTrouble(
                 f"cannot start {workers} worker processes ({error}); try fewer with --workers"
             ) from error
+        executor = ClusterExecutor(cluster, client, workers)
         try:
-            yield ClusterExecutor(cluster, client, workers)
+            yield executor
         except BaseException:
-            # Workers may be dying already, of the same signal that ends this block.
-            with suppress(Exception):
-                _kill_workers(cluster)
+            executor.abandon()
             raise
 
 
