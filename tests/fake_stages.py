@@ -131,6 +131,57 @@ def kill_worker(table: pa.Table, settings: Settings, model: NoModel) -> PartTabl
     return pass_through(table, settings, model)
 
 
+def raise_always(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
+    raise ArithmeticError("the stage has a bug")
+
+
+def exit_at_failing_id(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
+    """End the process without a word to anyone, as a crash in compiled code does."""
+    if _has_failing_id(table, settings):
+        os._exit(1)
+    return pass_through(table, settings, model)
+
+
+def hang_at_failing_id(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
+    if _has_failing_id(table, settings):
+        time.sleep(1e6)
+    return pass_through(table, settings, model)
+
+
+def hang_in_kernel(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
+    """Hang in compiled code, to which no signal handler and no exception of Python's comes through."""
+    if _has_failing_id(table, settings):
+        _endless()(1.0)
+    return pass_through(table, settings, model)
+
+
+def _endless() -> Any:
+    from numba import njit
+
+    @njit(nogil=True)
+    def count(number: float) -> float:
+        while number > 0.0:
+            number = number + 1.0 if number < 1e6 else 1.0
+        return number
+
+    return count
+
+
+def eat_memory(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
+    """Take more and more memory, 20 MB at a time, until this process is ended."""
+    taken = []
+    while _has_failing_id(table, settings):
+        taken.append(np.ones(2_500_000))
+        time.sleep(0.005)
+    return pass_through(table, settings, model)
+
+
+def slow_rows(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
+    """Take 0.02 s a row."""
+    time.sleep(0.02 * len(table))
+    return pass_through(table, settings, model)
+
+
 def lose_a_row(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
     made = pass_through(table, settings, model)
     return PartTables(made.catalogue.slice(1), made.rejected, made.draws)
