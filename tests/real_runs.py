@@ -18,10 +18,10 @@ MAIN = """
 import sys
 import fake_stages
 from starkiln import cli
-from starkiln.engine import run
+from starkiln.engine import build, run
 if __name__ == "__main__":
     stage, small = sys.argv.pop(), sys.argv.pop()
-    run.SMALL_RUN_ROWS = int(small)
+    build.SMALL_RUN_ROWS = int(small)
     run.fitting_stages = lambda: fake_stages.stages(getattr(fake_stages, stage))
     cli.main()
 """

@@ -48,7 +48,7 @@ def _errors_told(debug: bool, quiet: bool = False) -> Iterator[None]:
             _tell(str(error))
         raise typer.Exit(error.exit_code) from None
     except KeyboardInterrupt:
-        _tell("interrupted: nothing was published")
+        _tell("interrupted; run again to go on")
         raise typer.Exit(EXIT_INTERRUPTED) from None
     except (typer.Exit, typer.Abort, BrokenPipeError):
         raise
@@ -87,11 +87,18 @@ def _starkiln(
     pass
 
 
-@app.command(epilog="Example: starkiln check configs/demo.toml")
-def check(config: Config, debug: Debug = False) -> None:
+@app.command(epilog="Example: starkiln check configs/demo.toml --rows")
+def check(
+    config: Config,
+    rows: Annotated[
+        bool, typer.Option("--rows", help="Read the input, and count new, changed, gone, duplicate and kept rows.")
+    ] = False,
+    debug: Debug = False,
+) -> None:
     """Check settings, passbands and the footers of the input tables, and print the plan."""
     with _errors_told(debug):
-        from starkiln.engine.check import describe_plan
+        from starkiln.engine.check import count_rows, describe_plan
+        from starkiln.engine.progress import open_progress
         from starkiln.settings import load_settings
         from starkiln.stages.bands import build_bands
         from starkiln.tables.source import open_source
@@ -99,39 +106,94 @@ def check(config: Config, debug: Debug = False) -> None:
         settings = load_settings(config)
         source = open_source(settings)
         build_bands(settings)
-        print(describe_plan(source, settings))
+        plan = None
+        if rows:
+            from starkiln.engine.provenance import hashes
+            from starkiln.stages.model import build_model
+
+            with open_progress(quiet=False) as progress:
+                plan = count_rows(source, settings, hashes(settings, build_model(settings)), progress)
+        print(describe_plan(source, settings, plan))
 
 
-@app.command(epilog="Example: starkiln run configs/demo.toml --workers 4")
+@app.command(epilog="Example: starkiln run configs/demo.toml --time-limit 6h --quiet")
 def run(
     config: Config,
+    time_limit: Annotated[
+        str | None,
+        typer.Option(metavar="TIME", help="End within 6h, 90m, 1h30m or 45s; run again to go on.", show_default=False),
+    ] = None,
+    refit_all: Annotated[
+        bool, typer.Option("--refit-all", help="Fit every row, not only new and changed ones.")
+    ] = False,
+    retry_failed: Annotated[
+        bool, typer.Option("--retry-failed", help="Try again the rows that faults had set aside.")
+    ] = False,
     workers: Annotated[
         int | None,
         typer.Option(min=1, help="Worker processes, instead of compute.workers.", show_default=False),
     ] = None,
+    scheduler: Annotated[
+        str | None,
+        typer.Option(metavar="ADDRESS", help="Use the workers of this dask scheduler.", show_default=False),
+    ] = None,
+    scheduler_file: Annotated[
+        Path | None,
+        typer.Option(metavar="FILE", help="Use the workers of the dask scheduler of this file.", show_default=False),
+    ] = None,
     quiet: Annotated[bool, typer.Option("--quiet", help="Print nothing if all is well.")] = False,
     debug: Debug = False,
 ) -> None:
-    """Fit every star of the input tables and publish the catalogue."""
-    from starkiln.engine.stopping import StopFlag
+    """Fit the stars of the input tables, or what is new or left of them, and publish the catalogue."""
+    with _errors_told(debug, quiet):
+        from starkiln.engine.stopping import StopFlag, parse_limit
 
-    with _errors_told(debug, quiet), StopFlag() as stop:
-        from starkiln.engine.preview import first_rows
-        from starkiln.engine.progress import open_progress
-        from starkiln.engine.run import run_settings
-        from starkiln.settings import load_settings
+        limit_s = None if time_limit is None else parse_limit(time_limit)
+        if scheduler and scheduler_file:
+            raise SettingsError("--scheduler and --scheduler-file exclude each other: give one")
+        with StopFlag(limit_s) as stop:
+            from starkiln.engine.directory import hold
+            from starkiln.settings import load_settings
 
-        settings = load_settings(config)
-        if workers is not None:
-            compute = settings.compute.model_copy(update={"workers": workers})
-            settings = settings.model_copy(update={"compute": compute})
-        with open_progress(quiet) as progress:
-            result = run_settings(settings, progress=progress, stop=stop)
-        if not quiet or result.exit_code:
-            print(result.message)
-        if not quiet and result.path is not None:
-            print(first_rows(result.path))
-        raise typer.Exit(result.exit_code)
+            settings = load_settings(config)
+            if workers is not None:
+                compute = settings.compute.model_copy(update={"workers": workers})
+                settings = settings.model_copy(update={"compute": compute})
+            # Before anything heavy is imported, so that a second run on the directory ends at once.
+            with hold(settings.run.output):
+                from starkiln.engine.preview import first_rows
+                from starkiln.engine.progress import open_progress
+                from starkiln.engine.run import RunOptions, run_settings
+
+                options = RunOptions(
+                    refit_all=refit_all,
+                    retry_failed=retry_failed,
+                    scheduler=scheduler,
+                    scheduler_file=scheduler_file,
+                )
+                with open_progress(quiet) as progress:
+                    result = run_settings(settings, options=options, progress=progress, stop=stop)
+            if not quiet or result.exit_code:
+                print(result.message)
+            if not quiet and result.path is not None:
+                print(first_rows(result.path))
+            raise typer.Exit(result.exit_code)
+
+
+@app.command(epilog="Example: starkiln status runs/demo --json")
+def status(
+    run_dir: RunDir,
+    as_json: Annotated[bool, typer.Option("--json", help="Print JSON, with a schema number.")] = False,
+    debug: Debug = False,
+) -> None:
+    """Tell where a run stands, also while it is running."""
+    with _errors_told(debug):
+        import json
+
+        from starkiln.engine.status import describe_status, read_status
+
+        found = read_status(run_dir)
+        print(json.dumps(found, indent=2) if as_json else describe_status(found))
 
 
 @app.command(epilog="Example: starkiln path runs/demo")
@@ -142,6 +204,7 @@ def path(run_dir: RunDir, debug: Debug = False) -> None:
         if not current.is_dir():
             raise SettingsError(f"{run_dir} holds no published catalogue: name the run.output of a finished run")
         print(current.resolve())
+
 
 @app.command(epilog="Example: starkiln calibrate my_reference_stars.toml")
 def calibrate(config: Config, debug: Debug = False) -> None:

@@ -6,6 +6,7 @@ import os
 import re
 import shutil
 import uuid
+from collections.abc import Callable, Collection
 from pathlib import Path
 
 from starkiln.engine.disk import remove_folder
@@ -16,6 +17,9 @@ LINKED = ("catalogue", "rejected", "report")
 
 class Generations:
     """The numbered generations of a run directory, whose lock must be held.
+
+    Each is built in a folder of its own, <number>.partial, where result/ becomes the generation; a number is
+    never used again.
 
     Parameters
     ----------
@@ -29,42 +33,92 @@ class Generations:
 
     def numbers(self) -> list[int]:
         """Return the numbers of the complete generations, ascending."""
+        return self._numbered(r"(\d{6,})")
+
+    def partials(self) -> list[int]:
+        """Return the numbers of those that are being built, ascending."""
+        return self._numbered(r"(\d{6,})\.partial")
+
+    def _numbered(self, pattern: str) -> list[int]:
         if not self._folder.is_dir():
             return []
-        return sorted(int(path.name) for path in self._folder.iterdir() if re.fullmatch(r"\d{6,}", path.name))
+        found = (re.fullmatch(pattern, path.name) for path in self._folder.iterdir())
+        return sorted(int(match[1]) for match in found if match)
 
-    def begin(self) -> Path:
-        """Remove what unfinished runs left and make the folder of the next generation, still partial."""
-        for stale in self._folder.glob("*.partial"):
-            remove_folder(stale)
-        number = max(self.numbers(), default=0) + 1
-        partial = self._folder / f"{number:06d}.partial"
+    def current(self) -> int | None:
+        """Return the number of the published generation, None if there is none."""
+        try:
+            name = Path(os.readlink(self._run_dir / "current")).name
+        except OSError:
+            return None
+        return int(name) if re.fullmatch(r"\d{6,}", name) and self.folder(int(name)).is_dir() else None
+
+    def folder(self, number: int) -> Path:
+        """Return the folder of a complete generation."""
+        return self._folder / f"{number:06d}"
+
+    def partial(self, number: int) -> Path:
+        """Return the folder in which a generation is built."""
+        return self._folder / f"{number:06d}.partial"
+
+    def begin(self, number: int) -> Path:
+        """Make the folder of a new generation, still partial and empty."""
+        partial = self.partial(number)
+        remove_folder(partial)
         partial.mkdir(parents=True)
         return partial
 
-    def discard(self, partial: Path) -> None:
-        """Remove a partial generation, if it is still there."""
-        shutil.rmtree(partial, ignore_errors=True)
+    def remove_partial(self, number: int) -> None:
+        """Remove what was needed to build a generation, if it is still there."""
+        remove_folder(self.partial(number))
 
-    def publish(self, partial: Path, keep: int) -> Path:
-        """Make a partial generation the current one, and remove the oldest beyond the number to keep.
+    def sweep(self, known: Collection[int]) -> list[int]:
+        """Remove the partial generations that are not known, and what a stopped run was about to remove.
+
+        Returns
+        -------
+        The numbers of the partial generations removed.
+        """
+        unknown = [number for number in self.partials() if number not in known]
+        for number in unknown:
+            self.remove_partial(number)
+        for leftover in self._folder.glob(".*.removed"):
+            remove_folder(leftover)
+        for name in ("current", *LINKED):
+            for leftover in self._run_dir.glob(f".{name}.*.tmp"):
+                leftover.unlink()
+        return unknown
+
+    def publish(self, number: int, keep: int, on_state: Callable[[str], None]) -> Path:
+        """Make the result of a partial generation the current one, and remove the oldest beyond those to keep.
 
         Everything is on disk before the link moves; a reader sees the old generation or the new one, whole.
 
         Parameters
         ----------
-        partial
-            The folder that `begin` returned, complete.
+        number
+            The generation, complete in the folder result/ of its partial one.
         keep
             How many generations to keep, this one included; at least 1.
+        on_state
+            Called with "publishing" before anything is renamed, and with "published" when the link has moved.
         """
-        sync_tree(partial)
-        published = partial.with_suffix("")
-        partial.rename(published)
+        result = self.partial(number) / "result"
+        sync_tree(result)
+        on_state("publishing")
+        result.rename(self.folder(number))
+        return self.finish(number, keep, on_state)
+
+    def finish(self, number: int, keep: int, on_state: Callable[[str], None]) -> Path:
+        """Do what is left of a publication once the folder has its name; doing it again changes nothing."""
+        published = self.folder(number)
         sync_folder(self._folder)
         self._switch(published)
-        for number in self.numbers()[:-keep]:
-            shutil.rmtree(self._folder / f"{number:06d}")
+        on_state("published")
+        for old in self.numbers()[:-keep]:
+            doomed = self._folder / f".{old:06d}.removed"
+            self.folder(old).rename(doomed)
+            shutil.rmtree(doomed)
         return published
 
     def _switch(self, published: Path) -> None:

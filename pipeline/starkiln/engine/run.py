@@ -2,39 +2,40 @@
 
 from __future__ import annotations
 
-import json
-import time
 import traceback
-from collections import Counter
-from collections.abc import Iterator
-from contextlib import contextmanager, nullcontext
-from dataclasses import dataclass, field
-from datetime import UTC, datetime
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager, nullcontext, suppress
+from dataclasses import asdict, dataclass
+from datetime import UTC, datetime, timedelta
 from pathlib import Path
+from time import monotonic
 from typing import Any
 
 from starkiln.engine import provenance
-from starkiln.engine.closing import close_generation
+from starkiln.engine.bench import Bench, Gains, Laps, RunOptions
+from starkiln.engine.board import Board, open_board
+from starkiln.engine.build import Making, clear_away, find_build, plan_build, recover
 from starkiln.engine.directory import check_name, hold, scratch_folder
 from starkiln.engine.disk import disk_trouble
+from starkiln.engine.earlier import published_facts
 from starkiln.engine.events import EventLog, open_log
-from starkiln.engine.executors import SMALL_RUN_ROWS, ClusterTrouble, Executor, SerialExecutor, open_cluster
+from starkiln.engine.executors import ClusterTrouble
 from starkiln.engine.generations import Generations
-from starkiln.engine.job import Job, SavedJob, Stages, fitting_stages
-from starkiln.engine.plan import Plan, make_plan
-from starkiln.engine.progress import Progress, Silence
-from starkiln.engine.resources import peak_memory, worker_count
-from starkiln.engine.stopping import StopFlag
-from starkiln.engine.tasks import Cut, Fitted
-from starkiln.engine.work import Work
-from starkiln.errors import EnvironmentTrouble, StarkilnError
-from starkiln.settings import Settings, dump_toml, load_settings
-from starkiln.stages.audit import together, zero_point_audit
+from starkiln.engine.job import Stages, fitting_stages
+from starkiln.engine.keys import inputs_key
+from starkiln.engine.ledger import Ledger, open_ledger
+from starkiln.engine.pace import Pace
+from starkiln.engine.progress import Both, Progress, Silence
+from starkiln.engine.records import Build
+from starkiln.engine.stopping import TIME_UP, RunStopped, StopFlag
+from starkiln.errors import EnvironmentTrouble, SettingsError, StarkilnError
+from starkiln.settings import Settings, load_settings
 from starkiln.tables.source import Source, open_source
-from starkiln.tables.write import PackedFile
 
 SIGNALS_APART = 1.0
 """Seconds between the first and the last process to get a signal that is meant for all."""
+
+__all__ = ["RunOptions", "RunResult", "run", "run_settings"]
 
 
 @dataclass(frozen=True)
@@ -44,11 +45,12 @@ class RunResult:
     Attributes
     ----------
     exit_code
-        0 done; 4 done, with input files left out; otherwise that of the error (see `starkiln.errors`).
+        0 done, or nothing to do; 4 done, with rows set aside for faults or input files left out; otherwise that of
+        the error (see `starkiln.errors`).
     counts
         Rows read, filtered, selected, in the catalogue, rejected (by reason too), and pending.
     path
-        The published generation, or None if nothing was published.
+        The published generation; None if the run came to no end.
     message
         The error, or one line on what was done.
     """
@@ -79,16 +81,22 @@ def run(path: str | Path) -> RunResult:
 def run_settings(
     settings: Settings,
     *,
+    options: RunOptions | None = None,
     progress: Progress | None = None,
     stages: Stages | None = None,
     stop: StopFlag | None = None,
 ) -> RunResult:
-    """Do a run, and publish its catalogue as a new generation of the run directory.
+    """Do a run, or what is left of it, and publish its catalogue as a new generation of the run directory.
+
+    What a stopped run has done counts; of what is published, only new and changed rows are fitted; if nothing is new,
+    nothing is done.
 
     Parameters
     ----------
     settings
         The settings.
+    options
+        What the run is asked for beside them.
     progress
         Is told how far the run has come.
     stages
@@ -101,32 +109,42 @@ def run_settings(
     StarkilnError
         If the run cannot be done; nothing is published then.
     """
-    run_dir = settings.run.output
+    run_dir, name = settings.run.output, settings.run.name
     start = datetime.now(UTC)
     noting = StopFlag() if stop is None else nullcontext(stop)
     with noting as stop, disk_trouble(run_dir), hold(run_dir):
-        check_name(run_dir, settings.run.name)
-        with open_log(run_dir, start) as log, _end_logged(log):
-            log.write("start", name=settings.run.name, starkiln=provenance.versions()["starkiln"])
-            one_run = _Run(settings, stages or fitting_stages(), progress or Silence(), stop, log, start)
-            try:
-                result = one_run.do()
-            except Exception as error:
-                # When many processes are signalled, workers that died are not the news; they may even die first.
-                stop.check(within=SIGNALS_APART if isinstance(error, ClusterTrouble) else 0.0)
-                raise
+        check_name(run_dir, name)
+        with open_log(run_dir, start) as log, open_board(run_dir, name, start) as board:
+            one_run = _Run(settings, options or RunOptions(), progress or Silence(), stop, log, board, start)
+            with _end_told(log, board):
+                log.write("start", name=name, starkiln=provenance.versions()["starkiln"])
+                result = one_run.do(stages or fitting_stages())
             log.write("end", exit_code=result.exit_code, message=result.message)
+            board.end(result.exit_code, result.message)
             return result
 
 
 @contextmanager
-def _end_logged(log: EventLog) -> Iterator[None]:
+def _end_told(log: EventLog, board: Board) -> Iterator[None]:
+    """Tell log and notice board of an error that ends the run."""
     try:
         yield
     except BaseException as error:
         foreseen = isinstance(error, StarkilnError) and error.__cause__ is None
         details = {} if foreseen else {"traceback": "".join(traceback.format_exception(error))}
-        log.write("end", exit_code=_exit_code(error), message=str(error) or type(error).__name__, **details)
+        log.write("end", exit_code=_exit_code(error), message=_text(error), **details)
+        board.end(_exit_code(error), _text(error))
+        raise
+
+
+@contextmanager
+def _end_noted(ledger: Ledger) -> Iterator[None]:
+    """Note in the ledger an error that ends the run, if it can still be written."""
+    try:
+        yield
+    except BaseException as error:
+        with suppress(StarkilnError):
+            ledger.end_run(_exit_code(error), _text(error))
         raise
 
 
@@ -138,48 +156,8 @@ def _exit_code(error: BaseException) -> int:
     return EnvironmentTrouble.exit_code if isinstance(error, OSError) else 1
 
 
-@dataclass
-class _Tally:
-    """What the finished parts add up to."""
-
-    catalogue: int = 0
-    rejected: Counter[str] = field(default_factory=Counter)
-    flags: Counter[str] = field(default_factory=Counter)
-    audit: Any = None
-    seconds: dict[str, float] = field(default_factory=dict)
-    worker_peak: int = 0
-
-    def add_cut(self, cut: Cut) -> None:
-        self._add_seconds({"cut": cut.seconds})
-        self.worker_peak = max(self.worker_peak, cut.peak_memory)
-
-    def add_part(self, fitted: Fitted) -> None:
-        self.catalogue += fitted.written["catalogue"].rows
-        self.rejected.update(fitted.reasons)
-        self.flags.update(fitted.flags)
-        self.audit = together(self.audit, fitted.audit)
-        self._add_seconds(fitted.seconds)
-        self.worker_peak = max(self.worker_peak, fitted.peak_memory)
-
-    def _add_seconds(self, seconds: dict[str, float]) -> None:
-        for stage, spent in seconds.items():
-            self.seconds[stage] = self.seconds.get(stage, 0.0) + spent
-
-    def counts(self, plan: Plan) -> dict[str, Any]:
-        """Return the counts of the run, which must add up."""
-        rejected = self.rejected.total()
-        counts = {
-            "read": plan.read,
-            "filtered": plan.read - plan.selected,
-            "selected": plan.selected,
-            "catalogue": self.catalogue,
-            "rejected": rejected,
-            "rejected_by_reason": dict(sorted(self.rejected.items())),
-            "pending": 0,
-        }
-        if plan.selected != self.catalogue + rejected:
-            raise RuntimeError(f"rows do not add up: {counts}")
-        return counts
+def _text(error: BaseException) -> str:
+    return str(error) or type(error).__name__
 
 
 class _Run:
@@ -188,144 +166,169 @@ class _Run:
     def __init__(
         self,
         settings: Settings,
-        stages: Stages,
+        options: RunOptions,
         progress: Progress,
         stop: StopFlag,
         log: EventLog,
+        board: Board,
         start: datetime,
     ) -> None:
         self._settings = settings
-        self._stages = stages
+        self._options = options
         self._progress = progress
         self._stop = stop
         self._log = log
+        self._board = board
         self._start = start
-        self._clock = time.perf_counter()
-        self._tally = _Tally()
-        self._wall: dict[str, float] = {}
+        self._gains = Gains()
+        self._source: Source | None = None
+        self._making: Making | None = None
 
-    def do(self) -> RunResult:
-        settings = self._settings
-        source = open_source(settings)
-        model = self._stages.build_model(settings)
-        self._lap("open")
-        self._stop.check()
-        generations = Generations(settings.run.output)
-        with scratch_folder(settings.run.output, settings.compute.scratch) as scratch:
-            workers = worker_count(settings)
-            self._progress.begin("planning", sum(file.rows for file in source.files))
-            plan = make_plan(source, settings, workers, scratch, self._between_batches)
-            self._lap("plan")
-            self._log.write(
-                "plan", read=plan.read, selected=plan.selected, duplicates=plan.duplicates, parts=plan.parts
-            )
-            partial = generations.begin()
-            try:
-                workers = self._work(source, model, plan, workers, scratch, partial)
-                files = close_generation(plan, settings, source.schema, partial, scratch, self._stop.check)
-                self._lap("pack")
-                facts = self._facts(source, model, plan, workers, partial, files)
-                (partial / "settings.toml").write_text(dump_toml(settings))
-                (partial / "run.json").write_text(json.dumps(facts, indent=2) + "\n")
-                self._stop.check()
-                published = generations.publish(partial, settings.run.keep_generations)
-            finally:
-                generations.discard(partial)
-        self._log.write("publish", generation=published.name)
-        counts, code = facts["counts"], facts["exit_code"]
-        return RunResult(code, counts, published, _summary(settings.run.output, counts, source))
+    def do(self, stages: Stages) -> RunResult:
+        """Do the run; see `run_settings`."""
+        run_dir = self._settings.run.output
+        with open_ledger(run_dir) as ledger, _end_noted(ledger), self._stops_told(ledger):
+            ledger.begin_run(self._start, provenance.versions())
+            self._note_deadline()
+            generations = Generations(run_dir)
+            finished = recover(generations, ledger, self._settings.run.keep_generations, self._log)
+            with scratch_folder(run_dir, self._settings.compute.scratch) as scratch:
+                bench = self._bench(stages, ledger, generations, scratch)
+                result = self._build(bench, finished)
+                clear_away(bench)
+            ledger.end_run(result.exit_code, result.message)
+            return result
 
-    def _work(self, source: Source, model: Any, plan: Plan, workers: int, scratch: Path, partial: Path) -> int:
-        """Do every part, and return how many workers did."""
-        parts = partial / "parts"
-        tables = ["catalogue", "rejected", "index"] + ["draws"] * bool(self._settings.sampling.keep_draws)
-        for table in tables:
-            (parts / table).mkdir(parents=True)
-        job = Job(
-            source=source,
-            settings=self._settings,
-            stages=self._stages,
-            model=model,
-            stamps=plan.stamps,
-            scratch=scratch,
-            parts=parts,
+    def _note_deadline(self) -> None:
+        left = self._stop.deadline - monotonic()
+        if left < float("inf"):
+            moment = datetime.now(UTC) + timedelta(seconds=left)
+            self._board.note(deadline=moment.isoformat(timespec="seconds"))
+
+    @contextmanager
+    def _stops_told(self, ledger: Ledger) -> Iterator[None]:
+        """Tell with a stop how far the run has come."""
+        try:
+            yield
+        except Exception as error:
+            if not isinstance(error, RunStopped):
+                try:
+                    # When many processes are signalled, workers that died are not the news; they may even die first.
+                    self._stop.check_signal(within=SIGNALS_APART if isinstance(error, ClusterTrouble) else 0.0)
+                except RunStopped:
+                    pass
+                else:
+                    raise
+            raise self._stopped(ledger) from None
+
+    def _stopped(self, ledger: Ledger) -> StarkilnError:
+        if not (self._stop.signalled or self._gains.files or self._gains.parts):
+            return self._too_short(ledger)
+        who, making = self._stop.requested() or TIME_UP, self._making
+        if making is not None:
+            how_far = f": {making.tally.parts} of {making.plan.parts} parts are done"
+        elif self._source is not None and self._gains.files:
+            how_far = f": {self._gains.files} of {len(self._source.files)} input files have been read"
+        else:
+            how_far = ""
+        return RunStopped(f"stopped by {who}{how_far}; run again to go on")
+
+    def _too_short(self, ledger: Ledger) -> SettingsError:
+        if self._making is None:
+            return SettingsError("--time-limit is too short to read a single input file; give more")
+        rows = max(max(unit.part_rows) for unit in self._making.plan.units)
+        seconds = Pace(ledger.fit_rates()).seconds_for(rows)
+        return SettingsError(
+            f"--time-limit is too short: a part of {rows} rows takes about {seconds:.0f} s, beside the time to start; "
+            "give more, or lower compute.rows_per_part"
         )
-        if plan.selected <= SMALL_RUN_ROWS:
-            with self._stop.at_once():
-                return self._do_parts(plan, job, parts, SerialExecutor())
-        self._progress.begin("warming up", 0)
-        with self._stop.at_once():
-            self._stages.warm_up(self._settings, model)
-        self._lap("warm up")
-        memory = self._settings.compute.memory_per_worker_bytes
-        with open_cluster(min(workers, plan.parts), memory, scratch) as executor:
-            self._lap("start workers")
-            return self._do_parts(plan, job.save(), parts, executor)
 
-    def _do_parts(self, plan: Plan, job: Job | SavedJob, parts: Path, executor: Executor) -> int:
-        self._progress.begin("fitting", plan.selected)
-        Work(plan, job, parts, executor, self._stop.check).run(self._tally.add_cut, self._part_done)
-        self._lap("work")
-        return executor.workers
-
-    def _between_batches(self, rows: int) -> None:
-        self._progress.advance(rows)
+    def _bench(self, stages: Stages, ledger: Ledger, generations: Generations, scratch: Path) -> Bench:
+        settings, laps = self._settings, Laps()
+        self._source = source = open_source(settings)
+        model = stages.build_model(settings)
+        laps.lap("open")
         self._stop.check()
+        return Bench(
+            settings=settings,
+            options=self._options,
+            stages=stages,
+            source=source,
+            model=model,
+            hashes=provenance.hashes(settings, model),
+            published=published_facts(settings.run.output),
+            ledger=ledger,
+            generations=generations,
+            board=self._board,
+            progress=Both(self._board, self._progress),
+            stop=self._stop,
+            log=self._log,
+            scratch=scratch,
+            start=self._start,
+            laps=laps,
+            gains=self._gains,
+        )
 
-    def _part_done(self, fitted: Fitted) -> None:
-        self._tally.add_part(fitted)
-        self._progress.advance(fitted.rows)
-        digests = {name: file.sha256 for name, file in fitted.written.items()}
-        self._log.write("part", number=fitted.number, rows=fitted.rows, sha256=digests)
+    def _build(self, bench: Bench, finished: Build | None) -> RunResult:
+        """Make the generation that is asked for, unless the published one is it."""
+        published = bench.published
+        self._board.note(published=published and published["number"])
+        making = find_build(bench)
+        if making is None and not _is_up_to_date(bench, finished):
+            making = plan_build(bench)
+        if making is None:
+            assert published is not None
+            code = published["exit_code"] if finished else 0
+            return self._result(code, published, bench.generations.folder(published["number"]), done=False)
+        self._making = making
+        self._tell_plan(making)
+        making.work()
+        facts = making.close()
+        bench.progress.begin("publishing", 0)
+        path = bench.generations.publish(making.number, self._settings.run.keep_generations, making.set_state)
+        self._log.write("publish", generation=path.name)
+        self._board.note(published=making.number)
+        return self._result(facts["exit_code"], facts, path, done=True)
 
-    def _lap(self, step: str) -> None:
-        now = time.perf_counter()
-        self._wall[step], self._clock = now - self._clock, now
+    def _tell_plan(self, making: Making) -> None:
+        plan, tally, rows = making.plan, making.tally, asdict(making.plan.rows)
+        about = {"read": plan.read, "selected": plan.selected, "parts": plan.parts, "why": plan.why}
+        self._log.write("plan", build=making.number, **about, **rows)
+        told = {name: count for name, count in rows.items() if name != "without_id"}
+        self._board.note(
+            build=making.number,
+            why=plan.why,
+            rows=told | {"selected": plan.selected, "done": tally.rows, "set_aside": tally.set_aside},
+            parts={"total": plan.parts, "done": tally.parts},
+        )
 
-    def _facts(
-        self,
-        source: Source,
-        model: Any,
-        plan: Plan,
-        workers: int,
-        partial: Path,
-        files: dict[str, list[PackedFile]],
-    ) -> dict[str, Any]:
-        """Return the contents of run.json."""
-        counts = self._tally.counts(plan)
-        wall = {step: round(seconds, 3) for step, seconds in self._wall.items()}
-        stages = {stage: round(seconds, 3) for stage, seconds in sorted(self._tally.seconds.items())}
-        return {
-            "name": self._settings.run.name,
-            "exit_code": 4 if source.skipped else 0,
-            "start": self._start.isoformat(timespec="milliseconds"),
-            "end": datetime.now(UTC).isoformat(timespec="milliseconds"),
-            "counts": counts,
-            "duplicates": plan.duplicates,
-            "flags": dict(sorted(self._tally.flags.items())),
-            "zero_point_audit": zero_point_audit(self._tally.audit, model, self._settings),
-            "workers": workers,
-            "parts": plan.parts,
-            "seconds": {"wall": wall, "summed_over_workers": stages},
-            "stars_per_second": round(plan.selected / self._wall["work"], 2),
-            "peak_memory_bytes": {"driver": peak_memory(), "worker": self._tally.worker_peak},
-            "versions": provenance.versions(),
-            "platform": provenance.platform_facts(),
-            "hashes": provenance.hashes(self._settings, model),
-            "passbands": provenance.passband_sources(model),
-            "input": provenance.input_facts(source, plan, self._settings),
-            "files": {
-                file.path.relative_to(partial).as_posix(): {"rows": file.rows, "sha256": file.sha256}
-                for packed in files.values()
-                for file in packed
-            },
-        }
+    def _result(self, code: int, facts: Mapping[str, Any], path: Path, *, done: bool) -> RunResult:
+        text = _summary(self._settings.run.output, facts)
+        return RunResult(code, facts["counts"], path, text if done else f"nothing to do: {text}")
 
 
-def _summary(run_dir: Path, counts: dict[str, Any], source: Source) -> str:
+def _is_up_to_date(bench: Bench, finished: Build | None) -> bool:
+    """Return whether the published generation is what is asked for, as far as footers can tell."""
+    published, options = bench.published, bench.options
+    if published is None:
+        return False
+    if published["hashes"].get("inputs") != inputs_key(bench.source, bench.settings, bench.hashes):
+        return False
+    if finished is not None and options.met_by(finished):
+        return True
+    rows = published["rows"]
+    return not options.refit_all and not (options.retry_failed and rows["failed"] + rows["set_aside"])
+
+
+def _summary(run_dir: Path, facts: Mapping[str, Any]) -> str:
+    counts, rows, skipped = facts["counts"], facts["rows"], facts["input"]["skipped"]
     text = f"{counts['catalogue']} of {counts['selected']} stars are in {run_dir / 'catalogue'}"
     if counts["rejected"]:
         text += f", {counts['rejected']} rejected rows in {run_dir / 'rejected'}"
-    if source.skipped:
-        text += f"; {len(source.skipped)} unusable input files left out, named in {run_dir}/current/run.json"
+    if rows["kept"]:
+        text += f"; {rows['new']} new, {rows['changed']} changed, {rows['kept']} kept, {rows['gone']} gone"
+    if rows["set_aside"]:
+        text += f"; {rows['set_aside']} rows were set aside for faults: see `kind` in {run_dir / 'rejected'}"
+    if skipped:
+        text += f"; {len(skipped)} unusable input files left out, named in {run_dir}/current/run.json"
     return text
