@@ -1,89 +1,63 @@
-"""The plan of a run: which rows are selected, which ids repeat, and how rows are dealt into parts.
+"""The plan of a run: which rows are selected, what of them there is already, and how the rest is dealt into parts.
 
-The ids are streamed once. Memory is flat in the number of rows: what is remembered of a row goes to
-files in the scratch folder, bucketed by the hash of its id, and is joined bucket by bucket.
+The rows are streamed once, file by file; each file's hashes are a checkpoint. Memory is flat in the number of rows:
+what is remembered of a row goes to files in the scratch folder, bucketed by the hash of its id, and is joined bucket
+by bucket with what is known of earlier results.
 """
 
 from __future__ import annotations
 
+import hashlib
+import json
 import os
-from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import asdict, replace
+from itertools import accumulate
 from pathlib import Path, PurePosixPath
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from starkiln.engine.buckets import Buckets
 from starkiln.engine.disk import disk_trouble
-from starkiln.engine.repeats import RECORD, id_digests, mark_repeats, write_marks
-from starkiln.errors import EnvironmentTrouble, InputError
+from starkiln.engine.earlier import Earlier, EarlierSource, index_records, index_size
+from starkiln.engine.hashing import BATCH_ROWS, file_key, hash_file, is_whole, read_records
+from starkiln.engine.join import OLD, join_bucket
+from starkiln.engine.keys import content_key, file_stamp
+from starkiln.engine.records import Checkpoints, EarlierFile, Plan, PlannedFile, RowCounts, Unit
+from starkiln.engine.repeats import RECORD
+from starkiln.engine.rownotes import write_notes
+from starkiln.engine.stopping import RunStopped
+from starkiln.errors import InputError
 from starkiln.settings import Settings
-from starkiln.tables.source import Source, SourceBatch, read_rows
+from starkiln.tables.source import Source, SourceBatch
+from starkiln.tables.write import file_sha256, sync_folder
 
-BATCH_ROWS = 65_536
+__all__ = [
+    "BATCH_ROWS",
+    "Plan",
+    "Unit",
+    "even_parts",
+    "file_stamp",
+    "first_rows",
+    "load_plan",
+    "make_plan",
+    "row_positions",
+    "rows_per_part",
+    "save_plan",
+]
+
 SMALLEST_PART = 250
 """Parts are made smaller than asked for to keep all workers busy, but not smaller than this."""
 
+LARGEST_PART = 50_000
+"""Where most rows are taken over, parts are made larger than asked for, but not larger than this."""
 
-@dataclass(frozen=True)
-class Unit:
-    """Row groups that one task reads once and cuts into parts.
+SECONDS_PER_ROW = 4e-6
+"""What hashing a row takes, to tell whether there is time for one file more."""
 
-    Attributes
-    ----------
-    number
-        Counted from 0 in input order.
-    folder
-        Where its rows go below the catalogue: "." or, in a hive layout, the input's partition folders.
-    pieces
-        The (file, row group) pairs, in input order.
-    first_row, last_row
-        The rows it spans, counted through all files; the last one is not included.
-    selected
-        Rows that pass the filters.
-    first_part
-        The number of its first part.
-    part_rows
-        Rows of each of its parts.
-    """
-
-    number: int
-    folder: str
-    pieces: tuple[tuple[int, int], ...]
-    first_row: int
-    last_row: int
-    selected: int
-    first_part: int
-    part_rows: tuple[int, ...]
-
-
-@dataclass(frozen=True)
-class Plan:
-    """What a run will do.
-
-    Attributes
-    ----------
-    read, selected
-        Rows in the input, and rows that pass the filters.
-    duplicates
-        Selected rows whose id has come before.
-    units
-        The work, in input order.
-    stamps
-        Size in bytes and modification time in nanoseconds of each input file.
-    """
-
-    read: int
-    selected: int
-    duplicates: int
-    units: tuple[Unit, ...]
-    stamps: tuple[tuple[int, int], ...]
-
-    @property
-    def parts(self) -> int:
-        """The number of parts."""
-        return sum(len(unit.part_rows) for unit in self.units)
+NOTES = "notes"
 
 
 def first_rows(source: Source) -> NDArray[np.int64]:
@@ -101,10 +75,18 @@ def make_plan(
     source: Source,
     settings: Settings,
     workers: int,
+    *,
+    folder: Path,
+    planning: Path,
     scratch: Path,
-    between_batches: Callable[[int], None] = lambda rows: None,
+    checkpoints: Checkpoints,
+    earlier: Earlier,
+    retry_failed: bool = False,
+    between: Callable[[int], None] = lambda rows: None,
+    may_begin: Callable[[float], bool] = lambda seconds: True,
+    on_file: Callable[[PlannedFile, bool], None] = lambda file, fresh: None,
 ) -> Plan:
-    """Stream the ids, find those that repeat, and deal the selected rows into parts.
+    """Hash the rows, compare them with earlier results, and deal them into parts.
 
     Parameters
     ----------
@@ -114,69 +96,188 @@ def make_plan(
         The settings.
     workers
         How many workers to keep busy.
+    folder
+        Receives the notes about rows in `notes/`; made if need be.
+    planning
+        Holds the hashes of each input file; made if need be.
     scratch
-        Receives the buckets and the marks of repeated ids.
-    between_batches
+        Receives the buckets.
+    checkpoints
+        Know the files that have been hashed already.
+    earlier
+        The results to take rows from.
+    retry_failed
+        Whether rows that a fault had set aside are tried again.
+    between
         Called with the number of rows read after each batch, and with 0 after each bucket; may raise to stop.
+    may_begin
+        Told the seconds that a file will take about; says whether there is time for it.
+    on_file
+        Told each file that is done, and whether it was hashed just now.
 
     Raises
     ------
     InputError
         If the filters leave no row.
+    RunStopped
+        If there is no time for the next file.
     """
     stamps = tuple(file_stamp(file.path) for file in source.files)
-    pieces, piece_rows = _pieces(source)
-    starts = np.concatenate([[0], np.cumsum(piece_rows)]).astype(np.int64)
-    selected = np.zeros(len(pieces), np.int64)
-    buckets = Buckets(scratch / "ids", int(starts[-1]), RECORD)
-    for batch in read_rows(source, settings, pieces, [settings.input.id], BATCH_ROWS):
-        positions = row_positions(source, batch)
-        selected += np.bincount(np.searchsorted(starts, positions, side="right") - 1, minlength=len(pieces))
-        digests, has_id = id_digests(batch.table[settings.input.id])
-        buckets.add(id_hash=digests[has_id, 0], more_hash=digests[has_id, 1], row=positions[has_id])
-        between_batches(batch.read)
+    with disk_trouble(planning):
+        planning.mkdir(parents=True, exist_ok=True)
+        for stale in planning.glob(".*.tmp"):
+            stale.unlink()
+    files = []
+    for index in range(len(source.files)):
+        file, fresh = _planned(source, index, settings, planning, checkpoints, between, may_begin)
+        on_file(file, fresh)
+        files.append(file)
+    pieces = [
+        (index, group) for index, origin in enumerate(source.files) for group in range(len(origin.row_group_rows))
+    ]
+    starts = np.array([0, *accumulate(rows for origin in source.files for rows in origin.row_group_rows)], np.int64)
+    selected = np.array([count for file in files for count in file.groups], np.int64)
     if not selected.sum():
         raise InputError(
             f"input.where and input.only leave none of the {starts[-1]} rows of {settings.input.tables}: loosen them"
         )
-    duplicates = 0
-    folder = scratch / "marks"
-    with disk_trouble(folder):
-        folder.mkdir()
-    for number, records in enumerate(buckets.drain()):
-        marks = mark_repeats(np.stack([records["id_hash"], records["more_hash"]], axis=1), records["row"])
-        duplicates += int((marks & 1).sum())
-        if len(marks):
-            write_marks(marks, folder, number)
-        between_batches(0)
-    part_rows = rows_per_part(int(selected.sum()), workers, settings.compute.rows_per_part)
+    joined = _Joined(source, files, planning, scratch, earlier, retry_failed=retry_failed, between=between)
+    reused, notes = joined.write(folder / NOTES, starts)
+    part_rows = rows_per_part(
+        int(selected.sum()), int((selected - reused).sum()), workers, settings.compute.rows_per_part
+    )
     folders = _folders(source, pieces, settings.output.layout)
-    units = tuple(_deal(pieces, folders, starts, selected, part_rows))
-    return Plan(int(starts[-1]), int(selected.sum()), duplicates, units, stamps)
+    return Plan(
+        read=int(starts[-1]),
+        selected=int(selected.sum()),
+        units=tuple(_deal(pieces, folders, starts, selected, reused, part_rows)),
+        stamps=stamps,
+        rows=replace(joined.rows, without_id=sum(file.without_id for file in files)),
+        why=earlier.why,
+        earlier=joined.used,
+        content=content_key(files, source, settings),
+        notes=notes,
+    )
 
 
-def file_stamp(path: Path) -> tuple[int, int]:
-    """Return the size and the modification time in nanoseconds of a file.
+def _planned(
+    source: Source,
+    index: int,
+    settings: Settings,
+    planning: Path,
+    checkpoints: Checkpoints,
+    between: Callable[[int], None],
+    may_begin: Callable[[float], bool],
+) -> tuple[PlannedFile, bool]:
+    """Return what is known of an input file, which is hashed unless it has been, and whether it was just now."""
+    rows = source.files[index].rows
+    known = checkpoints.planned_file(file_key(source, index, settings))
+    if known is not None and is_whole(planning, known):
+        between(rows)
+        return known, False
+    if not may_begin(SECONDS_PER_ROW * rows):
+        raise RunStopped(f"stopped: {index} of {len(source.files)} input files are read; run again to go on")
+    file = hash_file(source, index, settings, planning, between)
+    checkpoints.add_planned_file(file)
+    return file, True
 
-    Raises
-    ------
-    EnvironmentTrouble
-        If it is gone or cannot be read.
+
+class _Joined:
+    """The rows of an input beside earlier results: counts, and notes that wait in scratch.
+
+    Parameters
+    ----------
+    source, files, planning
+        The input tables, what is known of each, and where their hashes are.
+    scratch
+        Receives the buckets and the notes.
+    earlier
+        The earlier results.
+    retry_failed
+        Whether rows that a fault had set aside are tried again.
+    between
+        Called with 0 after each bucket.
     """
-    try:
-        status = os.stat(path)
-    except OSError as error:
-        raise EnvironmentTrouble(f"input file {path}: {error.strerror}; run again when it is back") from error
-    return status.st_size, status.st_mtime_ns
+
+    def __init__(
+        self,
+        source: Source,
+        files: Sequence[PlannedFile],
+        planning: Path,
+        scratch: Path,
+        earlier: Earlier,
+        *,
+        retry_failed: bool,
+        between: Callable[[int], None],
+    ) -> None:
+        rows = max(sum(file.selected for file in files), sum(map(index_size, earlier.sources)))
+        new, old = Buckets(scratch / "new", rows, RECORD), Buckets(scratch / "old", rows, OLD)
+        for file, first_row in zip(files, first_rows(source), strict=False):
+            for records in read_records(planning, file):
+                new.add(**_fields(records) | {"row": records["row"] + first_row})
+        self._listed = _add_earlier(earlier.sources, old)
+        self._drafts = []
+        self.rows = RowCounts()
+        self._taken = np.zeros(len(self._listed), bool)
+        for number, (ours, theirs) in enumerate(zip(new.drain(), old.drain(), strict=True)):
+            notes, counts = join_bucket(ours, theirs, retry_failed=retry_failed)
+            self.rows = _sum(self.rows, counts)
+            self._taken[notes["source"][notes["source"] >= 0]] = True
+            if len(notes):
+                self._drafts.append(scratch / f"notes-{number:06d}.npy")
+                with disk_trouble(self._drafts[-1]):
+                    np.save(self._drafts[-1], notes)
+            between(0)
+
+    @property
+    def used(self) -> tuple[EarlierFile, ...]:
+        """The files of earlier results that rows are taken from."""
+        return tuple(file for file, taken in zip(self._listed, self._taken, strict=True) if taken)
+
+    def write(self, folder: Path, starts: NDArray[np.int64]) -> tuple[NDArray[np.int64], tuple[tuple[str, str], ...]]:
+        """Write the notes, whose sources count from `used`; return the rows reused in each piece, and the files.
+
+        Parameters
+        ----------
+        folder
+            Receives the files; made if need be.
+        starts
+            The first row of each piece, and the row after the last one.
+        """
+        with disk_trouble(folder):
+            folder.mkdir(parents=True, exist_ok=True)
+            for stale in folder.iterdir():
+                stale.unlink()
+        number_used = np.cumsum(self._taken) - 1
+        reused, written = np.zeros(len(starts) - 1, np.int64), []
+        for number, draft in enumerate(self._drafts):
+            with disk_trouble(draft):
+                notes = np.load(draft, allow_pickle=False)
+                draft.unlink()
+            sourced = notes["source"] >= 0
+            notes["source"][sourced] = number_used[notes["source"][sourced]]
+            place = np.searchsorted(starts, notes["row"][sourced], side="right") - 1
+            reused += np.bincount(place, minlength=len(reused))
+            written.append(write_notes(notes, folder, number))
+        return reused, tuple(written)
 
 
-def _pieces(source: Source) -> tuple[list[tuple[int, int]], list[int]]:
-    pieces, rows = [], []
-    for file_index, file in enumerate(source.files):
-        for row_group, group_rows in enumerate(file.row_group_rows):
-            pieces.append((file_index, row_group))
-            rows.append(group_rows)
-    return pieces, rows
+def _add_earlier(sources: Sequence[EarlierSource], old: Buckets) -> list[EarlierFile]:
+    """Fill buckets with what is known of earlier results, and return the files that their numbers stand for."""
+    listed: list[EarlierFile] = []
+    for source in sources:
+        for records in index_records(source, len(listed)):
+            old.add(**_fields(records))
+        listed += source.files
+    return listed
+
+
+def _fields(records: NDArray[np.void]) -> dict[str, NDArray[Any]]:
+    return {name: records[name] for name in records.dtype.names or ()}
+
+
+def _sum(first: RowCounts, second: RowCounts) -> RowCounts:
+    return RowCounts(**{name: count + getattr(second, name) for name, count in asdict(first).items()})
 
 
 def _deal(
@@ -184,6 +285,7 @@ def _deal(
     folders: list[str],
     starts: NDArray[np.int64],
     selected: NDArray[np.int64],
+    reused: NDArray[np.int64],
     rows_per_part: int,
 ) -> Iterator[Unit]:
     """Gather pieces of one folder until they hold a part's worth of selected rows, divided evenly."""
@@ -203,6 +305,7 @@ def _deal(
             selected=rows,
             first_part=first_part,
             part_rows=part_rows,
+            reused=int(reused[first_piece : piece + 1].sum()),
         )
         first_piece, rows = piece + 1, 0
         number, first_part = number + 1, first_part + len(part_rows)
@@ -214,12 +317,72 @@ def _folders(source: Source, pieces: list[tuple[int, int]], layout: str) -> list
     return [str(PurePosixPath(source.files[file].name).parent) for file, _ in pieces]
 
 
-def rows_per_part(rows: int, workers: int, most: int) -> int:
-    """Return the rows of a part: `most`, or fewer where that would leave workers without work."""
-    return min(most, max(SMALLEST_PART, -(-rows // (4 * workers))))
+def rows_per_part(selected: int, to_fit: int, workers: int, most: int) -> int:
+    """Return the rows of a part.
+
+    Parts hold `most` rows to fit: more rows in all where most of them are taken over, fewer where that would leave
+    workers without work.
+
+    Parameters
+    ----------
+    selected, to_fit
+        Rows in all, and those of them that are to be fitted.
+    workers
+        How many workers to keep busy.
+    most
+        The rows of a part that are asked for.
+    """
+    spread = max(SMALLEST_PART, -(-selected // (4 * workers)))
+    return min(spread, max(most, min(LARGEST_PART, most * selected // max(1, to_fit))))
 
 
 def even_parts(rows: int, rows_per_part: int) -> tuple[int, ...]:
     """Divide rows into the fewest parts of at most `rows_per_part`, as evenly as can be."""
     count = -(-rows // rows_per_part)
     return tuple(rows * (part + 1) // count - rows * part // count for part in range(count))
+
+
+def save_plan(plan: Plan, folder: Path) -> str:
+    """Write a plan, whose notes are there already, into a folder, and return its SHA-256."""
+    data = json.dumps(asdict(plan), default=str).encode()
+    path = folder / "plan.json"
+    with disk_trouble(path):
+        with path.open("wb") as file:
+            file.write(data)
+            file.flush()
+            os.fsync(file.fileno())
+        sync_folder(folder / NOTES)
+        sync_folder(folder)
+    return hashlib.sha256(data).hexdigest()
+
+
+def load_plan(folder: Path, sha256: str) -> Plan | None:
+    """Return the plan that `save_plan` wrote; None if it or its notes are no longer what they were."""
+    try:
+        data = (folder / "plan.json").read_bytes()
+    except FileNotFoundError:
+        return None
+    if hashlib.sha256(data).hexdigest() != sha256:
+        return None
+    plan = _plan(json.loads(data))
+    places = [(folder / NOTES / name, digest) for name, digest in plan.notes]
+    return plan if all(place.is_file() and file_sha256(place) == digest for place, digest in places) else None
+
+
+def _plan(data: dict[str, Any]) -> Plan:
+    earlier = [
+        EarlierFile(Path(file["path"]), file["draws"] and Path(file["draws"]), file["table"])
+        for file in data["earlier"]
+    ]
+    units = [
+        Unit(**unit | {"pieces": tuple(map(tuple, unit["pieces"])), "part_rows": tuple(unit["part_rows"])})
+        for unit in data["units"]
+    ]
+    changed = {
+        "units": tuple(units),
+        "stamps": tuple(map(tuple, data["stamps"])),
+        "rows": RowCounts(**data["rows"]),
+        "earlier": tuple(earlier),
+        "notes": tuple(map(tuple, data["notes"])),
+    }
+    return Plan(**data | changed)

@@ -12,8 +12,8 @@ from starkiln.tables.hashes import id_digests
 
 __all__ = ["copies", "id_digests", "mark_repeats", "read_marks", "write_marks"]
 
-RECORD = np.dtype([("id_hash", "<i8"), ("more_hash", "<i8"), ("row", "<i8")])
-"""What is remembered of a row until its bucket is searched: the two halves of its id's digest, and its place."""
+RECORD = np.dtype([("id_hash", "<i8"), ("more_hash", "<i8"), ("row_hash", "<i8"), ("row", "<i8")])
+"""What is remembered of a row: the two halves of its id's digest, the hash of its values, and its place."""
 
 
 def mark_repeats(digests: NDArray[np.int64], rows: NDArray[np.int64]) -> NDArray[np.int64]:

@@ -72,7 +72,7 @@ def row_hashes(table: pa.Table, settings: Settings) -> NDArray[np.int64]:
         rows[:, 8 * k : 8 * k + 8] = column.astype("<f8").view(np.uint8).reshape(-1, 8)
     for k, mark in enumerate(marks, start=8 * len(values)):
         rows[:, k] = mark
-    person = hashlib.blake2b(json.dumps(_units(settings)).encode(), digest_size=16).digest()
+    person = hashlib.blake2b(json.dumps(value_units(settings)).encode(), digest_size=16).digest()
     return _digests(rows, canonical_ids(table[settings.input.id]), person)
 
 
@@ -133,7 +133,7 @@ def mark_columns(settings: Settings) -> list[str]:
     return [column for column in columns if column is not None]
 
 
-def _units(settings: Settings) -> list[object]:
+def value_units(settings: Settings) -> list[object]:
     """Return the meaning of the values in order: units, and which marks each band has."""
     data = settings.input
     bands = [[band.unit, band.bad is not None, band.limit is not None] for band in data.photometry]
