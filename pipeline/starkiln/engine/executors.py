@@ -137,7 +137,7 @@ class ClusterExecutor:
                 # The worker died before it handed the result over, so the task is done again.
                 future.add_done_callback(self._done.put)
                 return None
-            finished = Finished(future.key, None, _plain_error(error))
+            finished = Finished(future.key, None, plain_error(error))
         del self._futures[future.key]
         # An erred future stays in the scheduler until it is released.
         future.release()
@@ -153,7 +153,7 @@ class ClusterExecutor:
             _kill_workers(self._cluster)
 
 
-def _plain_error(error: Exception) -> Exception:
+def plain_error(error: Exception) -> Exception:
     """Return the error of a task, with dask's own ones in terms of this program."""
     from distributed import KilledWorker
     from distributed.scheduler import NoWorkerError
@@ -200,9 +200,9 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
         # What goes wrong comes back with the task; dask's own lines would only repeat it.
         "logging": {"distributed": "critical"},
     }
-    with dask.config.set(options), _asyncio_silenced(), ExitStack() as stack:
+    with dask.config.set(options), asyncio_silenced(), ExitStack() as stack:
         try:
-            with _interrupts_blocked():
+            with interrupts_blocked():
                 cluster = stack.enter_context(
                     LocalCluster(
                         n_workers=workers,
@@ -231,7 +231,7 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
 
 
 @contextmanager
-def _asyncio_silenced() -> Iterator[None]:
+def asyncio_silenced() -> Iterator[None]:
     """Keep asyncio from telling of errors that nobody fetched: dask leaves some behind when workers die."""
     logger = logging.getLogger("asyncio")
     level = logger.level
@@ -244,7 +244,7 @@ def _asyncio_silenced() -> Iterator[None]:
 
 
 @contextmanager
-def _interrupts_blocked() -> Iterator[None]:
+def interrupts_blocked() -> Iterator[None]:
     """Keep Ctrl-C from the threads and processes that are started here, for as long as they live.
 
     A terminal sends it to every process of a command; only the main thread of this one is to act upon it.

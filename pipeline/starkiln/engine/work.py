@@ -171,7 +171,7 @@ class Work:
             finished = self._executor.next_finished()
             if finished is not None:
                 self._take(finished)
-                self._fill()
+            self._fill()
         return len(self._done) == self._parts
 
     # What begins
