@@ -48,17 +48,28 @@ def reject_odd_ids(table: pa.Table, settings: Settings, model: NoModel) -> PartT
     return _divide(table, settings, ["odd id" if is_odd else "" for is_odd in odd])
 
 
-def _divide(table: pa.Table, settings: Settings, reasons: list[str]) -> PartTables:
+def by_content(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
+    """Give every quantity a value that follows from the row's contents, and reject every fifth row or so for them."""
+    hashes = row_hashes(table, settings)
+    return _divide(table, settings, ["unlucky" if unlucky else "" for unlucky in hashes % 5 == 0], hashes % 1000)
+
+
+def _divide(table: pa.Table, settings: Settings, reasons: list[str], values: np.ndarray | None = None) -> PartTables:
+    if values is None:
+        values = table["_input_row"].to_numpy() % 1000
     _, has_id = id_hashes(table[settings.input.id])
     later = table["_duplicate"].to_numpy() == 2
     told = np.where(has_id, np.where(later, "duplicate id", reasons), "no id")
     kept, rejected = table.filter(pa.array(told == "")), table.filter(pa.array(told != ""))
+    values = values[told == ""]
     return PartTables(
-        _catalogue(kept, settings), _rejected(rejected, told[told != ""], settings), _draws(kept, settings)
+        _catalogue(kept, settings, values),
+        _rejected(rejected, told[told != ""], settings),
+        _draws(kept, settings, values),
     )
 
 
-def _catalogue(kept: pa.Table, settings: Settings) -> pa.Table:
+def _catalogue(kept: pa.Table, settings: Settings, values: np.ndarray) -> pa.Table:
     schema = catalogue_schema(settings, *output_fields(kept.schema, settings))
     own = {
         "flags": np.where(kept["_duplicate"].to_numpy() == 1, BY_NAME["duplicate_id"].value, 0),
@@ -73,7 +84,7 @@ def _catalogue(kept: pa.Table, settings: Settings) -> pa.Table:
         elif pa.types.is_string(field.type):
             arrays.append(pa.repeat(pa.scalar("blackbody"), kept.num_rows))
         else:
-            arrays.append(pa.array(kept["_input_row"].to_numpy() % 1000, field.type, safe=False))
+            arrays.append(pa.array(values, field.type, safe=False))
     return pa.table(arrays, schema=schema)
 
 
@@ -89,13 +100,12 @@ def _rejected(table: pa.Table, reasons: Any, settings: Settings) -> pa.Table:
     return pa.table(columns, schema=rejected_schema(output_fields(table.schema, settings)[0]))
 
 
-def _draws(kept: pa.Table, settings: Settings) -> pa.Table | None:
+def _draws(kept: pa.Table, settings: Settings, values: np.ndarray) -> pa.Table | None:
     count = settings.sampling.keep_draws
     if not count:
         return None
     schema = draws_schema(settings, output_fields(kept.schema, settings)[0])
-    values = np.repeat(kept["_input_row"].to_numpy(), count).astype(np.float32)
-    lists = pa.FixedSizeListArray.from_arrays(pa.array(values), count)
+    lists = pa.FixedSizeListArray.from_arrays(pa.array(np.repeat(values, count).astype(np.float32)), count)
     return pa.table([kept[settings.input.id], *[lists] * (len(schema) - 1)], schema=schema)
 
 
