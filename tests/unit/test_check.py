@@ -1,7 +1,9 @@
 import pyarrow.parquet as pq
 
+from planning import written
 from small_survey import settings_for, stars
-from starkiln.engine.check import describe_plan, row_bytes
+from starkiln.engine.check import count_rows, describe_plan, row_bytes
+from starkiln.engine.records import Plan, RowCounts, Unit
 from starkiln.tables.source import open_source
 
 
@@ -47,3 +49,55 @@ def test_bytes_of_a_row_follow_the_columns(tmp_path):
     assert with_ra - least == 8
     assert with_bands - least == 3 * 2 * 4
     assert with_draws - least == 6 * 100 * 4 + 8
+
+
+class Told:
+    """Notes what it is told of progress."""
+
+    def __init__(self):
+        self.begun, self.rows = [], 0
+
+    def begin(self, what, rows):
+        self.begun.append((what, rows))
+
+    def advance(self, rows):
+        self.rows += rows
+
+
+def test_rows_are_counted_and_nothing_of_the_run_is_touched(tmp_path):
+    source, settings = written(tmp_path / "input", [stars(40)], output=tmp_path / "run", compute__workers=2)
+    told = Told()
+    plan = count_rows(source, settings, {"fit_key": "one"}, told)
+    assert (plan.rows, plan.parts) == (RowCounts(new=40), 1)
+    assert (told.begun, told.rows) == ([("planning", 40)], 40)
+    assert [path.name for path in tmp_path.iterdir()] == ["input"]
+    assert describe_plan(source, settings, plan).splitlines()[1:5] == [
+        "input    40 rows, 1 file(s), 2 row group(s)",
+        "selected 40 rows; the filters turn 0 away",
+        "to fit   40 rows: 40 new, 0 changed",
+        "kept     0 rows as published",
+    ]
+
+
+def test_a_counted_plan_tells_all_that_becomes_of_rows(tmp_path):
+    source, settings = written(tmp_path / "input", [stars(40)], output=tmp_path / "run", compute__workers=2)
+    unit = Unit(0, ".", ((0, 0),), 0, 40, 30, 0, (15, 15))
+    counts = RowCounts(new=1, changed=2, kept=14, failed=3, retried=4, duplicate=5, without_id=1, gone=7)
+    plan = Plan(read=40, selected=30, units=(unit,), stamps=(), rows=counts, why="departures changed")
+    lines = describe_plan(source, settings, plan).splitlines()
+    assert lines[2:8] == [
+        "selected 30 rows; the filters turn 10 away",
+        "to fit   7 rows: 1 new, 2 changed, 4 retried",
+        "why      departures changed",
+        "kept     14 rows as published, 3 left out for a fault before",
+        "left out 5 rows whose id has come before, 1 without an id",
+        "gone     7 ids of the published catalogue",
+    ]
+    assert "parts    2" in lines
+    assert lines[-1].startswith("time     about 0.07 seconds")
+
+
+def test_counting_makes_do_with_the_systems_folder_for_temporary_files(tmp_path):
+    source, settings = written(tmp_path / "input", [stars(40)], output=tmp_path / "not" / "there" / "run")
+    assert count_rows(source, settings, {"fit_key": "one"}, Told()).selected == 40
+    assert [path.name for path in tmp_path.iterdir()] == ["input"]

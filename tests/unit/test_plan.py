@@ -1,3 +1,4 @@
+import json
 import os
 
 import numpy as np
@@ -7,14 +8,12 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from planning import Remembered, planned, written
 from small_survey import settings_for, stars, with_column
-from starkiln.engine.plan import (
-    even_parts,
-    file_stamp,
-    make_plan,
-    rows_per_part,
-)
-from starkiln.engine.repeats import copies, read_marks
+from starkiln.engine import hashing
+from starkiln.engine.plan import even_parts, file_stamp, load_plan, rows_per_part, save_plan
+from starkiln.engine.rownotes import note_columns, read_notes
+from starkiln.engine.stopping import RunStopped
 from starkiln.errors import EnvironmentTrouble, InputError
 from starkiln.tables import hashes
 from starkiln.tables.source import open_source
@@ -22,14 +21,13 @@ from starkiln.tables.source import open_source
 
 def plan_of(tmp_path, tables, row_group_size=30, workers=1, **changes):
     """Write tables as files a, b, ... and return their source and plan."""
-    folder, scratch = tmp_path / "input", tmp_path / "scratch"
-    folder.mkdir()
-    scratch.mkdir()
-    for name, table in zip("abcdefgh", tables, strict=False):
-        pq.write_table(table, folder / f"{name}.parquet", row_group_size=row_group_size)
-    settings = settings_for(folder, **changes)
-    source = open_source(settings)
-    return source, make_plan(source, settings, workers, scratch)
+    source, settings = written(tmp_path / "input", tables, row_group_size, **changes)
+    return source, planned(tmp_path, source, settings, workers)
+
+
+def copies_in(tmp_path, first, last):
+    rows = np.arange(first, last)
+    return note_columns(read_notes(tmp_path / "plan" / "notes", first, last), rows)["_duplicate"].tolist()
 
 
 @given(rows=st.integers(0, 10_000), most=st.integers(1, 3000))
@@ -41,10 +39,18 @@ def test_parts_are_as_few_and_as_even_as_can_be(rows, most):
 
 
 def test_parts_shrink_to_keep_workers_busy_but_not_to_crumbs():
-    assert rows_per_part(1_000_000, workers=2, most=5000) == 5000
-    assert rows_per_part(8000, workers=2, most=5000) == 1000
-    assert rows_per_part(300, workers=8, most=5000) == 250
-    assert rows_per_part(300, workers=8, most=40) == 40
+    assert rows_per_part(1_000_000, 1_000_000, workers=2, most=5000) == 5000
+    assert rows_per_part(8000, 8000, workers=2, most=5000) == 1000
+    assert rows_per_part(300, 300, workers=8, most=5000) == 250
+    assert rows_per_part(300, 300, workers=8, most=40) == 40
+
+
+def test_parts_grow_where_most_rows_are_taken_over_but_not_beyond_a_bound():
+    assert rows_per_part(1_000_000, 500_000, workers=2, most=5000) == 10_000
+    assert rows_per_part(1_000_000, 10, workers=2, most=5000) == 50_000
+    assert rows_per_part(1_000_000, 0, workers=2, most=5000) == 50_000
+    assert rows_per_part(200_000, 1780, workers=2, most=5000) == 25_000
+    assert rows_per_part(1_000_000, 10, workers=2, most=60_000) == 60_000
 
 
 @pytest.mark.parametrize("row_group_size", [1, 7, 30, 1000])
@@ -83,9 +89,9 @@ def test_repeated_ids_are_found_across_files_and_rows_without_id_are_not_repeats
     tables = [with_column(stars(len(some)), "star_id", pa.array(some, pa.int64())) for some in ids]
     _, plan = plan_of(tmp_path, tables)
     assert plan.duplicates == 2
-    marks = read_marks(tmp_path / "scratch" / "marks", 0, 7)
-    assert copies(marks, np.arange(7)).tolist() == [1, 0, 0, 0, 2, 2, 0]
-    assert copies(read_marks(tmp_path / "scratch" / "marks", 3, 5), np.arange(3, 5)).tolist() == [0, 2]
+    assert plan.rows.without_id == 2
+    assert copies_in(tmp_path, 0, 7) == [1, 0, 0, 0, 2, 2, 0]
+    assert copies_in(tmp_path, 3, 5) == [0, 2]
 
 
 def test_a_copy_that_the_filters_turn_away_is_no_copy(tmp_path):
@@ -101,9 +107,7 @@ def test_hive_layout_keeps_partitions_apart(tmp_path):
         (folder / f"field={field}").mkdir(parents=True)
         pq.write_table(stars(30, first), folder / f"field={field}" / "a.parquet")
     settings = settings_for(folder, output__layout="hive")
-    scratch = tmp_path / "scratch"
-    scratch.mkdir()
-    plan = make_plan(open_source(settings), settings, 1, scratch)
+    plan = planned(tmp_path, open_source(settings), settings)
     assert [(unit.folder, unit.part_rows) for unit in plan.units] == [
         ("field=T1", (30,)),
         ("field=T2", (30,)),
@@ -116,13 +120,88 @@ def test_filters_that_leave_nothing_are_an_error_that_names_them(tmp_path):
 
 
 def test_planning_calls_back_between_batches_with_all_rows_read(tmp_path):
-    calls = []
-    source, _ = plan_of(tmp_path, [stars(100)], 30)
-    scratch = tmp_path / "again"
-    scratch.mkdir()
-    settings = settings_for(tmp_path / "input", input__where=[["star_id", "<", 10]])
-    make_plan(source, settings, 1, scratch, calls.append)
-    assert sum(calls) == 100
+    calls, files, checkpoints = [], [], Remembered()
+    tables = [stars(100), stars(20, 101)]
+    source, settings = written(tmp_path / "input", tables, input__where=[["star_id", "<", 110]])
+    options = {"between": calls.append, "on_file": lambda *told: files.append(told), "checkpoints": checkpoints}
+    plan = planned(tmp_path, source, settings, **options)
+    assert (sum(calls), plan.read, plan.selected) == (120, 120, 109)
+    assert [(file.name, file.rows, fresh) for file, fresh in files] == [
+        ("a.parquet", 100, True),
+        ("b.parquet", 20, True),
+    ]
+    assert planned(tmp_path, source, settings, **options) == plan
+    assert sum(calls) == 240
+    assert [fresh for _, fresh in files] == [True, True, False, False]
+
+
+def test_a_plan_that_was_stopped_goes_on_with_the_next_file(tmp_path):
+    class Stopped(Exception):
+        pass
+
+    read, checkpoints = [], Remembered()
+    source, settings = written(tmp_path / "input", [stars(50, 50 * k + 1) for k in range(4)], 50)
+
+    def stop_in_third(rows):
+        read.append(rows)
+        if len(read) == 3:
+            raise Stopped
+
+    with pytest.raises(Stopped):
+        planned(tmp_path, source, settings, checkpoints=checkpoints, between=stop_in_third)
+    assert [file.name for file in checkpoints.files.values()] == ["a.parquet", "b.parquet"]
+    assert len(list((tmp_path / "planning").iterdir())) == 2
+    again = []
+    plan = planned(tmp_path, source, settings, checkpoints=checkpoints, on_file=lambda file, fresh: again.append(fresh))
+    assert again == [False, False, True, True]
+    assert plan == planned(tmp_path / "other", source, settings)
+
+
+def test_records_that_are_damaged_are_made_anew(tmp_path):
+    checkpoints, again = Remembered(), []
+    source, settings = written(tmp_path / "input", [stars(50), stars(50, 51), stars(50, 101)])
+    plan = planned(tmp_path, source, settings, checkpoints=checkpoints)
+    first, second, _ = (tmp_path / "planning" / f"{key}.bin" for key in checkpoints.files)
+    first.write_bytes(first.read_bytes()[:-1] + b"\1")
+    second.unlink()
+    told = {"checkpoints": checkpoints, "on_file": lambda file, fresh: again.append(fresh)}
+    assert planned(tmp_path, source, settings, **told) == plan
+    assert again == [True, True, False]
+
+
+def test_without_time_for_a_file_planning_stops_between_files(tmp_path):
+    checkpoints, asked = Remembered(), []
+    source, settings = written(tmp_path / "input", [stars(10), stars(50, 11)])
+
+    def may_begin(seconds):
+        asked.append(seconds)
+        return len(asked) == 1
+
+    with pytest.raises(RunStopped, match="1 of 2 input files"):
+        planned(tmp_path, source, settings, checkpoints=checkpoints, may_begin=may_begin)
+    assert asked[1] == 5 * asked[0] > 0
+    assert len(checkpoints.files) == 1
+
+
+@pytest.mark.parametrize("batch_rows", [1, 7, 1000])
+def test_the_size_of_batches_changes_nothing(tmp_path, monkeypatch, batch_rows):
+    table = with_column(stars(60), "name", pa.array(["α", None, "", "bc"] * 15))
+    table = with_column(table, "star_id", pa.array([5, None, 7, 5, 8, 9] * 10, pa.int64()))
+    source, settings = written(tmp_path / "input", [table, table], 25, input__carry=["ra", "name"])
+    plan = planned(tmp_path / "one", source, settings)
+    monkeypatch.setattr(hashing, "BATCH_ROWS", batch_rows)
+    assert planned(tmp_path / "two", source, settings) == plan
+    assert plan.rows.duplicate == 96
+    assert plan.content
+
+
+def test_row_groups_do_not_count_for_the_content_of_an_input(tmp_path):
+    tables = [with_column(stars(60), "name", pa.array(["a", None, "bc"] * 20))]
+    contents = []
+    for size in (7, 60):
+        source, settings = written(tmp_path / f"input{size}", tables, size, input__carry=["ra", "name"])
+        contents.append(planned(tmp_path / f"{size}", source, settings).content)
+    assert contents[0] == contents[1]
 
 
 def test_a_file_that_is_gone_is_trouble_that_names_it(tmp_path):
@@ -141,4 +220,41 @@ def test_ids_whose_hashes_agree_in_half_their_bits_are_no_repeats(tmp_path, monk
     tables = [with_column(stars(3), "star_id", ids) for ids in ([5, 6, 7], [8, 6, 9])]
     _, plan = plan_of(tmp_path, tables)
     assert plan.duplicates == 1
-    assert copies(read_marks(tmp_path / "scratch" / "marks", 0, 6), np.arange(6)).tolist() == [0, 1, 0, 0, 2, 0]
+    assert copies_in(tmp_path, 0, 6) == [0, 1, 0, 0, 2, 0]
+
+
+def stored(tmp_path):
+    tables = [with_column(stars(40), "star_id", [*range(1, 40), 3]), stars(30, 41)]
+    _, plan = plan_of(tmp_path, tables, compute__rows_per_part=10, output__layout="hive")
+    return plan, save_plan(plan, tmp_path / "plan")
+
+
+def test_a_stored_plan_comes_back_as_it_was(tmp_path):
+    plan, sha256 = stored(tmp_path)
+    assert plan.notes
+    assert load_plan(tmp_path / "plan", sha256) == plan
+
+
+def test_a_stored_plan_that_is_damaged_or_another_is_no_plan(tmp_path):
+    plan, sha256 = stored(tmp_path)
+    place, notes = tmp_path / "plan" / "plan.json", tmp_path / "plan" / "notes" / plan.notes[0][0]
+    assert load_plan(tmp_path / "plan", "0" * 64) is None
+    whole = notes.read_bytes()
+    notes.write_bytes(whole[:-1] + bytes([whole[-1] ^ 1]))
+    assert load_plan(tmp_path / "plan", sha256) is None
+    notes.unlink()
+    assert load_plan(tmp_path / "plan", sha256) is None
+    notes.write_bytes(whole)
+    assert load_plan(tmp_path / "plan", sha256) == plan
+    place.write_text(json.dumps(json.loads(place.read_text())) + " ")
+    assert load_plan(tmp_path / "plan", sha256) is None
+    place.unlink()
+    assert load_plan(tmp_path / "plan", sha256) is None
+
+
+def test_notes_of_an_earlier_attempt_are_removed(tmp_path):
+    stale = tmp_path / "plan" / "notes" / "000007.npy"
+    stale.parent.mkdir(parents=True)
+    stale.write_bytes(b"no notes")
+    plan_of(tmp_path, [stars(10)])
+    assert not stale.exists()

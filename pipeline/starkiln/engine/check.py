@@ -89,7 +89,7 @@ def _counted(plan: Plan) -> Iterator[tuple[str, str]]:
         yield "why", plan.why
     yield (
         "kept",
-        f"{rows.kept} rows of the published catalogue" + _some(rows.failed, ", {} left out for a fault before"),
+        f"{rows.kept} rows as published" + _some(rows.failed, ", {} left out for a fault before"),
     )
     if rows.duplicate or rows.without_id:
         yield "left out", f"{rows.duplicate} rows whose id has come before, {rows.without_id} without an id"

@@ -139,23 +139,23 @@ class Carried:
     """
 
     def __init__(self, names: list[str]) -> None:
-        self._hashes = {name: (hashlib.sha256(), hashlib.sha256()) for name in names}
+        self._hashes = {name: [hashlib.sha256() for _ in range(3)] for name in names}
 
     def add(self, table: pa.Table) -> None:
         """Take in rows."""
-        for name, (shape, values) in self._hashes.items():
+        for name, (valid, lengths, values) in self._hashes.items():
             column = table[name].combine_chunks()
-            shape.update(pc.is_valid(column).to_numpy(zero_copy_only=False).tobytes())
+            valid.update(pc.is_valid(column).to_numpy(zero_copy_only=False).tobytes())
             if pa.types.is_string(column.type):
                 column = column.cast(pa.large_binary()).fill_null(b"")
-                shape.update(pc.binary_length(column).to_numpy().tobytes())
+                lengths.update(pc.binary_length(column).to_numpy().tobytes())
                 values.update(_bytes_of(column))
             else:
                 values.update(_filled(column).tobytes())
 
     def digest(self) -> bytes:
         """Return the digest of all rows so far."""
-        every = [part.digest() for pair in self._hashes.values() for part in pair]
+        every = [part.digest() for parts in self._hashes.values() for part in parts]
         return hashlib.sha256(b"".join(every)).digest()
 
 

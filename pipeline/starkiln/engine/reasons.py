@@ -33,7 +33,7 @@ def why_refit(
         return "the published catalogue was made by an earlier version of starkiln"
     reasons = []
     if hashes_then["fit_key"] != hashes_now["fit_key"]:
-        reasons = [*_changes(hashes_then, hashes_now, fit_then, fit_now)]
+        reasons = [*_changes(hashes_then, hashes_now, fit_then, fit_now)] or ["what a fit hangs on has changed"]
     if missing_columns:
         noun = "column" if len(missing_columns) == 1 else "columns"
         reasons.append(f"the published catalogue has no {noun} {_listed(missing_columns)}")
@@ -48,10 +48,10 @@ def _changes(
     if then.get("settings") != now["settings"]:
         differences = [] if fit_then is None else list(_differences("", fit_then, fit_now))
         yield "settings changed" + (f" ({_listed(differences)})" if differences else "")
-    if then.get("passbands") != now["passbands"]:
-        before = then.get("passbands") or {}
-        labels = [label for label, digest in now["passbands"].items() if before.get(label) != digest]
-        yield "passbands changed" + (f" ({_listed(labels)})" if labels else "")
+    before = then.get("passbands", {})
+    labels = [label for label, digest in now["passbands"].items() if before.get(label) != digest]
+    if labels:
+        yield f"passbands changed ({_listed(labels)})"
     if then.get("departures") != now["departures"]:
         yield "departures changed"
 

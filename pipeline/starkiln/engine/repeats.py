@@ -2,15 +2,12 @@
 
 from __future__ import annotations
 
-from pathlib import Path
-
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.engine.disk import disk_trouble
 from starkiln.tables.hashes import id_digests
 
-__all__ = ["copies", "id_digests", "mark_repeats", "read_marks", "write_marks"]
+__all__ = ["RECORD", "copies", "id_digests", "mark_repeats"]
 
 RECORD = np.dtype([("id_hash", "<i8"), ("more_hash", "<i8"), ("row_hash", "<i8"), ("row", "<i8")])
 """What is remembered of a row: the two halves of its id's digest, the hash of its values, and its place."""
@@ -48,29 +45,3 @@ def copies(marks: NDArray[np.int64], rows: NDArray[np.int64]) -> NDArray[np.int8
     copy = np.zeros(len(rows), np.int8)
     copy[after > first] = 1 + (marks[first[after > first]] & 1)
     return copy
-
-
-def write_marks(marks: NDArray[np.int64], folder: Path, number: int) -> None:
-    """Write marks that `mark_repeats` returned as a file of a number of its own."""
-    path = folder / f"{number:06d}.npy"
-    with disk_trouble(path):
-        np.save(path, marks)
-
-
-def read_marks(folder: Path, first_row: int, last_row: int) -> NDArray[np.int64]:
-    """Return the marks, ascending, of the rows from `first_row` to before `last_row`.
-
-    Parameters
-    ----------
-    folder
-        The folder of the files of `write_marks`.
-    first_row, last_row
-        Places of rows, counted through all files.
-    """
-    found = []
-    for path in sorted(folder.glob("*.npy")):
-        with disk_trouble(path):
-            marks = np.load(path, mmap_mode="r")
-        low, high = np.searchsorted(marks, [2 * first_row, 2 * last_row])
-        found.append(np.array(marks[low:high]))
-    return np.sort(np.concatenate([np.zeros(0, np.int64), *found]))
