@@ -9,7 +9,7 @@ import dask
 import psutil
 import pytest
 
-from real_runs import workers_of
+from real_runs import still_running, workers_of
 from starkiln.engine import executors
 from starkiln.engine.executors import ClusterTrouble, Finished, SerialExecutor, WorkerDied, open_cluster
 
@@ -58,6 +58,14 @@ def test_a_serial_error_is_handed_over():
     executor.submit("a", fail, "no")
     finished = executor.next_finished()
     assert str(finished.error) == "no"
+
+
+def test_serial_tasks_that_are_abandoned_are_never_run():
+    executor = SerialExecutor()
+    executor.submit("a", fail, "no")
+    executor.refuse("anywhere")
+    executor.abandon()
+    assert executor.next_finished() is None
 
 
 @pytest.fixture(scope="module")
@@ -179,6 +187,20 @@ def test_closing_in_the_middle_of_a_task_is_quick_and_leaves_no_worker(tmp_path)
     assert time.monotonic() - started < 4.5
     left = set(psutil.Process().children(recursive=True)) - before
     assert [process for process in left if process.status() != psutil.STATUS_ZOMBIE] == []
+
+
+def test_tasks_that_are_abandoned_end_with_their_workers(tmp_path):
+    started = time.monotonic()
+    others = workers_of(os.getpid())
+    with open_cluster(2, MEMORY, tmp_path) as executor:
+        executor.submit("a", time.sleep, 60)
+        executor.submit("b", time.sleep, 60)
+        time.sleep(1)
+        workers = [worker for worker in workers_of(os.getpid()) if worker not in others]
+        assert len(workers) == 2
+        executor.abandon()
+        assert still_running(workers) == []
+    assert time.monotonic() - started < 15
 
 
 def leave_in_the_middle_of_a_task(scratch):
