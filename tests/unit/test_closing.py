@@ -3,26 +3,17 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
 
-from fake_stages import pass_through, reject_odd_ids, stages
-from small_survey import settings_for, stars, with_column
-from starkiln.engine.run import run_settings
+from fake_stages import pass_through, reject_odd_ids
+from part_runs import bytes_of, plan_run, rows_of, write_tables
+from small_survey import stars, with_column
+from starkiln.errors import EnvironmentTrouble
 from starkiln.tables.hashes import id_hashes, row_hashes
 
 
 def run(tmp_path, tables, process=pass_through, **changes):
-    """Write tables as files a, b, ..., run them, and return the settings and the published generation."""
-    folder = tmp_path / "input"
-    for name, table in tables.items():
-        path = folder / name
-        path.parent.mkdir(parents=True, exist_ok=True)
-        pq.write_table(table, path, row_group_size=7)
-    settings = settings_for(folder, tmp_path / "run", **changes)
-    return settings, run_settings(settings, stages=stages(process)).path
-
-
-def rows_of(generation, table):
-    files = sorted((generation / table).rglob("*.parquet"))
-    return pa.concat_tables([pq.read_table(path) for path in files])
+    """Write tables as files, do every part of them, and return the settings and the generation."""
+    planned = plan_run(tmp_path / "run", write_tables(tmp_path / "input", tables), process, **changes)
+    return planned.job.settings, planned.finish()
 
 
 @pytest.fixture
@@ -34,7 +25,7 @@ def repeated():
 
 
 def test_rows_are_packed_in_input_order_into_files_of_one_length(tmp_path, repeated):
-    changes = {"compute__rows_per_part": 4, "output__rows_per_file": 10, "input__carry": ["ra"]}
+    changes = {"part_rows": 4, "output__rows_per_file": 10, "input__carry": ["ra"]}
     _, generation = run(tmp_path, {"a.parquet": repeated}, **changes)
     files = sorted((generation / "catalogue").iterdir())
     assert [pq.read_metadata(path).num_rows for path in files] == [10, 10, 8]
@@ -44,11 +35,29 @@ def test_rows_are_packed_in_input_order_into_files_of_one_length(tmp_path, repea
     assert catalogue["ra"].to_pylist() == [repeated["ra"][row].as_py() for row in kept]
     rejected = rows_of(generation, "rejected")
     assert rejected["input_row"].to_pylist() == [4, 10]
-    assert not (generation / "parts").exists()
+
+
+def test_closing_again_gives_the_same_bytes_whatever_was_left_there(tmp_path, repeated):
+    folder = write_tables(tmp_path / "input", {"a.parquet": repeated})
+    planned = plan_run(tmp_path / "run", folder, pass_through, sampling__keep_draws=2, output__rows_per_file=8)
+    first = bytes_of(planned.finish())
+    parts = bytes_of(planned.job.parts)
+    for left in ("catalogue/part-000001.parquet", "catalogue/.part-000002.parquet.tmp", "run.json", "index/other"):
+        (tmp_path / "run" / "result" / left).write_text("left by a run that was killed")
+    assert bytes_of(planned.close()) == first
+    assert bytes_of(planned.job.parts) == parts
+
+
+def test_a_part_that_is_not_there_is_trouble(tmp_path, repeated):
+    planned = plan_run(tmp_path / "run", write_tables(tmp_path / "input", {"a.parquet": repeated}))
+    planned.finish()
+    (planned.job.parts / "index" / "part-000002.parquet").unlink()
+    with pytest.raises(EnvironmentTrouble, match=r"part-000002\.parquet"):
+        planned.close()
 
 
 def test_the_index_leads_to_the_row_of_every_id(tmp_path, repeated):
-    changes = {"compute__rows_per_part": 4, "output__rows_per_file": 10}
+    changes = {"part_rows": 4, "output__rows_per_file": 10}
     settings, generation = run(tmp_path, {"a.parquet": repeated}, **changes)
     index = rows_of(generation, "index")
     hashes, has_id = id_hashes(repeated["star_id"])
@@ -62,7 +71,7 @@ def test_the_index_leads_to_the_row_of_every_id(tmp_path, repeated):
 
 
 def test_a_rejected_row_with_an_id_is_in_the_index(tmp_path):
-    _, generation = run(tmp_path, {"a.parquet": stars(20)}, reject_odd_ids, compute__rows_per_part=3)
+    _, generation = run(tmp_path, {"a.parquet": stars(20)}, reject_odd_ids, part_rows=3)
     index = rows_of(generation, "index")
     assert len(index) == 20
     for entry in index.to_pylist():
@@ -96,7 +105,7 @@ def test_hive_layout_keeps_the_partition_folders_of_the_input(tmp_path):
 
 
 def test_draws_are_kept_row_by_row_with_the_catalogue(tmp_path, repeated):
-    _, generation = run(tmp_path, {"a.parquet": repeated}, compute__rows_per_part=4, sampling__keep_draws=3)
+    _, generation = run(tmp_path, {"a.parquet": repeated}, part_rows=4, sampling__keep_draws=3)
     draws = rows_of(generation, "draws")
     assert draws["star_id"].to_pylist() == rows_of(generation, "catalogue")["star_id"].to_pylist()
     assert draws["teff"].type == pa.list_(pa.float32(), 3)

@@ -17,6 +17,7 @@ import pyarrow as pa
 from distributed import get_worker
 
 from starkiln.engine.disk import disk_trouble
+from starkiln.engine.identity import identify
 from starkiln.engine.provenance import hashes
 from starkiln.engine.records import EarlierFile, Identity, WorkerDisagrees
 from starkiln.errors import EnvironmentTrouble
@@ -157,8 +158,6 @@ def open_job(job: Job | SavedJob) -> Job:
 
 @lru_cache(maxsize=1)
 def _read_job(saved: SavedJob) -> Job:
-    from starkiln.engine.identity import identify
-
     if saved.identity is not None and (disagreement := identify(saved.identity)):
         raise WorkerDisagrees(_worker_address(), disagreement)
     with disk_trouble(saved.path):
