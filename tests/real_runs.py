@@ -18,21 +18,41 @@ MAIN = """
 import sys
 import fake_stages
 from starkiln import cli
-from starkiln.engine import build, run
+from starkiln.engine import build, run, stopping
 if __name__ == "__main__":
-    stage, small = sys.argv.pop(), sys.argv.pop()
+    small, stage = sys.argv[1:3]
+    del sys.argv[1:3]
     build.SMALL_RUN_ROWS = int(small)
     run.fitting_stages = lambda: fake_stages.stages(getattr(fake_stages, stage))
     cli.main()
 """
 
 
-def start_run(folder: Path, settings: Settings, stage: str, *, cluster: bool = True) -> subprocess.Popen[str]:
-    """Start a run that does one of the fake stages, in a process group of its own."""
+def start_run(
+    folder: Path, settings: Settings, stage: str, *arguments: str, cluster: bool = True, main: str = MAIN
+) -> subprocess.Popen[str]:
+    """Start a run that does one of the fake stages, in a process group of its own.
+
+    Parameters
+    ----------
+    folder
+        Receives the settings file and the script.
+    settings
+        The settings.
+    stage
+        The name of the stage in `fake_stages`.
+    arguments
+        Options of the command line.
+    cluster
+        Whether worker processes do the work, however few rows there are.
+    main
+        The script, with the number of rows of a small run and the stage before its other arguments.
+    """
     (folder / "run.toml").write_text(dump_toml(settings))
-    (folder / "main.py").write_text(MAIN)
+    (folder / "main.py").write_text(main)
+    small = "-1" if cluster else "1000000000"
     return subprocess.Popen(
-        [sys.executable, folder / "main.py", "run", folder / "run.toml", "0" if cluster else "1000000000", stage],
+        [sys.executable, folder / "main.py", small, stage, "run", folder / "run.toml", *arguments],
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,

@@ -10,8 +10,8 @@ import pytest
 import starkiln
 from pipeline_survey import blackbodies, write
 from small_survey import with_column
-from starkiln.engine import run as engine_run
-from starkiln.engine.run import run_settings
+from starkiln.engine import build
+from starkiln.engine.run import RunOptions, run_settings
 from starkiln.errors import EnvironmentTrouble
 from starkiln.settings import dump_toml
 
@@ -78,21 +78,69 @@ def test_the_same_bytes_for_any_parts_workers_and_row_groups(survey, tmp_path, m
     write(tmp_path / "regrouped", row_group_size=4, a=blackbodies(30, 1), b=blackbodies(20, 31))
     regrouped = survey("regrouped-run", input__tables=str(tmp_path / "regrouped"), compute__rows_per_part=11)
     assert digests(regrouped) == expected
-    monkeypatch.setattr(engine_run, "SMALL_RUN_ROWS", 0)
+    monkeypatch.setattr(build, "SMALL_RUN_ROWS", -1)
     for workers in (1, 2):
         changes = {"compute__workers": workers, "compute__rows_per_part": 9}
         assert digests(survey(f"workers-{workers}", **changes)) == expected
     assert {name.split("/")[0] for name in expected} == set(TABLES)
 
 
-def test_a_second_run_publishes_the_same_bytes(survey):
+def test_a_second_run_has_nothing_to_do_and_touches_nothing(survey, tmp_path):
+    settings = survey()
+    first = run_settings(settings)
+    before = {path: path.stat().st_mtime_ns for path in (tmp_path / "run" / "generations").rglob("*")}
+    second = run_settings(settings)
+    assert (second.exit_code, second.path, second.counts) == (0, first.path, first.counts)
+    assert second.message == f"nothing to do: {first.message}"
+    assert {path: path.stat().st_mtime_ns for path in (tmp_path / "run" / "generations").rglob("*")} == before
+
+
+def test_refitting_all_publishes_the_same_bytes_and_says_why(survey):
     settings = survey(sampling__keep_draws=3)
-    first, second = run_settings(settings).path, run_settings(settings).path
+    first = run_settings(settings).path
+    second = run_settings(settings, options=RunOptions(refit_all=True)).path
     assert (first.name, second.name) == ("000001", "000002")
+    assert facts_of(second)["why"] == "--refit-all was given"
     files = sorted(path.relative_to(first) for path in first.rglob("*.parquet"))
     assert {path.parts[0] for path in files} == {*TABLES, "draws"}
     for path in files:
         assert (first / path).read_bytes() == (second / path).read_bytes()
+
+
+def test_only_what_is_new_or_changed_is_fitted_and_the_bits_are_those_of_a_fresh_run(survey, tmp_path):
+    first = run_settings(survey(sampling__keep_draws=3))
+    table = blackbodies(20, 31)
+    brighter = table["panstarrs_g"].to_numpy().copy()
+    brighter[4] *= 1.1
+    write(tmp_path / "survey", b=with_column(table, "panstarrs_g", brighter), c=blackbodies(5, 101))
+    refitted = run_settings(survey(sampling__keep_draws=3))
+    facts = facts_of(refitted.path)
+    assert {name: facts["rows"][name] for name in ("new", "changed", "kept", "gone")} == {
+        "new": 5,
+        "changed": 1,
+        "kept": 49,
+        "gone": 0,
+    }
+    assert refitted.message.endswith("; 5 new, 1 changed, 49 kept, 0 gone")
+    assert facts["files"] == digests(survey("fresh", sampling__keep_draws=3))
+    assert facts["files"] != facts_of(first.path)["files"]
+
+
+def test_the_audit_of_a_refit_covers_the_stars_that_stay(survey, tmp_path):
+    run_settings(survey())
+    write(tmp_path / "survey", c=blackbodies(5, 101))
+    added = facts_of(run_settings(survey()).path)
+    fresh = facts_of(run_settings(survey("fresh")).path)
+    assert added["zero_point_audit_stars"] == {"fitted": 5, "earlier": 50, "outdated": 0}
+    assert added["zero_point_audit"] == fresh["zero_point_audit"]
+
+
+def test_the_audit_leaves_earlier_stars_out_once_too_many_have_changed(survey, tmp_path):
+    run_settings(survey())
+    write(tmp_path / "survey", b=blackbodies(10, 31))
+    facts = facts_of(run_settings(survey()).path)
+    assert facts["rows"]["gone"] + facts["rows"]["changed"] >= 10
+    assert facts["zero_point_audit_stars"]["earlier"] == 0
 
 
 def test_the_catalogue_in_memory_has_the_same_rows(survey):
@@ -112,11 +160,14 @@ def test_run_json_tells_the_whole_story(survey):
     assert facts["exit_code"] == 0
     assert facts["start"] < facts["end"]
     assert set(facts["seconds"]["wall"]) == {"open", "plan", "work", "pack"}
-    assert set(facts["seconds"]["summed_over_workers"]) == {"cut", "process", "write"}
+    assert set(facts["seconds"]["summed_over_workers"]) == {"cut", "keep", "process", "write"}
     assert facts["stars_per_second"] > 0
     assert min(facts["peak_memory_bytes"].values()) > 50e6
     assert {"python", "numpy", "numba", "starkiln"} <= set(facts["versions"])
     assert set(facts["hashes"]["passbands"]) == {"panstarrs_g", "panstarrs_r", "panstarrs_i"}
+    assert facts["hashes"].keys() >= {"fit_key", "rows", "inputs", "content", "output"}
+    assert facts["rows"] == dict.fromkeys(facts["rows"], 0) | {"new": 50}
+    assert facts["zero_point_audit_stars"] == {"fitted": 50, "earlier": 0, "outdated": 0}
     assert [file["rows"] for file in facts["input"]["files"]] == [30, 20]
     assert facts["passbands"]["panstarrs_g"]["source"]
 
@@ -128,11 +179,15 @@ def test_nothing_else_is_left_in_the_run_directory(survey, tmp_path):
         "catalogue",
         "current",
         "generations",
+        "ledger.sqlite",
         "lock",
         "logs",
+        "progress.json",
         "rejected",
     ]
+    assert [path.name for path in (tmp_path / "run" / "generations").iterdir()] == ["000001"]
     assert sorted(path.name for path in result.path.iterdir()) == [
+        "audit.npz",
         "catalogue",
         "draws",
         "index",
@@ -173,15 +228,15 @@ def test_the_python_door_returns_the_outcome(survey, tmp_path):
 
 @pytest.mark.parametrize("name", ["a", "b"])
 def test_a_file_that_changes_during_the_run_stops_it(survey, tmp_path, name, monkeypatch):
-    make_plan = engine_run.make_plan
+    make_plan = build.make_plan
 
-    def plan_then_touch(*arguments):
-        plan = make_plan(*arguments)
+    def plan_then_touch(*arguments, **more):
+        plan = make_plan(*arguments, **more)
         with (tmp_path / "survey" / f"{name}.parquet").open("ab") as file:
             file.write(b"more")
         return plan
 
-    monkeypatch.setattr(engine_run, "make_plan", plan_then_touch)
+    monkeypatch.setattr(build, "make_plan", plan_then_touch)
     with pytest.raises(EnvironmentTrouble, match=rf"{name}\.parquet has changed since the run was planned"):
         run_settings(survey())
     (log,) = (tmp_path / "run" / "logs").iterdir()

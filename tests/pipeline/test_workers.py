@@ -16,10 +16,10 @@ import sys
 from dataclasses import replace
 from fake_stages import fit_and_tell_compilations
 from starkiln import cli
-from starkiln.engine import run
+from starkiln.engine import build, run
 from starkiln.engine.job import fitting_stages
 if __name__ == "__main__":
-    run.SMALL_RUN_ROWS = 0
+    build.SMALL_RUN_ROWS = -1
     run.fitting_stages = lambda: replace(fitting_stages(), process_part=fit_and_tell_compilations)
     cli.main()
 """

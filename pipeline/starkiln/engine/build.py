@@ -230,8 +230,12 @@ class Making:
         most = rows_per_part(plan.selected, self._fits(), worker_count(self._bench.settings), compute.rows_per_part)
         return not self.done and max(max(unit.part_rows) for unit in plan.units) > most
 
+    def _is_small(self) -> bool:
+        kept = self.plan.selected - self._fits()
+        return self._fits() + kept / KEPT_ROWS_LIKE_ONE_FITTED <= SMALL_RUN_ROWS
+
     def _fits(self) -> int:
-        return self.plan.selected - self.plan.rows.kept - self.plan.rows.failed
+        return self.plan.selected - sum(unit.reused for unit in self.plan.units)
 
     def work(self) -> None:
         """Do every part that is not done.
@@ -303,7 +307,7 @@ class Making:
             with open_foreign(options.scheduler, options.scheduler_file, identity, bench.log) as foreign:
                 bench.laps.lap("start workers")
                 yield foreign, job.save(identity)
-        elif self._fits() + self.plan.rows.kept / KEPT_ROWS_LIKE_ONE_FITTED <= SMALL_RUN_ROWS and not safely:
+        elif self._is_small() and not safely:
             yield _InterruptedExecutor(bench.stop), job
         else:
             bench.progress.begin("warming up", 0)
