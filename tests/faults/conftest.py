@@ -14,8 +14,8 @@ def start(tmp_path):
     """A function that starts a run of a fake stage (`real_runs.start_run`); nothing of it outlives the test."""
     started = []
 
-    def start(settings, stage, **options):
-        started.append(start_run(tmp_path, settings, stage, **options))
+    def start(settings, stage, *arguments, **options):
+        started.append(start_run(tmp_path, settings, stage, *arguments, **options))
         return started[-1]
 
     yield start

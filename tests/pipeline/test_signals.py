@@ -60,9 +60,7 @@ def test_ctrl_c_while_workers_start_makes_no_noise(started_run, delay):
 @pytest.mark.parametrize(
     ("number", "to_group"), [(signal.SIGTERM, False), (signal.SIGTERM, True), (signal.SIGINT, True)]
 )
-def test_a_stopped_run_leaves_nothing_running_and_the_next_one_goes_on(
-    busy_run, tmp_path, settings, number, to_group
-):
+def test_a_stopped_run_leaves_nothing_running_and_the_next_one_goes_on(busy_run, tmp_path, settings, number, to_group):
     children = psutil.Process(busy_run.pid).children(recursive=True)
     assert len(children) >= 2
     if to_group:

@@ -10,11 +10,12 @@ import pytest
 from typer.testing import CliRunner
 
 import starkiln
-from fake_stages import raise_at_failing_id, stages
+from fake_stages import build_no_model, raise_always, raise_at_failing_id, stages
 from small_survey import settings_for, stars
 from starkiln import cli
 from starkiln.engine import run as engine_run
 from starkiln.settings import dump_toml
+from starkiln.stages import model
 
 
 @pytest.fixture
@@ -34,7 +35,7 @@ def config(tmp_path):
     return path
 
 
-@pytest.mark.parametrize("name", ["check", "run", "path", "passbands"])
+@pytest.mark.parametrize("name", ["check", "run", "status", "path", "passbands"])
 def test_help_has_an_example(command, name):
     shown = command(name, "--help")
     assert shown.exit_code == 0
@@ -107,7 +108,7 @@ def test_an_error_is_a_line_and_its_code_and_debug_adds_the_traceback(command, c
 
 
 def test_a_bug_is_one_line_with_a_hint_and_code_1(command, config, monkeypatch):
-    monkeypatch.setattr(engine_run, "make_plan", None)
+    monkeypatch.setattr(engine_run, "open_source", None)
     shown = command("run", config)
     assert shown.exit_code == 1
     assert shown.stderr == (
@@ -117,14 +118,80 @@ def test_a_bug_is_one_line_with_a_hint_and_code_1(command, config, monkeypatch):
 
 
 def test_the_log_of_a_bug_has_the_traceback(command, config, monkeypatch, tmp_path):
-    monkeypatch.setattr(engine_run, "fitting_stages", lambda: stages(raise_at_failing_id))
+    monkeypatch.setattr(engine_run, "fitting_stages", lambda: stages(raise_always))
     shown = command("run", config)
     assert shown.exit_code == 1
-    assert "part 0 of 20 rows failed: ArithmeticError: the stage has a bug" in shown.stderr
+    assert shown.stderr.startswith("starkiln: part 0 of 20 rows failed")
     (log,) = (tmp_path / "run" / "logs").iterdir()
     end = json.loads(log.read_text().splitlines()[-1])
     assert end["exit_code"] == 1
-    assert "in raise_at_failing_id" in end["traceback"]
+    assert "in raise_always" in end["traceback"]
+
+
+def test_a_row_at_fault_is_set_aside_and_told_even_if_quiet(command, config, monkeypatch, tmp_path):
+    monkeypatch.setattr(engine_run, "fitting_stages", lambda: stages(raise_at_failing_id))
+    shown = command("run", config, "--quiet")
+    assert shown.exit_code == 4
+    assert shown.stdout == (
+        f"19 of 20 stars are in {tmp_path}/run/catalogue, 1 rejected rows in {tmp_path}/run/rejected; "
+        f"1 rows were set aside for faults: see `kind` in {tmp_path}/run/rejected\n"
+    )
+    assert shown.stderr == ""
+    again = command("run", config, "--quiet")
+    assert (again.exit_code, again.output) == (0, "")
+
+
+def test_rows_set_aside_are_tried_again_when_asked_for(command, config, monkeypatch, tmp_path):
+    monkeypatch.setattr(engine_run, "fitting_stages", lambda: stages(raise_at_failing_id))
+    assert command("run", config).exit_code == 4
+    assert command("run", config, "--retry-failed").exit_code == 4
+    monkeypatch.setattr(engine_run, "fitting_stages", stages)
+    shown = command("run", config, "--retry-failed")
+    assert shown.exit_code == 0
+    assert shown.stdout.startswith("20 of 20 stars are in")
+    facts = json.loads((tmp_path / "run" / "current" / "run.json").read_text())
+    assert (facts["rows"]["retried"], facts["rows"]["kept"]) == (1, 19)
+    assert command("run", config, "--retry-failed").stdout.startswith("nothing to do: ")
+
+
+def test_status_tells_how_the_run_ended(command, config, tmp_path):
+    assert command("status", tmp_path / "run").exit_code == 2
+    command("run", config)
+    shown = command("status", tmp_path / "run")
+    assert shown.exit_code == 0
+    assert "ended with exit code 0" in shown.stdout
+    found = json.loads(command("status", tmp_path / "run", "--json").stdout)
+    assert (found["schema"], found["state"], found["rows"]["new"], found["parts"]) == (
+        1,
+        "ended",
+        20,
+        {"total": 1, "done": 1},
+    )
+
+
+def test_check_counts_rows_when_asked(command, config, tmp_path, monkeypatch):
+    command("run", config)
+    pq.write_table(stars(25), tmp_path / "input" / "b.parquet")
+    monkeypatch.setattr(model, "build_model", build_no_model)
+    shown = command("check", config, "--rows")
+    assert shown.exit_code == 0
+    for told in ("20 rows as published", "5 rows: 5 new", "20 rows whose id has come before"):
+        assert told in shown.stdout
+
+
+@pytest.mark.parametrize("limit", ["6", "soon", "0s", "1h30", "-3m"])
+def test_a_time_limit_that_is_none_is_refused(command, config, limit):
+    shown = command("run", config, f"--time-limit={limit}")
+    assert shown.exit_code == 2
+    assert "write it as 6h, 90m, 1h30m or 45s" in shown.stderr
+
+
+def test_a_scheduler_is_named_once(command, config):
+    shown = command("run", config, "--scheduler", "tls://host:1", "--scheduler-file", "f.json")
+    assert (shown.exit_code, shown.stderr) == (
+        2,
+        "starkiln: --scheduler and --scheduler-file exclude each other: give one\n",
+    )
 
 
 def test_a_path_without_a_catalogue_is_an_error_of_the_command_line(command, tmp_path):
@@ -154,10 +221,10 @@ def test_a_signal_ends_with_5_and_no_word_if_quiet(command, config, monkeypatch,
     shown = command("run", config, *(["--quiet"] if quiet else []))
     assert shown.exit_code == 5
     assert shown.stdout == ""
-    assert shown.stderr.startswith("" if quiet else "starkiln: stopped by SIGTERM: nothing was published")
+    assert shown.stderr.startswith("" if quiet else "starkiln: stopped by SIGTERM: 0 of 1 parts are done")
     assert not quiet or shown.stderr == ""
-    assert sorted(path.name for path in (tmp_path / "run").iterdir()) == ["generations", "lock", "logs"]
-    assert not list((tmp_path / "run" / "generations").iterdir())
+    assert not (tmp_path / "run" / "current").exists()
+    assert not (tmp_path / "run" / "scratch").exists()
 
 
 def signal_this_process(*arguments):

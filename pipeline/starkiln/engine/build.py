@@ -15,6 +15,7 @@ from starkiln.engine.earlier import find_earlier
 from starkiln.engine.events import EventLog
 from starkiln.engine.executors import SMALL_RUN_ROWS, Executor, Finished, SerialExecutor, open_cluster
 from starkiln.engine.facts import audit_source, generation_facts, write_facts
+from starkiln.engine.foreign import open_foreign
 from starkiln.engine.generations import Generations
 from starkiln.engine.identity import make_identity
 from starkiln.engine.job import Job, SavedJob
@@ -301,8 +302,6 @@ class Making:
             notes=self.partial / "plan" / "notes",
         )
         if options.scheduler or options.scheduler_file:
-            from starkiln.engine.foreign import open_foreign
-
             identity = make_identity(self.partial)
             with open_foreign(options.scheduler, options.scheduler_file, identity, bench.log) as foreign:
                 bench.laps.lap("start workers")
