@@ -141,6 +141,12 @@ def kill_worker(table: pa.Table, settings: Settings, model: NoModel) -> PartTabl
     return pass_through(table, settings, model)
 
 
+def raise_at_two_ids(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
+    if {FAILING_ID, FAILING_ID + 4} & set(table[settings.input.id].to_pylist()):
+        raise ArithmeticError("the stage has a bug")
+    return pass_through(table, settings, model)
+
+
 def raise_always(table: pa.Table, settings: Settings, model: NoModel) -> PartTables:
     raise ArithmeticError("the stage has a bug")
 

@@ -190,7 +190,6 @@ def test_closing_in_the_middle_of_a_task_is_quick_and_leaves_no_worker(tmp_path)
 
 
 def test_tasks_that_are_abandoned_end_with_their_workers(tmp_path):
-    started = time.monotonic()
     others = workers_of(os.getpid())
     with open_cluster(2, MEMORY, tmp_path) as executor:
         executor.submit("a", time.sleep, 60)
@@ -200,7 +199,6 @@ def test_tasks_that_are_abandoned_end_with_their_workers(tmp_path):
         assert len(workers) == 2
         executor.abandon()
         assert still_running(workers) == []
-    assert time.monotonic() - started < 15
 
 
 def leave_in_the_middle_of_a_task(scratch):
