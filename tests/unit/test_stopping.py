@@ -141,10 +141,7 @@ def test_another_terminate_does_not_prolong_the_grace():
 
 
 def test_the_end_of_the_time_ends_a_block_that_does_not_look():
-    reached = []
-    with StopFlag(0.2, time.monotonic()) as stop:
-        with pytest.raises(RunStopped, match="the time limit"), stop.at_once():
-            time.sleep(60)
-            reached.append("behind the end")
-    assert reached == []
+    with StopFlag(0.2, time.monotonic()) as stop, pytest.raises(RunStopped, match="the time limit"), stop.at_once():
+        time.sleep(60)
+    assert time.monotonic() < stop.deadline + 30
     assert signal.getitimer(signal.ITIMER_REAL)[0] == 0.0
