@@ -93,9 +93,7 @@ def test_magnitudes(keys, zero_jy):
     found = fluxes([0.0, 2.5, 5.0], [0.1, 0.1, 1e-3], unit="mag", **keys).stars
     np.testing.assert_allclose(found.flux_jy[:, 0], [zero_jy, zero_jy / 10, zero_jy / 100], rtol=1e-14)
     # 1.0857 mag is one sigma of a flux at S/N 1: 2.5 / ln 10 (Pogson's definition).
-    np.testing.assert_allclose(
-        found.error_jy[:, 0] / found.flux_jy[:, 0], np.array([0.1, 0.1, 1e-3]) / 1.0857362047581
-    )
+    np.testing.assert_allclose(found.error_jy[:, 0] / found.flux_jy[:, 0], np.array([0.1, 0.1, 1e-3]) / 1.0857362047581)
 
 
 def test_vega_magnitudes_use_the_passband():
@@ -148,6 +146,7 @@ def test_one_compiled_version():
         (-999.0, 0.1, {"unit": "mag", "system": "AB"}, "panstarrs_g is a placeholder"),
         (None, 1.0, {"limit": [True]}, "panstarrs_g has no value"),
         (-1.0, None, {"limit": [True]}, "panstarrs_g_error has no value"),
+        (1e308, 1.0, {"unit": "MJy"}, "panstarrs_g or panstarrs_g_error is out of range"),
     ],
 )
 def test_band_that_cannot_be_used(value, error, keys, told):
@@ -168,9 +167,7 @@ def test_null_mark_is_false():
 
 
 def test_limits():
-    found = fluxes(
-        [6.0, 6.0, 6.0, -1.0], [None, 0.0, 1.0, 1.0], unit="Jy", limit=[True] * 4, limit_sigma=5.0
-    ).stars
+    found = fluxes([6.0, 6.0, 6.0, -1.0], [None, 0.0, 1.0, 1.0], unit="Jy", limit=[True] * 4, limit_sigma=5.0).stars
     assert found.flux_jy[:, 0].tolist() == [6.0, 6.0, 6.0, -1.0]
     assert found.error_jy[:, 0].tolist() == [1.2, 1.2, 1.0, 1.0]
     assert found.limit.all()
@@ -214,9 +211,7 @@ def test_zero_point_is_subtracted_and_the_error_scaled_in_mas():
 
 
 def test_zero_point_and_scale_from_columns():
-    value, error = parallaxes(
-        [5.0], [0.5], input__parallax__zero_point="dec", input__parallax__error_scale="ra"
-    )
+    value, error = parallaxes([5.0], [0.5], input__parallax__zero_point="dec", input__parallax__error_scale="ra")
     table = stars(1)
     assert value == [5.0 - table["dec"][0].as_py()]
     assert error == [0.5 * table["ra"][0].as_py()]
@@ -232,9 +227,17 @@ def test_parallax_that_cannot_be_used_is_none(value, error):
     assert (found[0][1], found[1][1]) == (5.0, 0.1)
 
 
+def test_infinity_less_infinity_is_no_parallax():
+    table = with_column(stars(2), "parallax", [np.inf, 1e308])
+    table = with_column(with_column(table, "zero", [np.inf, 0.0]), "scale", [1.0, 1e308])
+    columns = {"value": "parallax", "error": "parallax_error", "unit": "deg", "zero_point": "zero"}
+    found = run(table, input__parallax=columns | {"error_scale": "scale"}).stars
+    assert np.isnan([found.parallax_mas, found.parallax_error_mas]).all()
+
+
 def test_distances():
-    table = with_column(stars(4), "d", pa.array([0.1, 0.0, None, 0.1]))
-    table = with_column(table, "d_error", pa.array([0.01, 0.01, 0.01, -1.0]))
+    table = with_column(stars(5), "d", pa.array([0.1, 0.0, None, 0.1, 1e308]))
+    table = with_column(table, "d_error", pa.array([0.01, 0.01, 0.01, -1.0, 0.01]))
     distance = {"value": "d", "error": "d_error", "unit": "kpc"}
     found = run(table, input__parallax=None, input__distance=distance).stars
     assert found.distance_pc[0] == pytest.approx(100.0)
@@ -369,9 +372,7 @@ def test_five_thousand_stars_in_thirteen_bands_are_quick():
     for label in labels:
         table = with_column(table, label, np.full(rows, 18.0))
         table = with_column(table, f"{label}_error", np.full(rows, 0.02))
-    settings = settings_for(
-        "/survey", input__photometry=[band(label, unit="mag", system="AB") for label in labels]
-    )
+    settings = settings_for("/survey", input__photometry=[band(label, unit="mag", system="AB") for label in labels])
     model, table = model_of(settings), read_in(table)
     ingest(table, settings, model)
     started = time.perf_counter()

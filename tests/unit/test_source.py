@@ -113,9 +113,7 @@ def hive(tmp_path):
 
 
 def test_partition_values_are_columns(hive):
-    settings = settings_for(
-        hive, input__carry=["field", "year"], input__where=[["field", "in", ["T1", "T 3"]]]
-    )
+    settings = settings_for(hive, input__carry=["field", "year"], input__where=[["field", "in", ["T1", "T 3"]]])
     source = open_source(settings)
     assert source.schema.field("field").type == pa.string()
     assert source.schema.field("year").type == pa.int64()
@@ -167,9 +165,7 @@ def test_all_bad_files_are_listed_at_once(tmp_path):
     text = refusal(settings_for(tmp_path))
     assert text.startswith("6 of 7 input files of ")
     lines = {line.split(":")[0].strip(): line for line in text.split("\n")[1:]}
-    assert set(lines) == {
-        f"{name}.parquet" for name in ("truncated", "empty", "missing", "drift", "unit", "link")
-    }
+    assert set(lines) == {f"{name}.parquet" for name in ("truncated", "empty", "missing", "drift", "unit", "link")}
     assert "no whole Parquet file" in lines["truncated.parquet"]
     assert "no column 'panstarrs_g' (did you mean 'panstars_g'?)" in lines["missing.parquet"]
     assert "input.photometry panstarrs_g value" in lines["missing.parquet"]
@@ -222,6 +218,12 @@ def test_column_that_is_there_twice_is_refused(tmp_path):
         ("ra", [1.0, 2.0], {"input__photometry": "bad"}, "panstarrs_g bad needs booleans"),
         ("star_id", pa.array([1, 2], pa.decimal128(20, 0)), {}, "input.id needs integers or strings"),
         ("ra", pa.array([1, 2], pa.decimal128(9, 4)), {"input__carry": ["ra"]}, "input.carry needs integers"),
+        (
+            "_source",
+            [1, 2],
+            {"input__carry": ["_source"]},
+            "'_source' has a name that starkiln needs for itself: rename it",
+        ),
     ],
 )
 def test_types_that_a_column_cannot_have(tmp_path, column, values, changes, message):
@@ -342,9 +344,7 @@ def test_carried_column_whose_unit_changes_between_files(tmp_path):
     for name, unit in (("a", "deg"), ("b", "rad")):
         table = with_column(stars(2), "ra", [1.0, 2.0], {"unit": unit})
         write(tmp_path / f"{name}.parquet", table)
-    assert "'ra' is in 'rad', but in 'deg' in a.parquet" in refusal(
-        settings_for(tmp_path, input__carry=["ra"])
-    )
+    assert "'ra' is in 'rad', but in 'deg' in a.parquet" in refusal(settings_for(tmp_path, input__carry=["ra"]))
 
 
 def test_carried_column_keeps_its_metadata(tmp_path):
@@ -427,9 +427,7 @@ def test_only(tmp_path, kind):
 def test_only_that_lists_nothing_keeps_nothing(tmp_path):
     write(tmp_path / "tables" / "a.parquet", stars(3))
     write(tmp_path / "targets.parquet", pa.table({"star_id": pa.array([], pa.int64())}))
-    assert (
-        len(read_all(settings_for(tmp_path / "tables", input__only=str(tmp_path / "targets.parquet")))) == 0
-    )
+    assert len(read_all(settings_for(tmp_path / "tables", input__only=str(tmp_path / "targets.parquet")))) == 0
 
 
 @pytest.mark.parametrize(
@@ -446,9 +444,7 @@ def test_only_that_cannot_be_used(tmp_path, targets, message):
     write(tmp_path / "tables" / "a.parquet", stars(3))
     if targets is not None:
         write(tmp_path / "targets.parquet", targets)
-    assert message in refusal(
-        settings_for(tmp_path / "tables", input__only=str(tmp_path / "targets.parquet"))
-    )
+    assert message in refusal(settings_for(tmp_path / "tables", input__only=str(tmp_path / "targets.parquet")))
 
 
 @given(

@@ -37,6 +37,9 @@ SHARPEST = 1e12
 
 _NOT_REJECTED = -1
 
+QUIETLY = np.errstate(over="ignore", invalid="ignore")
+"""What overflows on the way to our units is infinite or NaN, and left out for it: no news for standard error."""
+
 
 @dataclass(frozen=True)
 class Ingested:
@@ -137,6 +140,7 @@ def ingest(table: pa.Table, settings: Settings, model: FitModel) -> Ingested:
     return Ingested(stars, _kept_rows(table, settings, kept), rejected, kept)
 
 
+@QUIETLY
 def read_band(table: pa.Table, band: PhotometryColumns, passband: Passband) -> BandValues:
     """Return one band's fluxes and errors in Jy, its limits, and why a value cannot be used."""
     value, error = float64_values(table[band.value]), float64_values(table[band.error])
@@ -206,6 +210,7 @@ def jy_per_unit(unit: str, pivot_um: float) -> float:
     return float((1.0 * u.Unit(unit)).to_value(u.Jy, u.spectral_density(pivot_um * u.um)))
 
 
+@QUIETLY
 def _parallax_mas(table: pa.Table, settings: Settings) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return parallax minus zero point and scaled error in mas; both NaN where either cannot be used."""
     columns = settings.input.parallax
@@ -217,6 +222,7 @@ def _parallax_mas(table: pa.Table, settings: Settings) -> tuple[NDArray[np.float
     return _measured(value * to_mas, error * to_mas)
 
 
+@QUIETLY
 def _distance_pc(table: pa.Table, settings: Settings) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return distance and error in pc; both NaN where either cannot be used."""
     columns = settings.input.distance

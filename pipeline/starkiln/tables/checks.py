@@ -14,6 +14,9 @@ from astropy.units.function import FunctionUnitBase
 from starkiln.settings import Settings
 from starkiln.tables.votable import known_unit
 
+OWN_COLUMNS = ("_input_file", "_input_row", "_duplicate", "_source", "_source_row")
+"""What goes with each row on its way through a run."""
+
 Kind = Literal["id", "number", "mark", "carry", "filter"]
 
 
@@ -85,9 +88,7 @@ def handed_out_type(kind: pa.DataType) -> pa.DataType:
 
 
 def _is_carried(kind: pa.DataType) -> bool:
-    return (
-        is_id(kind) or pa.types.is_floating(kind) or pa.types.is_boolean(kind) or pa.types.is_timestamp(kind)
-    )
+    return is_id(kind) or pa.types.is_floating(kind) or pa.types.is_boolean(kind) or pa.types.is_timestamp(kind)
 
 
 def is_id(kind: pa.DataType) -> bool:
@@ -121,6 +122,8 @@ def column_problem(field: pa.Field, uses: list[Use]) -> str | None:
 
     A column of type null, as writers make it where every value is missing, fits any use.
     """
+    if field.name in OWN_COLUMNS:
+        return f"column {field.name!r} has a name that starkiln needs for itself: rename it"
     if pa.types.is_null(field.type):
         return None
     unit = field_unit(field)
