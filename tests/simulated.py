@@ -93,14 +93,15 @@ def simulate(
     # What the bands show lies on the departures' scale, about which the truth scatters.
     seen_ln_teff = rng.uniform(*np.log(settings.model.temperature_k), n)
     tau, gamma = model.off_scale_at(seen_ln_teff)
-    ln_teff = np.clip(seen_ln_teff + tau * rng.normal(size=n), *np.log(settings.model.temperature_k))
+    warmer, brighter = rng.normal(size=(2, n)) if model.off_scale.any() else np.zeros((2, n))
+    ln_teff = np.clip(seen_ln_teff + tau * warmer, *np.log(settings.model.temperature_k))
     ln_radius = rng.uniform(*np.log(settings.model.radius_rsun), n)
     length = float(settings.model.distance.length_scale_pc)
     dist_pc = rng.gamma(3.0, length, n)
     av_mean, av_scale = _av_parameters(settings, n, rng)
     av = _draw_av(settings, av_mean, av_scale, rng)
     ln_omega = 2.0 * (ln_radius + LN_RSUN_PC - np.log(dist_pc))
-    seen_ln_omega = ln_omega + 4.0 * (ln_teff - seen_ln_teff) - gamma * rng.normal(size=n)
+    seen_ln_omega = ln_omega + 4.0 * (ln_teff - seen_ln_teff) - gamma * brighter
     true_jy = np.exp(ln_flux(model.table, np.exp(seen_ln_teff), av) + seen_ln_omega[:, None])
     typical_av = float(np.median(av_scale))
     typical_jy = np.exp(

@@ -40,6 +40,7 @@ TEFF_NODES_K: FloatArray = np.exp(LN_TEFF_NODES)
 
 _POINT_ERROR = 0.02  # of a row of the sequence, or of a mean of dwarfs: rounding of T and of colours
 _LATE_K, _LATE_POINT_ERROR = 3_000.0, 0.05  # cooler rows of the sequence rest on few stars each
+_EARLY_K, _EARLY_POINT_ERROR = 9_500.0, 0.08  # hotter ones likewise; their R and T jump from type to type
 _NUV_POINT_ERROR = 0.1
 _MAD_TO_SIGMA = 1.4826
 # Of the curve of dwarfs, where the sequence has 1: they were measured in these bands, its colours are compiled.
@@ -222,8 +223,9 @@ def dwarf_means(dwarfs: Dwarfs) -> tuple[FloatArray, FloatArray, FloatArray]:
 
 
 def _row_errors(rows: MeanSequence, points: FloatArray) -> FloatArray:
-    late = np.where(rows.teff_k < _LATE_K, _LATE_POINT_ERROR, _POINT_ERROR)
-    return np.broadcast_to(late[:, np.newaxis], points.shape)
+    conditions = [rows.teff_k < _LATE_K, rows.teff_k > _EARLY_K]
+    errors = np.select(conditions, [_LATE_POINT_ERROR, _EARLY_POINT_ERROR], _POINT_ERROR)
+    return np.broadcast_to(errors[:, np.newaxis], points.shape)
 
 
 def _sdss_of_sequence(rows: MeanSequence) -> relations.Magnitudes:

@@ -75,7 +75,7 @@ def is_bad(quality: pd.Series, error_mag: pd.Series) -> pd.Series:
 
 
 def nearby_dwarfs(published: pd.DataFrame) -> pa.Table:
-    """Return the table to fit: id, parallax, a magnitude, an error and a mark per band, published values."""
+    """Return the table to fit: id, parallax, a magnitude, an error and a mark per band, published values, `good`."""
     units = {"id": None, "parallax_mas": "mas", "e_parallax_mas": "mas"} | CARRIED
     columns: dict[str, pd.Series] = {name: published[name] for name in units}
     for band in BANDS:
@@ -83,6 +83,8 @@ def nearby_dwarfs(published: pd.DataFrame) -> pa.Table:
         columns |= {magnitude: published[magnitude], error: published[error]}
         columns[f"bad_{band}"] = is_bad(published[f"Qf_{band}"], published[error])
         units |= {magnitude: "mag", error: "mag"}
+    spurious = [published[name].astype(str).str.lower() == "true" for name in ("Bool_delta", "Bool_RUWE")]
+    columns["good"] = ~(spurious[0] | spurious[1])  # no close companion is known, or told by the astrometry
     arrays = {name: pa.array(values.to_numpy(), from_pandas=True) for name, values in columns.items()}
     fields = [
         pa.field(name, values.type, metadata={"unit": units[name]} if units.get(name) else None)
