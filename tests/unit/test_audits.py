@@ -1,15 +1,20 @@
 """What stars say of the zero points, packed: the same again, and nothing but arrays."""
 
+import itertools
 import pickle
 from dataclasses import dataclass
 from typing import NamedTuple
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from numpy.typing import NDArray
 
-from starkiln.engine.audits import pack, pack_audit, packed_together, unpack, unpack_audit
-from starkiln.inference.audit import combined, no_stars
+from starkiln.engine.audits import pack, pack_audit, packed_together, trimmed, unpack, unpack_audit
+from starkiln.inference import audit
+from starkiln.inference.audit import AuditSums, combined, no_stars
+from starkiln.inference.posterior import Block
 
 
 class Data(NamedTuple):
@@ -76,6 +81,41 @@ def test_sums_are_added_up():
     for expected, array in zip(leaves(combined(one, one)), leaves(found), strict=True):
         assert expected.any()
         np.testing.assert_array_equal(array, expected)
+
+
+def some_stars(keys):
+    """Sums of stars with some keys."""
+    keys = np.array(keys, np.uint64)
+    sums = no_stars(3)
+    block = Block(*(np.zeros((len(keys), *column.shape[1:]), column.dtype) for column in sums.block))
+    points = np.repeat(keys[:, None].astype(float), sums.points.shape[1], axis=1)
+    return AuditSums(keys, keys % 2 == 0, points, block)
+
+
+@settings(max_examples=30)
+@given(st.permutations(range(24)), st.lists(st.integers(0, 24), max_size=4).map(sorted))
+def test_trimmed_parts_add_up_to_the_same_sums(keys, cuts):
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(audit, "ENOUGH_STARS", 5)
+        parts = [combined(some_stars(keys[a:b]), some_stars([])) for a, b in itertools.pairwise([0, *cuts, 24])]
+        kept, total = [], some_stars([])
+        for part in parts:
+            kept.append(trimmed(pack_audit(part), total))
+            total = combined(total, part)
+        whole = packed_together(map(pack_audit, parts))
+        assert packed_together(kept) == whole
+        assert unpack_audit(whole).key.tolist() == [0, 1, 2, 3, 4]
+    assert trimmed(pack_audit(some_stars([1, 2])), None) == pack_audit(some_stars([1, 2]))
+    assert trimmed(b"", some_stars([1])) == b""
+
+
+def test_stars_that_count_no_longer_are_not_kept(monkeypatch):
+    monkeypatch.setattr(audit, "ENOUGH_STARS", 3)
+    kept = trimmed(pack_audit(some_stars([1, 5, 7])), some_stars([2, 3, 4]))
+    found = unpack_audit(kept)
+    assert found.key.tolist() == [1]
+    assert found.points[:, 0].tolist() == [1.0]
+    assert found.block.limit.shape == (1, 3)
 
 
 def test_no_object_is_ever_loaded():

@@ -33,6 +33,22 @@ def packed_together(packed: Iterable[bytes]) -> bytes:
     return pack_audit(reduce(together, map(unpack_audit, packed), None))
 
 
+def trimmed(packed: bytes, total: Any) -> bytes:
+    """Return the packed sums of a part without the stars that no longer count beside those of other parts.
+
+    The stars that count are the ones with the least keys, so a star that has fallen out never comes back.
+
+    Parameters
+    ----------
+    total
+        The sums of other parts of the same build, or None.
+    """
+    sums = unpack_audit(packed)
+    if sums is None:
+        return packed
+    return pack(_at(sums, np.isin(sums.key, together(total, sums).key)))
+
+
 def pack(record: Any) -> bytes:
     """Return a named tuple or dataclass of arrays, or of others like it, as bytes."""
     file = io.BytesIO()
@@ -61,6 +77,14 @@ def _leaves(record: Any, path: str) -> Iterator[tuple[str, NDArray[Any]]]:
             yield path + name, value
         else:
             yield from _leaves(value, f"{path}{name}.")
+
+
+def _at(record: Any, stars: NDArray[np.bool_]) -> Any:
+    """Return a record of arrays, one row a star, of some of its stars."""
+    values = {name: getattr(record, name) for name in _names(type(record)) or []}
+    return type(record)(
+        **{name: value[stars] if _names(type(value)) is None else _at(value, stars) for name, value in values.items()}
+    )
 
 
 def _record(kind: type[Any], path: str, arrays: Any) -> Any:
