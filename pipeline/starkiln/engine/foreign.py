@@ -295,8 +295,8 @@ def open_foreign(
     from distributed import Client
 
     address = scheduler or _address_in(scheduler_file)
-    options = {"distributed.comm.timeouts.connect": CONNECT_SECONDS, "logging": {"distributed": "critical"}}
-    with dask.config.set(options), _quiet(), asyncio_silenced():
+    connecting = dask.config.set({"distributed.comm.timeouts.connect": CONNECT_SECONDS})
+    with connecting, _quiet(), asyncio_silenced():
         try:
             with interrupts_blocked(), warnings.catch_warnings(action="ignore"):
                 client = Client(address, timeout=CONNECT_SECONDS, set_as_default=False, name="starkiln")
@@ -327,10 +327,12 @@ def _address_in(scheduler_file: Path | None) -> str:
 @contextmanager
 def _quiet() -> Iterator[None]:
     """Keep dask from telling what the run tells in its own words."""
-    logger = logging.getLogger("distributed")
-    level = logger.level
-    logger.setLevel(logging.CRITICAL)
+    loggers = [logging.getLogger(name) for name in ("distributed", "distributed.client")]
+    levels = [logger.level for logger in loggers]
+    for logger in loggers:
+        logger.setLevel(logging.CRITICAL)
     try:
         yield
     finally:
-        logger.setLevel(level)
+        for logger, level in zip(loggers, levels, strict=True):
+            logger.setLevel(level)
