@@ -1,5 +1,6 @@
 import json
 import os
+from dataclasses import replace
 
 import numpy as np
 import pyarrow as pa
@@ -12,6 +13,7 @@ from planning import Remembered, planned, written
 from small_survey import settings_for, stars, with_column
 from starkiln.engine import hashing
 from starkiln.engine.plan import even_parts, file_stamp, load_plan, rows_per_part, save_plan
+from starkiln.engine.records import EarlierFile
 from starkiln.engine.rownotes import note_columns, read_notes
 from starkiln.engine.stopping import RunStopped
 from starkiln.errors import EnvironmentTrouble, InputError
@@ -250,6 +252,20 @@ def test_a_stored_plan_that_is_damaged_or_another_is_no_plan(tmp_path):
     assert load_plan(tmp_path / "plan", sha256) is None
     place.unlink()
     assert load_plan(tmp_path / "plan", sha256) is None
+
+
+def test_a_plan_whose_earlier_results_are_gone_is_no_plan(tmp_path):
+    plan, _ = stored(tmp_path)
+    results = [tmp_path / name for name in ("catalogue.parquet", "draws.parquet")]
+    for path in results:
+        path.touch()
+    plan = replace(plan, earlier=(EarlierFile(results[0], results[1], "catalogue"), EarlierFile(results[0], None, "x")))
+    sha256 = save_plan(plan, tmp_path / "plan")
+    assert load_plan(tmp_path / "plan", sha256) == plan
+    for path in results:
+        path.rename(tmp_path / "away")
+        assert load_plan(tmp_path / "plan", sha256) is None
+        (tmp_path / "away").rename(path)
 
 
 def test_notes_of_an_earlier_attempt_are_removed(tmp_path):

@@ -11,7 +11,7 @@ import hashlib
 import json
 import os
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import asdict, replace
+from dataclasses import asdict, dataclass, replace
 from itertools import accumulate
 from pathlib import Path, PurePosixPath
 from typing import Any
@@ -141,8 +141,9 @@ def make_plan(
         raise InputError(
             f"input.where and input.only leave none of the {starts[-1]} rows of {settings.input.tables}: loosen them"
         )
-    joined = _Joined(source, files, planning, scratch, earlier, retry_failed=retry_failed, between=between)
-    reused, notes = joined.write(folder / NOTES, starts)
+    firsts = first_rows(source)[:-1]
+    joined = _join(files, firsts, planning, scratch, earlier, retry_failed=retry_failed, between=between)
+    reused, notes = _write_notes(joined, folder / NOTES, starts)
     part_rows = rows_per_part(
         int(selected.sum()), int((selected - reused).sum()), workers, settings.compute.rows_per_part
     )
@@ -182,84 +183,92 @@ def _planned(
     return file, True
 
 
+@dataclass(frozen=True)
 class _Joined:
-    """The rows of an input beside earlier results: counts, and notes that wait in scratch.
+    """The rows of an input beside earlier results.
 
-    Parameters
+    Attributes
     ----------
-    source, files, planning
-        The input tables, what is known of each, and where their hashes are.
-    scratch
-        Receives the buckets and the notes.
-    earlier
-        The earlier results.
-    retry_failed
-        Whether rows that a fault had set aside are tried again.
-    between
-        Called with 0 after each bucket.
+    rows
+        What becomes of them; those without an id are left out.
+    listed, taken
+        The files of earlier results, and whether rows are taken from each.
+    drafts
+        Files of notes, whose sources count from `listed`.
     """
 
-    def __init__(
-        self,
-        source: Source,
-        files: Sequence[PlannedFile],
-        planning: Path,
-        scratch: Path,
-        earlier: Earlier,
-        *,
-        retry_failed: bool,
-        between: Callable[[int], None],
-    ) -> None:
-        rows = max(sum(file.selected for file in files), sum(map(index_size, earlier.sources)))
-        new, old = Buckets(scratch / "new", rows, RECORD), Buckets(scratch / "old", rows, OLD)
-        for file, first_row in zip(files, first_rows(source), strict=False):
-            for records in read_records(planning, file):
-                new.add(**_fields(records) | {"row": records["row"] + first_row})
-        self._listed = _add_earlier(earlier.sources, old)
-        self._drafts = []
-        self.rows = RowCounts()
-        self._taken = np.zeros(len(self._listed), bool)
-        for number, (ours, theirs) in enumerate(zip(new.drain(), old.drain(), strict=True)):
-            notes, counts = join_bucket(ours, theirs, retry_failed=retry_failed)
-            self.rows = _sum(self.rows, counts)
-            self._taken[notes["source"][notes["source"] >= 0]] = True
-            if len(notes):
-                self._drafts.append(scratch / f"notes-{number:06d}.npy")
-                with disk_trouble(self._drafts[-1]):
-                    np.save(self._drafts[-1], notes)
-            between(0)
+    rows: RowCounts
+    listed: tuple[EarlierFile, ...]
+    taken: NDArray[np.bool_]
+    drafts: tuple[Path, ...]
 
     @property
     def used(self) -> tuple[EarlierFile, ...]:
-        """The files of earlier results that rows are taken from."""
-        return tuple(file for file, taken in zip(self._listed, self._taken, strict=True) if taken)
+        """The files that rows are taken from."""
+        return tuple(file for file, taken in zip(self.listed, self.taken, strict=True) if taken)
 
-    def write(self, folder: Path, starts: NDArray[np.int64]) -> tuple[NDArray[np.int64], tuple[tuple[str, str], ...]]:
-        """Write the notes, whose sources count from `used`; return the rows reused in each piece, and the files.
 
-        Parameters
-        ----------
-        folder
-            Receives the files; made if need be.
-        starts
-            The first row of each piece, and the row after the last one.
-        """
-        with disk_trouble(folder):
-            folder.mkdir(parents=True, exist_ok=True)
-            for stale in folder.iterdir():
-                stale.unlink()
-        number_used = np.cumsum(self._taken) - 1
-        reused, written = np.zeros(len(starts) - 1, np.int64), []
-        for number, draft in enumerate(self._drafts):
-            with disk_trouble(draft):
-                notes = np.load(draft, allow_pickle=False)
-                draft.unlink()
-            sourced = notes["source"] >= 0
-            notes["source"][sourced] = number_used[notes["source"][sourced]]
-            place = np.searchsorted(starts, notes["row"][sourced], side="right") - 1
-            reused += np.bincount(place, minlength=len(reused))
-            written.append(write_notes(notes, folder, number))
-        return reused, tuple(written)
+def _join(
+    files: Sequence[PlannedFile],
+    first_rows: NDArray[np.int64],
+    planning: Path,
+    scratch: Path,
+    earlier: Earlier,
+    *,
+    retry_failed: bool,
+    between: Callable[[int], None],
+) -> _Joined:
+    """Compare the rows of all files with earlier results, bucket by bucket."""
+    rows = max(sum(file.selected for file in files), sum(map(index_size, earlier.sources)))
+    new, old = Buckets(scratch / "new", rows, RECORD), Buckets(scratch / "old", rows, OLD)
+    for file, first_row in zip(files, first_rows, strict=True):
+        for records in read_records(planning, file):
+            records["row"] += first_row
+            new.add(**_fields(records))
+    listed = _add_earlier(earlier.sources, old)
+    counts, taken, drafts = RowCounts(), np.zeros(len(listed), bool), []
+    for number, (ours, theirs) in enumerate(zip(new.drain(), old.drain(), strict=True)):
+        notes, here = join_bucket(ours, theirs, retry_failed=retry_failed)
+        counts = _sum(counts, here)
+        taken[notes["source"][notes["source"] >= 0]] = True
+        if len(notes):
+            drafts.append(scratch / f"notes-{number:06d}.npy")
+            with disk_trouble(drafts[-1]):
+                np.save(drafts[-1], notes)
+        between(0)
+    return _Joined(counts, tuple(listed), taken, tuple(drafts))
+
+
+def _write_notes(
+    joined: _Joined, folder: Path, starts: NDArray[np.int64]
+) -> tuple[NDArray[np.int64], tuple[tuple[str, str], ...]]:
+    """Write the notes, whose sources count from the files used; return the rows reused in each piece, and the files.
+
+    Parameters
+    ----------
+    joined
+        Holds the drafts, which are removed.
+    folder
+        Receives the files; made if need be.
+    starts
+        The first row of each piece, and the row after the last one.
+    """
+    with disk_trouble(folder):
+        folder.mkdir(parents=True, exist_ok=True)
+        for stale in folder.iterdir():
+            stale.unlink()
+    number_used = np.cumsum(joined.taken) - 1
+    reused, written = np.zeros(len(starts) - 1, np.int64), []
+    for number, draft in enumerate(joined.drafts):
+        with disk_trouble(draft):
+            notes = np.load(draft, allow_pickle=False)
+            draft.unlink()
+        sourced = notes["source"] >= 0
+        notes["source"][sourced] = number_used[notes["source"][sourced]]
+        place = np.searchsorted(starts, notes["row"][sourced], side="right") - 1
+        reused += np.bincount(place, minlength=len(reused))
+        written.append(write_notes(notes, folder, number))
+    return reused, tuple(written)
 
 
 def _add_earlier(sources: Sequence[EarlierSource], old: Buckets) -> list[EarlierFile]:
@@ -357,7 +366,7 @@ def save_plan(plan: Plan, folder: Path) -> str:
 
 
 def load_plan(folder: Path, sha256: str) -> Plan | None:
-    """Return the plan that `save_plan` wrote; None if it or its notes are no longer what they were."""
+    """Return the plan that `save_plan` wrote; None if it, its notes or earlier results are no longer what they were."""
     try:
         data = (folder / "plan.json").read_bytes()
     except FileNotFoundError:
@@ -365,8 +374,11 @@ def load_plan(folder: Path, sha256: str) -> Plan | None:
     if hashlib.sha256(data).hexdigest() != sha256:
         return None
     plan = _plan(json.loads(data))
-    places = [(folder / NOTES / name, digest) for name, digest in plan.notes]
-    return plan if all(place.is_file() and file_sha256(place) == digest for place, digest in places) else None
+    notes = [(folder / NOTES / name, digest) for name, digest in plan.notes]
+    earlier = [path for file in plan.earlier for path in (file.path, file.draws) if path is not None]
+    if not all(path.is_file() for path in [*earlier, *(path for path, _ in notes)]):
+        return None
+    return plan if all(file_sha256(path) == digest for path, digest in notes) else None
 
 
 def _plan(data: dict[str, Any]) -> Plan:
