@@ -1,6 +1,7 @@
 """Results taken over from earlier runs: as if every row had been fitted again."""
 
 import itertools
+from dataclasses import replace
 
 import numpy as np
 import pyarrow as pa
@@ -12,10 +13,12 @@ from hypothesis import strategies as st
 from fake_stages import by_content, pass_through
 from part_runs import bytes_of, plan_run, rows_of, write_tables
 from small_survey import stars, with_column
+from starkiln.engine.job import fitting_stages
 from starkiln.engine.kept import merged, read_places
 from starkiln.engine.records import SetAside
 from starkiln.errors import EnvironmentTrouble
 from starkiln.flags import BY_NAME
+from starkiln.stages.model import build_model
 from starkiln.tables.write import publish, write_part
 
 KEEP_DRAWS = {"sampling__keep_draws": 2}
@@ -96,7 +99,7 @@ def nights(draw):
     return table, later, cuts, draw(st.integers(1, 9))
 
 
-@settings(max_examples=20, suppress_health_check=[HealthCheck.too_slow])
+@settings(max_examples=12, suppress_health_check=[HealthCheck.too_slow])
 @given(night=nights())
 def test_half_kept_is_like_fitted_whole(tmp_path_factory, night):
     table, later, cuts, part_rows = night
@@ -127,6 +130,27 @@ def test_nothing_that_is_kept_goes_through_a_stage(tmp_path):
 def _nothing_to_fit(table, settings, model):
     assert not len(table)
     return by_content(table, settings, model)
+
+
+@pytest.mark.parametrize("photosphere", ["calibrated", "auto"])
+def test_stars_fitted_before_and_now_are_as_if_fitted_together(tmp_path, photosphere):
+    """With the stages that fit stars, and with none of them left to fit."""
+    options = {"model__photosphere": photosphere, "sampling__max_steps": 64} | KEEP_DRAWS
+
+    def fitted(name, table, earlier=()):
+        run = survey(tmp_path, name, table, earlier=earlier, **options)
+        job = replace(run.job, stages=fitting_stages(), model=build_model(run.job.settings))
+        return fits(run), replace(run, job=job).finish()
+
+    table = stars(6)
+    _, before = fitted("before", table)
+    again, same = fitted("same", table, [before])
+    assert again == 0
+    assert bytes_of(same) == bytes_of(before)
+    later = changed(table.take(pa.array([5, 1, 3, 0])), [1, 2])
+    some, after = fitted("after", later, [before])
+    assert some == 2
+    assert bytes_of(after) == bytes_of(fitted("fresh", later)[1])
 
 
 def test_rows_set_aside_for_faults_stay_so_under_their_new_place(tmp_path):

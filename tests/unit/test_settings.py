@@ -59,12 +59,7 @@ def only_problem(**changes) -> str:
 
 
 ANYTHING = st.recursive(
-    st.booleans()
-    | st.integers()
-    | st.floats()
-    | st.text()
-    | st.dates()
-    | st.sampled_from(["mag", "Jy", "in"]),
+    st.booleans() | st.integers() | st.floats() | st.text() | st.dates() | st.sampled_from(["mag", "Jy", "in"]),
     lambda inner: st.lists(inner, max_size=3) | st.dictionaries(st.text(max_size=5), inner, max_size=3),
     max_leaves=5,
 )
@@ -100,9 +95,7 @@ class TestReading:
         (tmp_path / "far" / "configs").mkdir(parents=True)
         (tmp_path / "near").symlink_to(tmp_path / "far" / "configs")
         (tmp_path / "near" / "a.toml").write_text(TEMPLATE.read_text())
-        assert (
-            load_settings(tmp_path / "near" / "a.toml").run.output == tmp_path / "far" / "runs" / "my-survey"
-        )
+        assert load_settings(tmp_path / "near" / "a.toml").run.output == tmp_path / "far" / "runs" / "my-survey"
 
     def test_glob_patterns_survive(self):
         settings = build_settings(example(input__tables="night=*/part-[0-9].parquet"), "/survey")
@@ -155,9 +148,7 @@ class TestProblems:
         assert only_problem(inputs={}) == "inputs: unknown key (did you mean 'input'?)"
 
     def test_unknown_keys_name_their_home(self):
-        assert (
-            only_problem(run__rows_per_part=10) == "run.rows_per_part: unknown key (it belongs in [compute])"
-        )
+        assert only_problem(run__rows_per_part=10) == "run.rows_per_part: unknown key (it belongs in [compute])"
 
     def test_unknown_keys_do_not_hide_what_is_wrong_between_keys(self):
         lines = problems(input__photometry=[band(unit="mag", colour="blue"), band(), band("wise_w1", "w1")])
@@ -166,9 +157,7 @@ class TestProblems:
         assert "add system" in lines[1]
 
     def test_missing_keys_say_what_they_are(self):
-        assert (
-            only_problem(input__id=None) == "input.id is missing: Column of the star's id, integer or string."
-        )
+        assert only_problem(input__id=None) == "input.id is missing: Column of the star's id, integer or string."
         assert only_problem(run=None) == "run is missing: What the run is called and where its results go."
 
     @pytest.mark.parametrize(
@@ -208,6 +197,7 @@ class TestProblems:
             ({"output": {"rows_per_file": 0}}, "output.rows_per_file = 0: should be greater than 0"),
             ({"compute": {"workers": 0}}, 'compute.workers = 0: should be "auto" or a whole number above 0'),
             ({"compute": {"workers": "all"}}, "compute.workers = 'all'"),
+            ({"compute": {"row_seconds": 0}}, "compute.row_seconds = 0"),
             ({"compute": {"memory_per_worker": "2 gigs"}}, "compute.memory_per_worker: '2 gigs' is not"),
             ({"run__output": "tables/out"}, "run.output lies inside input.tables"),
         ],
@@ -266,8 +256,7 @@ class TestProblems:
             for key in ("mean", "scale")
         ]
         assert (
-            "model.extinction.mean has no use with prior = 'exponential'"
-            in problem(prior="exponential", mean="ebv")[0]
+            "model.extinction.mean has no use with prior = 'exponential'" in problem(prior="exponential", mean="ebv")[0]
         )
         assert "mean has no use" in problem(mean=0.5)[0]
         assert "name the column in mean" in problem(prior="fixed", scale="av")[0]
@@ -437,16 +426,14 @@ class TestFitSettings:
                 input__photometry=bands,
                 passband=[{"name": "unused", "curve": "u.ecsv", "detector": "photon"}],
                 output={"per_band": "none"},
-                compute={"workers": 3},
+                compute={"workers": 3, "row_seconds": 90},
             ),
             "/b",
         ).fit_settings()
         assert json.dumps(after) == json.dumps(before)
 
     def test_the_name_of_a_column_is_no_matter(self):
-        one, other = (
-            build_settings(example(model={"extinction": {"scale": name}})).fit_settings() for name in "ab"
-        )
+        one, other = (build_settings(example(model={"extinction": {"scale": name}})).fit_settings() for name in "ab")
         assert one == other
 
 

@@ -46,7 +46,8 @@ def trimmed(packed: bytes, total: Any) -> bytes:
     sums = unpack_audit(packed)
     if sums is None:
         return packed
-    return pack(_at(sums, np.isin(sums.key, together(total, sums).key)))
+    all_stars: Any = together(total, sums)
+    return pack(_at(sums, np.isin(sums.key, all_stars.key)))
 
 
 def pack(record: Any) -> bytes:
