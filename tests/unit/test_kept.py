@@ -154,18 +154,25 @@ def test_stars_fitted_before_and_now_are_as_if_fitted_together(tmp_path, photosp
 
 
 def test_rows_set_aside_for_faults_stay_so_under_their_new_place(tmp_path):
-    table = stars(12)
-    set_aside = {0: [SetAside(2, "took too long", "more than 45 s")], 2: [SetAside(0, "stage raised", "KeyError")]}
-    before = survey(tmp_path, "before", table).finish(set_aside)
-    later = changed(table.take(pa.array([11, 8, 7, 2, 0, 1])), [5])
-    after = survey(tmp_path, "after", later, [2], earlier=[before], part_rows=3).finish()
-    faults = [row for row in rows_of(after, "rejected").to_pylist() if row["kind"] == "fault"]
-    columns = ("star_id", "input_file", "input_row", "reason", "detail")
-    assert [tuple(row[name] for name in columns) for row in faults] == [
-        (9, "0.parquet", 1, "stage raised", "KeyError"),
-        (3, "1.parquet", 1, "took too long", "more than 45 s"),
-    ]
-    assert len(rows_of(after, "index")) == len(later)
+    """They stand among rows that their data had rejected, as if the faults had happened there again."""
+    table, faults = stars(40), {3: "stage raised", 14: "took too long", 31: "worker died", 32: "took too long"}
+
+    def set_aside(table, part_rows):
+        places = [(place, faults[star]) for place, star in enumerate(table["star_id"].to_pylist()) if star in faults]
+        rows = [(place // part_rows, SetAside(place % part_rows, reason, f"{reason}!")) for place, reason in places]
+        return {part: [row for number, row in rows if number == part] for part, _ in rows}
+
+    before = survey(tmp_path, "before", table, part_rows=7).finish(set_aside(table, 7))
+    later = changed(table.take(pa.array(np.random.default_rng(2).permutation(40)[:36])), range(0, 36, 2))
+    still = later.filter(pa.array(np.arange(36) % 2 != 0))
+    kept_faults = [star for star in still["star_id"].to_pylist() if star in faults]
+    assert 0 < len(kept_faults) < len(faults)
+    after = survey(tmp_path, "after", later, earlier=[before], part_rows=12)
+    faults = {star: faults[star] for star in kept_faults}
+    fresh = survey(tmp_path, "fresh", later, part_rows=12).finish(set_aside(later, 12))
+    assert bytes_of(after.finish()) == bytes_of(fresh)
+    rejected = rows_of(fresh, "rejected")
+    assert set(rejected["kind"].to_pylist()) == {"fault", "data"}
 
 
 def test_a_row_comes_from_the_newest_of_several_results(tmp_path):
