@@ -172,9 +172,9 @@ def _bytes_below(folder: Path) -> int:
 
 
 def _measured(function: Callable[..., dict[str, Any]], arguments: tuple[Any, ...]) -> dict[str, Any]:
-    before = peak_memory()
+    before, cpu_s = peak_memory(), time.process_time()
     found = function(*arguments)
-    return found | {"peak_memory": peak_memory(), "memory_before": before}
+    return found | {"cpu_s": time.process_time() - cpu_s, "peak_memory": peak_memory(), "memory_before": before}
 
 
 def apart(text: str, function: Callable[..., dict[str, Any]], *arguments: Any) -> None:

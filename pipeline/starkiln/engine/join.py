@@ -48,7 +48,7 @@ def join_bucket(
     new = new[np.argsort(new["row"])]
     copy = copies(mark_repeats(np.stack([new["id_hash"], new["more_hash"]], axis=1), new["row"]), new["row"])
     old = old[np.lexsort((old["source"], old["id_hash"]))]
-    match, known = _matches(new, old)
+    match, known, there = _matches(new, old)
     match[copy == 2] = -1
     kind = np.full(len(new), -1, np.int8)
     kind[match >= 0] = old["kind"][match[match >= 0]]
@@ -61,7 +61,7 @@ def join_bucket(
         failed=0 if retry_failed else _count(kind == FAULT),
         retried=_count(kind == FAULT) if retry_failed else 0,
         duplicate=_count(copy == 2),
-        gone=_count((old["published"] == 1) & ~np.isin(old["id_hash"], new["id_hash"])),
+        gone=_count((old["published"] == 1) & ~there),
     )
     notes = np.empty(len(new), NOTE)
     notes["row"], notes["copy"], notes["source"], notes["source_row"] = new["row"], copy, -1, -1
@@ -74,18 +74,37 @@ def _count(mask: NDArray[np.bool_]) -> int:
     return int(np.count_nonzero(mask))
 
 
-def _matches(new: NDArray[np.void], old: NDArray[np.void]) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
-    """Return each row's newest usable result, as a place in `old` or -1, and whether its id was published."""
+def _matches(
+    new: NDArray[np.void], old: NDArray[np.void]
+) -> tuple[NDArray[np.int64], NDArray[np.bool_], NDArray[np.bool_]]:
+    """Look rows up among earlier results, ordered by `id_hash` and then the newest first.
+
+    Returns
+    -------
+    Each row's newest usable result, as a place in `old` or -1; whether its id was published; and of each earlier
+    result whether its id is still there.
+    """
     # Columns of their own: searching a field of records would first copy it anyway.
     ids, row_hashes, kinds, published = (old[name].copy() for name in ("id_hash", "row_hash", "kind", "published"))
-    match, known = np.full(len(new), -1, np.int64), np.zeros(len(new), bool)
-    place, end = np.searchsorted(ids, new["id_hash"]), np.searchsorted(ids, new["id_hash"], side="right")
+    match, known, there = np.full(len(new), -1, np.int64), np.zeros(len(new), bool), np.zeros(len(old), bool)
+    place, end = _ranges(ids, new["id_hash"].copy())
     row = np.flatnonzero(place < end)
     while len(row):
         here = place[row]
+        there[here] = True
         known[row] |= published[here] == 1
         found = (match[row] < 0) & (kinds[here] != STALE) & (row_hashes[here] == new["row_hash"][row])
         match[row[found]] = here[found]
         place[row] += 1
         row = row[place[row] < end[row]]
-    return match, known
+    return match, known, there
+
+
+def _ranges(ids: NDArray[np.int64], wanted: NDArray[np.int64]) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Return where each wanted id begins and ends among ascending ids."""
+    # In ascending order the search stays near its last place in memory, and is several times as fast.
+    order = np.argsort(wanted, kind="stable")
+    first, last = np.empty(len(wanted), np.int64), np.empty(len(wanted), np.int64)
+    first[order] = np.searchsorted(ids, wanted[order])
+    last[order] = np.searchsorted(ids, wanted[order], side="right")
+    return first, last
