@@ -1,7 +1,6 @@
 """The tasks of a run: parts cut, fitted whole or in pieces, and put together again."""
 
 import itertools
-import os
 from dataclasses import replace
 
 import numpy as np
@@ -14,6 +13,7 @@ from hypothesis import strategies as st
 from fake_stages import by_content, lose_a_row, raise_always, raise_at_failing_id
 from part_runs import bytes_of, plan_run, rows_of, write_tables
 from small_survey import stars, with_column
+from starkiln.engine import tasks
 from starkiln.engine.closing import part_path
 from starkiln.engine.records import Guard, SetAside
 from starkiln.engine.tasks import assemble_part, cut_unit, fit_rows, remove_pieces, set_row_aside
@@ -62,9 +62,17 @@ def test_only_parts_that_are_wanted_are_cut(tmp_path, table):
     assert len(list(run.job.scratch.iterdir())) == 2
 
 
-def test_input_that_has_changed_since_the_plan_is_trouble(tmp_path, table):
+def test_input_that_has_changed_since_the_plan_is_trouble_and_not_damaged(tmp_path, table):
     run, unit = one_unit(tmp_path, table)
-    os.utime(run.job.source.files[0].path, ns=(0, 0))
+    run.job.source.files[0].path.write_bytes(b"PAR1 is being written again")
+    with pytest.raises(EnvironmentTrouble, match=r"a\.parquet has changed since the run was planned"):
+        run.cut(unit)
+
+
+def test_input_that_changes_while_it_is_read_is_trouble(tmp_path, table, monkeypatch):
+    run, unit = one_unit(tmp_path, table)
+    stamps = iter([*run.job.stamps, (1, 1)])
+    monkeypatch.setattr(tasks, "file_stamp", lambda path: next(stamps))
     with pytest.raises(EnvironmentTrouble, match=r"a\.parquet has changed since the run was planned"):
         run.cut(unit)
 
