@@ -1,5 +1,6 @@
 """Rows that no stage can do: they are found and set aside, and no other row is the worse for it."""
 
+import json
 import random
 import sqlite3
 import time
@@ -12,7 +13,7 @@ import pytest
 
 from fake_stages import FAILING_ID, pass_through, stages
 from pipeline_survey import write
-from real_runs import ended, workers_of
+from real_runs import ended
 from small_survey import settings_for, stars
 from starkiln.engine.run import run_settings
 
@@ -123,18 +124,26 @@ def test_a_small_run_that_hangs_ends_and_the_next_one_finds_the_row(start, setti
 def test_workers_that_are_killed_from_outside_blame_no_row(start, settings_of):
     settings = settings_of(compute__rows_per_part=2)
     process = start(settings, "take_a_moment")
-    marks = settings.run.output / "generations"
-    chance = random.Random(7)
-    killed = 0
+    chance, killed = random.Random(7), 0
     while process.poll() is None:
-        # A worker that is killed before it begins anything only takes the test longer.
-        workers = workers_of(process.pid)
-        if workers and list(marks.glob("*.partial/started/fit-*")):
-            with suppress(psutil.Error):
-                chance.choice(workers).kill()
-                killed += 1
-        time.sleep(2)
+        at_work = workers_at_work(settings.run.output)
+        if at_work and killed < 8:
+            chance.choice(at_work).kill()
+            killed += 1
+            time.sleep(2)
+        time.sleep(0.1)
     code, out, err = ended(process)
     assert code == 0, (out, err)
-    assert killed >= 2
+    assert killed >= 3
+    outcomes = {outcome for (outcome,) in told(settings.run.output, "SELECT outcome FROM attempts")}
+    assert outcomes == {"done", "died"}
     assert_only_these_are_set_aside(settings_of, settings.run.output, [], "")
+
+
+def workers_at_work(run_dir):
+    """The workers that have marked a task as begun; one that dies while it starts is away for long."""
+    found = []
+    for mark in run_dir.glob("generations/*.partial/started/fit-*"):
+        with suppress(psutil.Error, OSError, ValueError, TypeError):
+            found.append(psutil.Process(json.loads(mark.read_text())["pid"]))
+    return found
