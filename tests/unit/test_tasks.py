@@ -14,10 +14,13 @@ from fake_stages import by_content, lose_a_row, raise_always, raise_at_failing_i
 from part_runs import bytes_of, plan_run, rows_of, write_tables
 from small_survey import stars, with_column
 from starkiln.engine import tasks
+from starkiln.engine.audits import unpack_audit
 from starkiln.engine.closing import part_path
 from starkiln.engine.records import Guard, SetAside
 from starkiln.engine.tasks import assemble_part, cut_unit, fit_rows, remove_pieces, set_row_aside
 from starkiln.errors import EnvironmentTrouble
+from starkiln.inference.audit import AuditSums, no_stars
+from starkiln.inference.posterior import Block
 
 ROWS = 24
 
@@ -136,6 +139,22 @@ def test_pieces_make_the_part_that_is_fitted_whole(tmp_path_factory, cuts, alone
         assert tables_of(joined)[name].equals(tables_of(whole)[name])
     assert (joined.reasons, joined.flags, joined.fitted) == (whole.reasons, whole.flags, whole.fitted)
     assert all(written.tmp_path.name.startswith(".part-000000.parquet.") for written in joined.written.values())
+
+
+def test_what_rows_say_of_zero_points_goes_with_them(tmp_path, table):
+    run, unit = one_unit(tmp_path, table, with_audit)
+    (part,) = run.cut(unit)
+    pieces = (run.fit(part, 0, 7), set_row_aside(run.job, part, SetAside(7, "", "")), run.fit(part, 8, ROWS))
+    assert unpack_audit(run.fit(part).audit).key.tolist() == [*range(ROWS)]
+    assert unpack_audit(assemble_part(run.job, part, pieces).audit).key.tolist() == [*range(7), *range(8, ROWS)]
+
+
+def with_audit(table, settings, model):
+    """Give each row a star of its own in the audit."""
+    none, keys = no_stars(3), table["_input_row"].to_numpy().astype(np.uint64)
+    columns = (np.zeros((len(keys), *column.shape[1:]), column.dtype) for column in none.block)
+    sums = AuditSums(keys, keys > 3, np.zeros((len(keys), none.points.shape[1])), Block(*columns))
+    return replace(by_content(table, settings, model), audit=sums)
 
 
 def tables_of(fitted):
