@@ -260,6 +260,17 @@ def test_parts_that_are_damaged_or_gone_are_left_out(survey):
     assert found(survey, [build]).sources == ()
 
 
+def test_reading_through_parts_can_be_stopped(survey):
+    source, settings, run_dir = survey
+    build = build_of(run_dir, settings, [stars(3), stars(3, 4)])
+
+    def stop():
+        raise KeyboardInterrupt
+
+    with pytest.raises(KeyboardInterrupt):
+        find_earlier(run_dir, [build], settings, hashes_of(settings, NoModel()), source, refit_all=False, check=stop)
+
+
 def test_builds_of_another_fit_are_left_out(survey):
     build = build_of(survey[2], survey[1], [stars(3)])
     assert len(found(survey, [build]).sources) == 1

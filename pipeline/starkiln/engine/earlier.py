@@ -6,7 +6,7 @@ import hashlib
 import json
 import re
 import tomllib
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -94,6 +94,7 @@ def find_earlier(
     source: Source,
     *,
     refit_all: bool,
+    check: Callable[[], None] = lambda: None,
 ) -> Earlier:
     """Return the results that a run can take rows from.
 
@@ -111,13 +112,16 @@ def find_earlier(
         Its input.
     refit_all
         Whether only results of builds that refitted all rows themselves count.
+    check
+        Called for each part whose files are read through; may raise to stop.
     """
     wanted = catalogue_schema(settings, *output_fields(source.schema, settings))
     fitted = [field for field in wanted if field.name not in (settings.input.id, *settings.input.carry)]
     sources = []
     for build, parts in sorted(builds, key=lambda pair: -pair[0].number):
         same = build.fit_key == hashes["fit_key"] and build.refit_all >= refit_all
-        found = _build_source(run_dir / "generations" / f"{build.number:06d}.partial", parts, fitted) if same else None
+        folder = run_dir / "generations" / f"{build.number:06d}.partial"
+        found = _build_source(folder, parts, fitted, check) if same else None
         if found is not None:
             sources.append(found)
     facts = published_facts(run_dir)
@@ -130,9 +134,15 @@ def find_earlier(
     return Earlier(tuple(sources), why)
 
 
-def _build_source(folder: Path, parts: Mapping[int, DonePart], fitted: Sequence[pa.Field]) -> EarlierSource | None:
+def _build_source(
+    folder: Path, parts: Mapping[int, DonePart], fitted: Sequence[pa.Field], check: Callable[[], None]
+) -> EarlierSource | None:
     """Return the parts of a build that are as they were written, None if there are none or its columns do not do."""
-    whole = [number for number, part in sorted(parts.items()) if _is_whole(folder / "parts", part)]
+    whole = []
+    for number, part in sorted(parts.items()):
+        check()
+        if _is_whole(folder / "parts", part):
+            whole.append(number)
     catalogues = [_part(folder, "catalogue", number) for number in whole]
     if not whole or _missing_columns(catalogues[0], fitted):
         return None
