@@ -6,6 +6,7 @@ The suite tries a few dozen surveys; STARKILN_FUZZ_CASES=2000 tries so many.
 import copy
 import json
 import os
+import shutil
 import tempfile
 from collections import Counter
 from pathlib import Path
@@ -13,6 +14,7 @@ from pathlib import Path
 import pyarrow as pa
 import pyarrow.parquet as pq
 from hypothesis import HealthCheck, event, given, settings
+from hypothesis import strategies as st
 
 from odd_tables import TAG, Survey, stages, surveys
 from starkiln.engine.run import run_settings
@@ -38,6 +40,10 @@ def run(survey: Survey, folder: Path, output: str):
         return error
 
 
+def facts_of(generation: Path) -> dict:
+    return json.loads((generation / "run.json").read_text())
+
+
 def read(generation: Path, table: str) -> pa.Table | None:
     paths = sorted((generation / table).rglob("*.parquet"))
     return pa.concat_tables([pq.ParquetFile(path).read() for path in paths]) if paths else None
@@ -50,7 +56,7 @@ def column(generation: Path, table: str, name: str) -> list:
 
 def check_rows(survey: Survey, result) -> None:
     """Every row is in the catalogue or among the rejected, and the counts say so."""
-    facts = json.loads((result.path / "run.json").read_text())
+    facts = facts_of(result.path)
     counts, used = result.counts, {file["name"] for file in facts["input"]["files"]}
     assert result.exit_code == (4 if facts["input"]["skipped"] else 0)
     assert counts["read"] == counts["filtered"] + counts["selected"]
@@ -74,9 +80,33 @@ def check_rows(survey: Survey, result) -> None:
     assert len(set(stars)) == len(stars)
 
 
+CHANGES = ("renamed", "in other groups", "some gone", "carried", "other values")
+
+
+def check_another_night(survey: Survey, folder: Path, how: str, seed: int) -> None:
+    """Run again: first with nothing to do, then with other tables, which must give what a run of those alone gives."""
+    published = (folder / "run" / "current").resolve()
+    again = run(survey, folder, "run")
+    assert not isinstance(again, StarkilnError), again
+    assert (folder / "run" / "current").resolve() == published
+    shutil.rmtree(folder / "tables")
+    other = survey.changed(how, seed)
+    other.write(folder)
+    refit, fresh = run(other, folder, "run"), run(other, folder, "fresh")
+    if isinstance(fresh, StarkilnError):
+        assert isinstance(refit, StarkilnError)
+        assert refit.exit_code == fresh.exit_code
+        return
+    check_rows(other, fresh)
+    assert not isinstance(refit, StarkilnError), refit
+    assert facts_of(folder / "run" / "current")["files"] == facts_of(fresh.path)["files"]
+    if how == "carried" and survey.settings["input"]["carry"][-1] != TAG:
+        assert facts_of(folder / "run" / "current")["rows"]["changed"] == 0
+
+
 @fuzzed
-@given(surveys())
-def test_any_survey_is_published_row_by_row_or_refused_in_words(survey):
+@given(surveys(), st.sampled_from(CHANGES), st.integers(0, 2**32 - 1))
+def test_any_survey_is_published_row_by_row_or_refused_in_words(survey, how, seed):
     with tempfile.TemporaryDirectory() as made:
         folder = Path(made)
         survey.write(folder)
@@ -86,5 +116,6 @@ def test_any_survey_is_published_row_by_row_or_refused_in_words(survey):
             assert result.exit_code in (2, 3), result
             assert str(result)
             return
-        event(f"published with {result.exit_code}")
+        event(f"published with {result.exit_code}, then {how}")
         check_rows(survey, result)
+        check_another_night(survey, folder, how, seed)
