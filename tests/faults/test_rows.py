@@ -122,12 +122,12 @@ def test_a_small_run_that_hangs_ends_and_the_next_one_finds_the_row(start, setti
 
 
 def test_workers_that_are_killed_from_outside_blame_no_row(start, settings_of):
-    settings = settings_of(compute__rows_per_part=2)
+    settings = settings_of(compute__rows_per_part=5)
     process = start(settings, "take_a_moment")
     chance, killed = random.Random(7), 0
     while process.poll() is None:
         at_work = workers_at_work(settings.run.output)
-        if at_work and killed < 8:
+        if at_work and killed < 5:
             chance.choice(at_work).kill()
             killed += 1
             time.sleep(2)

@@ -49,7 +49,15 @@ class Client:
         for address in addresses:
             self.workers[address] = {"local_directory": folder, "nanny": nanny, "nthreads": nthreads}
 
-    def scheduler_info(self):
+    @property
+    def scheduler(self):
+        return self
+
+    def sync(self, function, **options):
+        return function(**options)
+
+    def identity(self, n_workers):
+        assert n_workers == -1
         if self.error:
             raise self.error
         return {"workers": self.workers}
@@ -208,6 +216,26 @@ def test_a_worker_that_starts_anew_under_its_old_address_is_asked_again(client, 
     client.agree()
     executor.next_finished()
     assert executor._agreed == {"tcp://1": "b"}
+
+
+def test_a_worker_that_is_back_is_asked_again(client, executor):
+    client.add("tcp://1")
+    look(executor, client)
+    away = client.workers.copy()
+    client.workers.clear()
+    look(executor, client)
+    assert executor._agreed == {}
+    client.workers = away
+    look(executor, client)
+    assert executor._agreed == {"tcp://1": "a"}
+
+
+def test_a_worker_that_was_refused_is_not_asked_again(client, executor):
+    client.add("tcp://1")
+    look(executor, client, "another version")
+    look(executor, client)
+    assert executor._agreed == {}
+    assert len(client.sent) == 1
 
 
 def test_a_result_that_is_lost_is_waited_for(client, executor):

@@ -32,6 +32,9 @@ LOST_WORKER_SECONDS = 30.0
 NO_WORKERS_SECONDS = 120.0
 """Without any worker for so long, the run ends."""
 
+SILENT_WORKER_SECONDS = 3600.0
+"""A worker without a sign of life for so long is ended. Tasks end hung ones long before, and tell which row it was."""
+
 KILL_SECONDS = 0.1
 
 
@@ -191,6 +194,7 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
     options = {
         "distributed.scheduler.allowed-failures": WORKER_DEATHS_ALLOWED,
         "distributed.scheduler.no-workers-timeout": NO_WORKERS_SECONDS,
+        "distributed.scheduler.worker-ttl": SILENT_WORKER_SECONDS,
         "distributed.deploy.lost-worker-timeout": LOST_WORKER_SECONDS,
         "distributed.nanny.pre-spawn-environ": {**one_thread, "MALLOC_TRIM_THRESHOLD_": "65536"},
         "distributed.comm.require-encryption": True,

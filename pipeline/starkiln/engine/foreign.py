@@ -78,7 +78,6 @@ class ForeignExecutor:
         self._vetting: dict[tuple[str, str], Any] = {}
         self._agreed: dict[str, str] = {}
         self._refused: dict[tuple[str, str], str] = {}
-        self._seen: set[tuple[str, str]] = set()
         self._serial = itertools.count()
         self._next_look = 0.0
         self._had_worker = time.monotonic()
@@ -192,8 +191,7 @@ class ForeignExecutor:
                 del self._agreed[address]
                 self._log.write("worker", address=address, state="gone")
         for worker in workers.items():
-            if worker not in self._seen:
-                self._seen.add(worker)
+            if worker not in self._vetting and worker not in self._refused and worker not in self._agreed.items():
                 self._vet(worker, found[worker[0]])
         self._take_verdicts(workers)
         self._send_again()
@@ -207,7 +205,8 @@ class ForeignExecutor:
 
     def _ask(self) -> dict[str, Any]:
         try:
-            return dict(self._client.scheduler_info()["workers"])
+            # The client's scheduler_info() now and then has no workers: another thread of it asks for the totals only.
+            return dict(self._client.sync(self._client.scheduler.identity, n_workers=-1)["workers"])
         except Exception as error:
             raise ClusterTrouble(
                 f"the scheduler {self._address} cannot be reached any more ({error}); run again when mended"
