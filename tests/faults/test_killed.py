@@ -3,6 +3,7 @@
 import json
 import os
 import signal
+import sqlite3
 
 import psutil
 import pytest
@@ -23,9 +24,15 @@ def settings(tmp_path):
     return settings_for(folder, tmp_path / "run", compute__workers=2, compute__rows_per_part=10)
 
 
+def events(run_dir):
+    """What the newest log of a run directory tells."""
+    lines = max((run_dir / "logs").iterdir()).read_text().splitlines()
+    return [json.loads(line)["event"] for line in lines]
+
+
 def busy(tmp_path, process):
-    """Wait until parts are being fitted."""
-    wait_until(process, lambda: list((tmp_path / "run").glob("generations/*.partial/parts/catalogue/part-*")))
+    """Wait until a part is done and others are being fitted."""
+    wait_until(process, lambda: list((tmp_path / "run").glob("logs/*")) and "part" in events(tmp_path / "run"))
 
 
 def files_of(generation):
@@ -45,36 +52,21 @@ def test_a_killed_worker_costs_time_only(start, tmp_path, settings):
     assert len(files_of(expected)) == 3
 
 
-def test_a_task_that_kills_each_worker_it_gets_ends_with_1_and_a_remedy(start, tmp_path, settings):
-    code, out, err = ended(start(settings, "kill_worker"))
-    assert (code, out) == (1, "")
-    assert err == (
-        "starkiln: part 1 of 10 rows failed: its worker died 4 times; "
-        "if memory ran out, raise compute.memory_per_worker\n"
-    )
-    assert not (tmp_path / "run" / "current").exists()
+def set_aside(run_dir):
+    with sqlite3.connect(run_dir / "ledger.sqlite") as ledger:
+        return ledger.execute("SELECT * FROM set_aside").fetchall()
 
 
-def test_a_stage_that_raises_ends_with_1_and_names_the_part(start, tmp_path, settings):
-    code, out, err = ended(start(settings, "raise_at_failing_id"))
-    assert (code, out) == (1, "")
-    assert err == (
-        "starkiln: part 1 of 10 rows failed: ArithmeticError: the stage has a bug "
-        "(a bug: please report it, with what --debug shows)\n"
-    )
-    assert not (tmp_path / "run" / "current").exists()
-    assert sorted(path.name for path in (tmp_path / "run").iterdir()) == ["generations", "lock", "logs"]
-
-
+@pytest.mark.parametrize("whole_group", [False, True])
 @pytest.mark.parametrize("pause", [0.0, 5.0])
-def test_after_a_killed_run_no_worker_is_left_and_the_next_run_starts_cleanly(start, tmp_path, settings, pause):
+def test_after_a_killed_run_no_worker_is_left_and_the_next_run_goes_on(start, tmp_path, settings, pause, whole_group):
     process = start(settings, "take_a_moment")
     with process:
         busy(tmp_path, process)
         workers = psutil.Process(process.pid).children(recursive=True)
-        os.kill(process.pid, signal.SIGKILL)
+        (os.killpg if whole_group else os.kill)(process.pid, signal.SIGKILL)
     run_dir = tmp_path / "run"
-    assert {"generations", "lock", "logs", "scratch"} == {path.name for path in run_dir.iterdir()}
+    assert {"ledger.sqlite", "scratch"} <= {path.name for path in run_dir.iterdir()}
     assert [path.name for path in (run_dir / "generations").iterdir()] == ["000001.partial"]
     if pause:
         psutil.wait_procs(workers, timeout=pause)
@@ -82,5 +74,9 @@ def test_after_a_killed_run_no_worker_is_left_and_the_next_run_starts_cleanly(st
     assert ended(start(settings, "pass_through"))[0::2] == (0, "")
     assert [path.name for path in (run_dir / "generations").iterdir()] == ["000001"]
     assert not (run_dir / "scratch").exists()
+    assert not (run_dir / "planning").exists()
     assert not list(run_dir.rglob("*.tmp"))
     assert still_running(workers) == []
+    assert "resume" in events(run_dir)
+    assert events(run_dir).count("part") < 10
+    assert set_aside(run_dir) == []

@@ -159,7 +159,7 @@ def test_run_json_tells_the_whole_story(survey):
     assert facts["name"] == "tamarin"
     assert facts["exit_code"] == 0
     assert facts["start"] < facts["end"]
-    assert set(facts["seconds"]["wall"]) == {"open", "plan", "work", "pack"}
+    assert set(facts["seconds"]["wall"]) == {"open", "plan", "warm up", "work", "pack"}
     assert set(facts["seconds"]["summed_over_workers"]) == {"cut", "keep", "process", "write"}
     assert facts["stars_per_second"] > 0
     assert min(facts["peak_memory_bytes"].values()) > 50e6

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+import sys
+import threading
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from functools import partial
 from pathlib import Path
@@ -24,13 +26,15 @@ from starkiln.engine.ledger import Ledger
 from starkiln.engine.pace import Limits, Pace
 from starkiln.engine.plan import load_plan, make_plan, rows_per_part, save_plan
 from starkiln.engine.provenance import digest
-from starkiln.engine.records import Build, DonePart, Plan, PlannedFile
+from starkiln.engine.records import Build, DonePart, Guard, Plan, PlannedFile
 from starkiln.engine.resources import worker_count
 from starkiln.engine.stopping import RunStopped, StopFlag
 from starkiln.engine.store import PartStore, make_part_folders, sound_parts
 from starkiln.engine.tally import Tally
 from starkiln.engine.work import Work, clear_marks
 from starkiln.settings import Settings
+
+TOLD_BEFORE_SECONDS = 0.5
 
 KEPT_ROWS_LIKE_ONE_FITTED = 200
 """So many rows can be taken over while one is fitted."""
@@ -307,16 +311,22 @@ class Making:
                 bench.laps.lap("start workers")
                 yield foreign, job.save(identity)
         elif self._is_small() and not safely:
+            self._warm_up()
             yield _InterruptedExecutor(bench.stop), job
         else:
-            bench.progress.begin("warming up", 0)
-            with bench.stop.at_once():
-                bench.stages.warm_up(bench.settings, bench.model)
-            bench.laps.lap("warm up")
+            self._warm_up()
             workers = min(worker_count(bench.settings), left)
             with open_cluster(workers, bench.settings.compute.memory_per_worker_bytes, bench.scratch) as cluster:
                 bench.laps.lap("start workers")
                 yield cluster, job.save()
+
+    def _warm_up(self) -> None:
+        """Compile what the stages need, so that no task takes long for it."""
+        bench = self._bench
+        bench.progress.begin("warming up", 0)
+        with bench.stop.at_once():
+            bench.stages.warm_up(bench.settings, bench.model)
+        bench.laps.lap("warm up")
 
     def close(self) -> dict[str, Any]:
         """Pack the parts into the files of the generation, and return its run.json, which is written last."""
@@ -361,13 +371,41 @@ class Making:
 
 
 class _InterruptedExecutor(SerialExecutor):
-    """Runs tasks in this process; a signal, or the end of the time, interrupts the one that runs."""
+    """Runs tasks in this process; a signal, or the end of the time, interrupts the one that runs.
+
+    One that hangs ends this process, and then says so.
+    """
 
     def __init__(self, stop: StopFlag) -> None:
         super().__init__()
         self._stop = stop
 
+    def submit(self, key: str, function: Callable[..., Any], *args: Any, urgent: bool = False) -> None:
+        """Take a task; urgent ones go before the others."""
+        super().submit(key, _hanging_told, function, *args, urgent=urgent)
+
     def next_finished(self) -> Finished | None:
         """Run the next task."""
         with self._stop.at_once():
             return super().next_finished()
+
+
+def _hanging_told(function: Callable[..., Any], *args: Any) -> Any:
+    """Do a task, and tell shortly before its guard ends this process."""
+    limits = [argument.limit_s for argument in args if isinstance(argument, Guard)]
+    told = threading.Timer(max(min(limits, default=0.0) - TOLD_BEFORE_SECONDS, 0.0), _tell_hanging)
+    if limits:
+        told.daemon = True
+        told.start()
+    try:
+        return function(*args)
+    finally:
+        told.cancel()
+
+
+def _tell_hanging() -> None:
+    print(
+        "starkiln: a row takes too long, and ends this process; run again: worker processes will set it aside",
+        file=sys.stderr,
+        flush=True,
+    )

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from pathlib import Path
 
+from starkiln.engine.audits import trimmed
 from starkiln.engine.bench import Bench
 from starkiln.engine.closing import part_path
 from starkiln.engine.disk import disk_trouble
@@ -102,7 +103,7 @@ class PartStore:
             files=files,
             reasons=fitted.reasons,
             flags=fitted.flags,
-            audit=fitted.audit,
+            audit=trimmed(fitted.audit, self._tally.audit),
             seconds=fitted.seconds,
             peak_memory=fitted.peak_memory,
             host=fitted.host,
