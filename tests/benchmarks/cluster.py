@@ -46,8 +46,8 @@ def main() -> None:
         on_cluster(folder, shared, stars // PART_ROWS)
         start = time.monotonic()
         process = start_run(folder, local, "", "--quiet", main=MAIN)
-        process.communicate()
-        print(f"two workers of its own: exit {process.returncode} after {time.monotonic() - start:.0f} s")
+        _, errors = process.communicate()
+        print(f"two workers of its own: exit {process.returncode} after {time.monotonic() - start:.0f} s", errors)
         for table in ("catalogue", "rejected", "index"):
             same = rows_of(local, table).equals(rows_of(shared, table))
             print(f"{table}: {rows_of(local, table).num_rows} rows, {'the same' if same else 'OTHER'} bits")
