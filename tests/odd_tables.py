@@ -112,18 +112,15 @@ class Survey:
         tables = {name: pa.concat_tables(g) for name, g in self.files.items() if not isinstance(g, bytes)}
         others = {name: groups for name, groups in self.files.items() if isinstance(groups, bytes)}
         if how == "renamed":
-            files = {f"{name.rpartition('/')[0]}/{99 - k}": [table] for k, (name, table) in enumerate(tables.items())}
+            files = {str(Path(name).with_name(f"{99 - k}")): [table] for k, (name, table) in enumerate(tables.items())}
         elif how == "in other groups":
             whole = pa.concat_tables(tables.values(), promote_options="default")
             files = {f"all{k}": [whole[k : k + 5], whole[k + 5 : k + 7]] for k in range(0, max(1, len(whole)), 7)}
         elif how == "some gone":
-            files = {name: [table.filter(pa.array(random.random(len(table)) < 0.7))] for name, table in tables.items()}
+            files = {name: [table[: len(table) // 3], table[len(table) // 2 :]] for name, table in tables.items()}
         else:
-            column = (
-                self.settings["input"]["carry"][-1]
-                if how == "carried"
-                else self.settings["input"]["photometry"][0]["value"]
-            )
+            inputs = self.settings["input"]
+            column = inputs["carry"][-1] if how == "carried" else inputs["photometry"][0]["value"]
             files = {name: [_shuffled(random, table, column)] for name, table in tables.items()}
         return Survey(files | others, self.settings, self.targets, self.keep)
 

@@ -13,6 +13,7 @@ from pathlib import Path
 
 import pyarrow as pa
 import pyarrow.parquet as pq
+import pytest
 from hypothesis import HealthCheck, event, given, settings
 from hypothesis import strategies as st
 
@@ -22,6 +23,8 @@ from starkiln.errors import StarkilnError
 from starkiln.settings import build_settings
 
 CASES = int(os.environ.get("STARKILN_FUZZ_CASES", "60"))
+
+pytestmark = [pytest.mark.slow, pytest.mark.timeout(600 + 10 * CASES)]
 
 fuzzed = settings(
     max_examples=CASES,
