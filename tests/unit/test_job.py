@@ -133,13 +133,9 @@ def with_warm_up(job):
     return replace(job, stages=replace(job.stages, warm_up=note_warm_up))
 
 
-def test_workers_of_the_run_itself_need_no_warming_up(job, warmed):
-    open_job(with_warm_up(job).save())
-    assert warmed == []
-
-
-def test_a_worker_from_elsewhere_that_agrees_is_warmed_up_once(job, warmed):
-    saved = with_warm_up(job).save(make_identity(job.scratch))
+@pytest.mark.parametrize("from_elsewhere", [False, True])
+def test_a_worker_is_warmed_up_once_before_its_first_task(job, warmed, from_elsewhere):
+    saved = with_warm_up(job).save(make_identity(job.scratch) if from_elsewhere else None)
     opened = open_job(saved)
     assert open_job(saved) is opened
     assert warmed == [opened.model]

@@ -166,8 +166,7 @@ def _read_job(saved: SavedJob) -> Job:
     stages = Stages(named(saved.build_model), named(saved.process_part), named(saved.warm_up))
     model = stages.build_model(settings)
     _check_hashes(hashes(settings, model), data["hashes"])
-    if saved.identity is not None:
-        stages.warm_up(settings, model)
+    stages.warm_up(settings, model)  # what compiles here does not count as the time of a task
     return Job(
         source=Source(tuple(map(_source_file, data["files"])), _schema(data["schema"])),
         settings=settings,
