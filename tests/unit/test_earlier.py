@@ -260,6 +260,14 @@ def test_parts_that_are_damaged_or_gone_are_left_out(survey):
     assert found(survey, [build]).sources == ()
 
 
+def test_a_build_without_columns_that_are_asked_for_now_is_left_out(survey):
+    _, settings, run_dir = survey
+    then = settings_for(settings.input.tables, run_dir, output__per_band="residual", **DRAWS)
+    build = build_of(run_dir, then, [stars(3)])
+    assert found(survey, [build]).sources == ()
+    assert len(found(survey, [build], output__per_band="none").sources) == 1
+
+
 def test_reading_through_parts_can_be_stopped(survey):
     source, settings, run_dir = survey
     build = build_of(run_dir, settings, [stars(3), stars(3, 4)])

@@ -1,5 +1,6 @@
 import hashlib
 import os
+from dataclasses import replace
 from itertools import pairwise
 
 import numpy as np
@@ -83,6 +84,18 @@ def keys(settings):
 def test_settings_that_change_a_files_records_change_its_key(tmp_path, changes):
     _, settings = written(tmp_path / "input", [stars(3)])
     assert keys(settings) != keys(settings_for(tmp_path / "input", **changes))
+
+
+@pytest.mark.parametrize("use", ["bad", "limit", "value"])
+def test_which_column_stands_for_what_counts_for_the_key(tmp_path, use):
+    table = with_column(with_column(stars(3), "one", [1] * 3), "two", [1] * 3)
+    bands = [[band("panstarrs_g", **{use: name}), band("panstarrs_r"), band("panstarrs_i")] for name in ("one", "two")]
+    _, settings = written(tmp_path / "input", [table], input__photometry=bands[0])
+    other = settings_for(tmp_path / "input", input__photometry=bands[1])
+    # The schema of the columns used differs, too; here they are the same.
+    schema = open_source(settings_for(tmp_path / "input", input__carry=["one", "two"])).schema
+    seen = [file_key(replace(open_source(one), schema=schema), 0, one) for one in (settings, other)]
+    assert seen[0] != seen[1]
 
 
 def test_other_settings_and_other_files_do_not_change_a_files_key(tmp_path):
