@@ -303,7 +303,14 @@ def _short_of_bands(fault: NDArray[np.int8], settings: Settings) -> Rejection:
 
 
 def _fault_text(pattern: NDArray[np.int8], bands: Sequence[PhotometryColumns], needed: int) -> str:
+    faults = [fault_words(fault, band) for band, fault in zip(bands, pattern.tolist(), strict=True) if fault]
+    return f"{len(bands) - len(faults)} usable of {needed} needed: {', '.join(faults)}"
+
+
+def fault_words(fault: int, band: PhotometryColumns) -> str:
+    """Return in words why a band's value cannot be used, by the `fault` of its `BandValues`; nothing where it can."""
     told = {
+        _USABLE: "",
         _BAD: "{0.bad} is true",
         _NO_VALUE: "{0.value} has no value",
         _PLACEHOLDER: "{0.value} is a placeholder",
@@ -311,8 +318,7 @@ def _fault_text(pattern: NDArray[np.int8], bands: Sequence[PhotometryColumns], n
         _ERROR_NOT_POSITIVE: "{0.error} is not positive",
         _OUT_OF_RANGE: "{0.value} or {0.error} is out of range",
     }
-    faults = [told[fault].format(band) for band, fault in zip(bands, pattern.tolist(), strict=True) if fault]
-    return f"{len(bands) - len(faults)} usable of {needed} needed: {', '.join(faults)}"
+    return told[fault].format(band)
 
 
 def _kept_rows(table: pa.Table, settings: Settings, kept: NDArray[np.bool_]) -> pa.Table:
