@@ -12,9 +12,10 @@ _HOMES = {
     "read": "starkiln.tables.read",
     "units": "starkiln.tables.read",
     "descriptions": "starkiln.tables.read",
+    "write_parquet": "starkiln.tables.convert",
 }
 
-__all__ = ["RunResult", "__version__", "descriptions", "fit_table", "read", "run", "units"]
+__all__ = ["RunResult", "__version__", "descriptions", "fit_table", "read", "run", "units", "write_parquet"]
 
 
 def __getattr__(name: str) -> Any:

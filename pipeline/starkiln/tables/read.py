@@ -110,15 +110,17 @@ def _column(values: pa.ChunkedArray, field: pa.Field) -> Column | MaskedColumn:
     data = _numpy(values)
     if not values.null_count:
         return Column(data, **common)
-    return MaskedColumn(data, mask=pc.is_null(values).to_numpy(), **common)
+    mask = pc.is_null(values).to_numpy().reshape(-1, *[1] * (data.ndim - 1))
+    return MaskedColumn(data, mask=np.broadcast_to(mask, data.shape), **common)
 
 
 def _numpy(values: pa.ChunkedArray) -> np.ndarray:
     """Return an array of the exact type; a null becomes NaN, NaT, an empty string, False or 0."""
     kind = values.type
     if pa.types.is_fixed_size_list(kind):
-        flat = values.combine_chunks()
-        return np.array(flat.flatten().to_numpy(zero_copy_only=False)).reshape(len(values), kind.list_size)
+        lists = np.full((len(values), kind.list_size), np.nan, kind.value_type.to_pandas_dtype())
+        lists[pc.is_valid(values).to_numpy()] = pc.list_flatten(values).to_numpy().reshape(-1, kind.list_size)
+        return lists
     if pa.types.is_string(kind):
         return np.array(values.fill_null("").to_pylist(), dtype=str)
     if pa.types.is_floating(kind):

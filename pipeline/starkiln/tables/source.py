@@ -176,6 +176,14 @@ def _with_unit(field: pa.Field, unit: str) -> pa.Field:
     return field.with_metadata((field.metadata or {}) | {b"unit": unit.encode()})
 
 
+def _mask_problem(column: str, schema: pa.Schema) -> str | None:
+    """Tell of a mask in a column of its own: beneath it are no nulls but filler, often 0."""
+    places = schema.get_all_field_indices(f"{column}.mask")
+    if not places or not pa.types.is_boolean(schema.field(places[0]).type):
+        return None
+    return f"column {column!r} has its nulls in '{column}.mask', by astropy's writer: use starkiln.write_parquet"
+
+
 class _Columns:
     """The used columns as the files so far have them; a file that differs cannot be used."""
 
@@ -205,7 +213,7 @@ class _Columns:
                 return f"has {len(places)} columns {column!r} ({where})"
             return f"has no column {column!r}{nearest(column, schema.names)} ({where})"
         found = schema.field(places[0])
-        return column_problem(found, self._uses[column]) or self._drift(found)
+        return _mask_problem(column, schema) or column_problem(found, self._uses[column]) or self._drift(found)
 
     def _drift(self, found: pa.Field) -> str | None:
         agreed = self._agreed.get(found.name)
