@@ -8,6 +8,7 @@ import logging
 import os
 import queue
 import signal
+import tempfile
 from collections import deque
 from collections.abc import Callable, Iterator
 from concurrent.futures import CancelledError
@@ -196,7 +197,11 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
         "distributed.scheduler.no-workers-timeout": NO_WORKERS_SECONDS,
         "distributed.scheduler.worker-ttl": SILENT_WORKER_SECONDS,
         "distributed.deploy.lost-worker-timeout": LOST_WORKER_SECONDS,
-        "distributed.nanny.pre-spawn-environ": {**one_thread, "MALLOC_TRIM_THRESHOLD_": "65536"},
+        "distributed.nanny.pre-spawn-environ": {
+            **one_thread,
+            "MALLOC_TRIM_THRESHOLD_": "65536",
+            "TMPDIR": os.fspath(scratch),
+        },
         "distributed.comm.require-encryption": True,
         # Results are small; what a worker spills to disk it would unpickle from there.
         "distributed.worker.memory.target": False,
@@ -204,7 +209,7 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
         # What goes wrong comes back with the task; dask's own lines would only repeat it.
         "logging": {"distributed": "critical"},
     }
-    with dask.config.set(options), asyncio_silenced(), ExitStack() as stack:
+    with dask.config.set(options), asyncio_silenced(), _temporary_files_in(scratch), ExitStack() as stack:
         try:
             with interrupts_blocked():
                 cluster = stack.enter_context(
@@ -232,6 +237,17 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
         except BaseException:
             executor.abandon()
             raise
+
+
+@contextmanager
+def _temporary_files_in(folder: Path) -> Iterator[None]:
+    """Let libraries make their temporary files in a folder of this run: the system's may be small, or full."""
+    before = tempfile.tempdir
+    tempfile.tempdir = os.fspath(folder)
+    try:
+        yield
+    finally:
+        tempfile.tempdir = before
 
 
 @contextmanager
