@@ -197,11 +197,7 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
         "distributed.scheduler.no-workers-timeout": NO_WORKERS_SECONDS,
         "distributed.scheduler.worker-ttl": SILENT_WORKER_SECONDS,
         "distributed.deploy.lost-worker-timeout": LOST_WORKER_SECONDS,
-        "distributed.nanny.pre-spawn-environ": {
-            **one_thread,
-            "MALLOC_TRIM_THRESHOLD_": "65536",
-            "TMPDIR": os.fspath(scratch),
-        },
+        "distributed.nanny.pre-spawn-environ": {**one_thread, "MALLOC_TRIM_THRESHOLD_": "65536"},
         "distributed.comm.require-encryption": True,
         # Results are small; what a worker spills to disk it would unpickle from there.
         "distributed.worker.memory.target": False,
@@ -241,13 +237,20 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
 
 @contextmanager
 def _temporary_files_in(folder: Path) -> Iterator[None]:
-    """Let libraries make their temporary files in a folder of this run: the system's may be small, or full."""
-    before = tempfile.tempdir
-    tempfile.tempdir = os.fspath(folder)
+    """Let libraries, also in worker processes, make their temporary files in a folder of this run.
+
+    The system's may be small, or full.
+    """
+    before, variable = tempfile.tempdir, os.environ.get("TMPDIR")
+    tempfile.tempdir = os.environ["TMPDIR"] = os.fspath(folder)
     try:
         yield
     finally:
         tempfile.tempdir = before
+        if variable is None:
+            del os.environ["TMPDIR"]
+        else:
+            os.environ["TMPDIR"] = variable
 
 
 @contextmanager
