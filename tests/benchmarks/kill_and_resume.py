@@ -191,9 +191,9 @@ def main() -> None:
         expected = digest(catalogue_of(undisturbed / "current"))
         packing_s, end_s = spans_of(undisturbed)
         rows = FILES * ROWS_A_FILE
-        print(f"undisturbed: {rows} rows in {duration_s:.1f} s, the last {end_s - packing_s:.2f} s of them packing and publishing")
-        cases = [(random.uniform(0, duration_s), VICTIMS[n % 3]) for n in range(count)]
         late_s = duration_s - (end_s - packing_s)
+        print(f"undisturbed: {rows} rows in {duration_s:.1f} s, packing and publishing from {late_s:.1f} s on")
+        cases = [(random.uniform(0, duration_s), VICTIMS[n % 3]) for n in range(count)]
         cases += [(random.uniform(late_s, duration_s), VICTIMS[2 * (n % 2)]) for n in range(AIMED)]
         bad, states = 0, Counter()
         for number, (instant_s, victim) in enumerate(cases):

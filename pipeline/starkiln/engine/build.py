@@ -70,7 +70,8 @@ def recover(generations: Generations, ledger: Ledger, keep: int, log: EventLog) 
     complete, unfinished = set(generations.numbers()), set(generations.partials())
     for build in ledger.builds():
         if build.number in complete:
-            ledger.set_state(build.number, "published")
+            if build.state != "published":
+                ledger.set_state(build.number, "published")
         elif build.state == "published" or build.number not in unfinished:
             ledger.drop_build(build.number)
     generations.sweep({build.number for build in ledger.builds() if build.state != "published"})
