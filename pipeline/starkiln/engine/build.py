@@ -158,7 +158,15 @@ def planning_folder(settings: Settings) -> Path:
 
 def _make_plan(bench: Bench, folder: Path, left: list[tuple[Build, dict[int, DonePart]]]) -> Plan:
     settings, source, options = bench.settings, bench.source, bench.options
-    earlier = find_earlier(settings.run.output, left, settings, bench.hashes, source, refit_all=options.refit_all)
+    earlier = find_earlier(
+        settings.run.output,
+        left,
+        settings,
+        bench.hashes,
+        source,
+        refit_all=options.refit_all,
+        check=bench.stop.check,
+    )
     planned = 0
 
     def file_planned(file: PlannedFile, fresh: bool) -> None:
