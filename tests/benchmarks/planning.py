@@ -28,6 +28,7 @@ sys.path.insert(0, str(Path(__file__).parents[1]))
 
 from fake_stages import NoModel, stages
 from small_survey import settings_for, stars
+from starkiln.engine.buckets import BUCKET_ROWS
 from starkiln.engine.earlier import Earlier, find_earlier
 from starkiln.engine.job import Job
 from starkiln.engine.keys import ROWS_VERSION
@@ -85,7 +86,9 @@ def publish(folder: Path, share_changed: float) -> dict[str, Any]:
             "file": pa.repeat(pa.scalar(name), len(table)),
             "row": np.arange(len(table)),
         }
-        pq.write_table(pa.table(index, schema=index_schema()), generation / f"index/part-{number:06d}.parquet")
+        pq.write_table(
+            pa.table(index, schema=index_schema()), generation / f"index/part-{number:06d}.parquet", BUCKET_ROWS
+        )
         pq.write_table(schema.empty_table(), generation / name)
         files |= {name: {"rows": len(table)}, f"index/part-{number:06d}.parquet": {"rows": len(table)}}
     (generation / "settings.toml").write_text(dump_toml(settings))

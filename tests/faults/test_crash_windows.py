@@ -130,6 +130,7 @@ def test_a_run_that_dies_at_a_step_loses_nothing(start, tmp_path, survey, step):
     assert facts_of(result.path)["files"] == facts_of(undisturbed.path)["files"]
     assert result.counts == undisturbed.counts
     assert result.path == (run_dir / "current").resolve()
+    assert result.path.name == "000002", "what was done is not done again"
     nothing_is_left(run_dir)
     again = run_settings(settings, stages=stages(by_content))
     assert again.message.startswith("nothing to do")

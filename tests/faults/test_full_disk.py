@@ -54,7 +54,6 @@ def settings_on(tmp_path, place, workers):
         ("run", "900k", 1, False),
         ("run", "1100k", 2, True),
         ("scratch", "100k", 1, False),
-        ("scratch", "500k", 1, False),
         ("scratch", "500k", 2, True),
     ],
 )

@@ -6,7 +6,7 @@ import pytest
 
 from pipeline_survey import QUICK, blackbodies, write
 from small_survey import BANDS, band, settings_for, with_column
-from starkiln.engine import run
+from starkiln.engine import build
 from starkiln.engine.run import run_settings
 
 # The audit needs five bands; here the last two are the first again under other names.
@@ -36,7 +36,7 @@ def five_bands(rows):
 
 @pytest.mark.slow
 def test_one_worker_or_two_give_the_same_audit(tmp_path, monkeypatch):
-    monkeypatch.setattr(run, "SMALL_RUN_ROWS", 0)
+    monkeypatch.setattr(build, "SMALL_RUN_ROWS", -1)
     folder = write(tmp_path / "survey", a=five_bands(60))
     bands = [band(label) | {"passband": label.removesuffix("_again"), "label": label} for label in LABELS]
     changes = {"input__photometry": bands, "compute__rows_per_part": 13}

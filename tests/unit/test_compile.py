@@ -79,6 +79,15 @@ def test_a_full_disk_costs_the_cache_only(tmp_path):
     assert not list(tmp_path.rglob("*.nb*"))
 
 
+def test_a_small_disk_is_left_to_others_but_what_is_there_is_used(tmp_path):
+    small = "import shutil, types; shutil.disk_usage = lambda path: types.SimpleNamespace(free=10**6)"
+    environment = {"STARKILN_KERNEL_CACHE": str(tmp_path / "small"), "HOME": str(tmp_path / "home")}
+    assert call_kernel(small, **environment) == ("None", 1)
+    assert not list(tmp_path.rglob("*.nb*"))
+    folder, _ = call_kernel(**environment)
+    assert call_kernel(small, **environment) == (folder, 0)
+
+
 @pytest.mark.parametrize("home", [None, "/proc/no-home"])
 def test_without_a_home_that_can_be_written_the_cache_is_among_temporary_files(tmp_path, home):
     nobody = 'os.path.expanduser = lambda path: os.environ.get("HOME", path)'

@@ -2,6 +2,7 @@ import asyncio
 import gc
 import os
 import signal
+import tempfile
 import time
 import traceback
 
@@ -151,6 +152,20 @@ def test_workers_have_one_thread(cluster):
 def test_workers_store_no_objects_on_disk(cluster):
     cluster.submit("spill", spill_settings)
     assert next_of(cluster).result == [False, False]
+
+
+@pytest.mark.parametrize("variable", [None, "/tmp"])
+def test_temporary_files_are_in_the_folder_of_the_run(tmp_path, monkeypatch, variable):
+    monkeypatch.delenv("TMPDIR", raising=False)
+    if variable:
+        monkeypatch.setenv("TMPDIR", variable)
+    before = tempfile.gettempdir()
+    with open_cluster(1, MEMORY, tmp_path) as executor:
+        assert tempfile.gettempdir() == str(tmp_path)
+        executor.submit("temporary", tempfile.gettempdir)
+        assert next_of(executor).result == str(tmp_path)
+    assert tempfile.gettempdir() == before
+    assert os.environ.get("TMPDIR") == variable
 
 
 def test_nothing_listens_beyond_this_machine(cluster):

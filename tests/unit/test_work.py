@@ -297,6 +297,24 @@ def test_parts_that_were_at_fault_before_count_but_do_not_stop_a_run_by_themselv
         do_work(tmp_path / "b", raise_at_the_first_row_of_each_part, set_aside=known)
 
 
+def test_another_row_of_a_part_that_was_at_fault_before_does_not_stop_the_run(tmp_path):
+    known = {part: (SetAside(5, "stage raised", ""),) for part in range(5)}
+    run = do_work(tmp_path, raise_at_failing_id, set_aside=known)
+    assert [row["star_id"] for row in run.rows("rejected")] == [6, 13, 16, 26, 36, 46]
+
+
+@pytest.mark.parametrize(
+    ("kind", "remedy"), [("died", r"compute\.memory_per_worker"), ("slow", r"compute\.row_seconds")]
+)
+def test_a_part_that_is_hopeless_for_the_machine_tells_the_remedy(tmp_path, kind, remedy):
+    class Hopeless(Watched):
+        def error_of(self, key, function, args):
+            return StartedBefore(kind) if function is fit_rows else None
+
+    with pytest.raises(PartFailed, match=f"of 10 rows failed, .*raise {remedy}"):
+        do_work(tmp_path, executor=Hopeless)
+
+
 def test_a_part_of_one_row_is_set_aside_where_there_are_other_parts(tmp_path):
     run = do_work(tmp_path / "a", raise_at_failing_id, files=1, part_rows=1)
     assert [row["star_id"] for row in run.rows("rejected")] == [13]

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from starkiln.engine.disk import disk_trouble
 
-BUCKET_ROWS = 1_000_000
+BUCKET_ROWS = 400_000
 
 
 class Buckets:

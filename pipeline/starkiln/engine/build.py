@@ -70,7 +70,8 @@ def recover(generations: Generations, ledger: Ledger, keep: int, log: EventLog) 
     complete, unfinished = set(generations.numbers()), set(generations.partials())
     for build in ledger.builds():
         if build.number in complete:
-            ledger.set_state(build.number, "published")
+            if build.state != "published":
+                ledger.set_state(build.number, "published")
         elif build.state == "published" or build.number not in unfinished:
             ledger.drop_build(build.number)
     generations.sweep({build.number for build in ledger.builds() if build.state != "published"})
@@ -157,7 +158,15 @@ def planning_folder(settings: Settings) -> Path:
 
 def _make_plan(bench: Bench, folder: Path, left: list[tuple[Build, dict[int, DonePart]]]) -> Plan:
     settings, source, options = bench.settings, bench.source, bench.options
-    earlier = find_earlier(settings.run.output, left, settings, bench.hashes, source, refit_all=options.refit_all)
+    earlier = find_earlier(
+        settings.run.output,
+        left,
+        settings,
+        bench.hashes,
+        source,
+        refit_all=options.refit_all,
+        check=bench.stop.check,
+    )
     planned = 0
 
     def file_planned(file: PlannedFile, fresh: bool) -> None:

@@ -8,6 +8,7 @@ import logging
 import os
 import queue
 import signal
+import tempfile
 from collections import deque
 from collections.abc import Callable, Iterator
 from concurrent.futures import CancelledError
@@ -204,7 +205,7 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
         # What goes wrong comes back with the task; dask's own lines would only repeat it.
         "logging": {"distributed": "critical"},
     }
-    with dask.config.set(options), asyncio_silenced(), ExitStack() as stack:
+    with dask.config.set(options), asyncio_silenced(), _temporary_files_in(scratch), ExitStack() as stack:
         try:
             with interrupts_blocked():
                 cluster = stack.enter_context(
@@ -232,6 +233,24 @@ def open_cluster(workers: int, memory_per_worker: int, scratch: Path) -> Iterato
         except BaseException:
             executor.abandon()
             raise
+
+
+@contextmanager
+def _temporary_files_in(folder: Path) -> Iterator[None]:
+    """Let libraries, also in worker processes, make their temporary files in a folder of this run.
+
+    The system's may be small, or full.
+    """
+    before, variable = tempfile.tempdir, os.environ.get("TMPDIR")
+    tempfile.tempdir = os.environ["TMPDIR"] = os.fspath(folder)
+    try:
+        yield
+    finally:
+        tempfile.tempdir = before
+        if variable is None:
+            del os.environ["TMPDIR"]
+        else:
+            os.environ["TMPDIR"] = variable
 
 
 @contextmanager

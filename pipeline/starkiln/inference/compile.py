@@ -14,6 +14,9 @@ import numba
 from numba.core import config
 from numba.core.caching import FunctionCache
 
+ROOM_BYTES = 50_000_000
+"""A cache takes a few megabytes; a disk that has less than this is not ours to fill."""
+
 
 def _source_hash() -> str:
     # numba looks only at a function's own file for staleness; one folder per state of all the
@@ -40,9 +43,13 @@ def _cache_folder() -> Path | None:
             tempfile.TemporaryFile(dir=folder).close()
         except OSError:
             continue
-        if _is_private(parent) and _is_private(folder):
+        if _is_private(parent) and _is_private(folder) and _has_room(folder):
             return folder
     return None
+
+
+def _has_room(folder: Path) -> bool:
+    return any(folder.iterdir()) or shutil.disk_usage(folder).free >= ROOM_BYTES
 
 
 def _is_private(folder: Path) -> bool:
