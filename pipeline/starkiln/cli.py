@@ -15,7 +15,6 @@ from starkiln.errors import SettingsError, StarkilnError
 
 app = typer.Typer(
     no_args_is_help=True,
-    add_completion=False,
     pretty_exceptions_enable=False,
     rich_markup_mode=None,
     help="Effective temperatures, radii and luminosities of stars from survey photometry, by the million.",
@@ -24,6 +23,9 @@ app = typer.Typer(
 Config = Annotated[Path, typer.Argument(metavar="CONFIG", help="Settings file (TOML).", show_default=False)]
 RunDir = Annotated[Path, typer.Argument(metavar="RUN_DIR", help="A run's output folder.", show_default=False)]
 Debug = Annotated[bool, typer.Option("--debug", help="Show the traceback of an error.")]
+
+_TOLD = ("python", "emcee", "numpy", "astropy", "pyarrow", "dask", "numba")
+"""What --version tells the version of, beside our own."""
 
 EXIT_BUG = 1
 EXIT_STOPPED = 5
@@ -72,22 +74,29 @@ def _tell(text: str) -> None:
 
 def _print_version(wanted: bool) -> None:
     if wanted:
-        import starkiln
+        from starkiln.engine.provenance import versions
+        from starkiln.stages.model import METHOD_VERSION
 
-        print(f"starkiln {starkiln.__version__}")
+        found = versions()
+        print(f"starkiln {found['starkiln']}\nmethod {METHOD_VERSION}")
+        for name in _TOLD:
+            print(name, found[name])
         raise typer.Exit
 
 
 @app.callback()
 def _starkiln(
     version: Annotated[
-        bool, typer.Option("--version", callback=_print_version, is_eager=True, help="Show the version.")
+        bool, typer.Option("--version", callback=_print_version, is_eager=True, help="Show the versions that matter.")
     ] = False,
 ) -> None:
     pass
 
 
-@app.command(epilog="Example: starkiln check configs/demo.toml --rows")
+@app.command(
+    short_help="Check settings and tables, and print what a run would do.",
+    epilog="Example: starkiln check configs/demo.toml --rows",
+)
 def check(
     config: Config,
     rows: Annotated[
@@ -104,8 +113,8 @@ def check(
         from starkiln.tables.source import open_source
 
         settings = load_settings(config)
-        source = open_source(settings)
         build_bands(settings)
+        source = open_source(settings)
         plan = None
         if rows:
             from starkiln.engine.provenance import hashes
@@ -116,7 +125,10 @@ def check(
         print(describe_plan(source, settings, plan))
 
 
-@app.command(epilog="Example: starkiln run configs/demo.toml --time-limit 6h --quiet")
+@app.command(
+    short_help="Fit the stars, or what is new or left of them, and publish.",
+    epilog="Example: starkiln run configs/demo.toml --time-limit 6h --quiet",
+)
 def run(
     config: Config,
     time_limit: Annotated[
@@ -196,7 +208,7 @@ def status(
         print(json.dumps(found, indent=2) if as_json else describe_status(found))
 
 
-@app.command(epilog="Example: starkiln path runs/demo")
+@app.command(short_help="Print the folder of the published generation.", epilog="Example: starkiln path runs/demo")
 def path(run_dir: RunDir, debug: Debug = False) -> None:
     """Print the folder of the published generation, which stays as it is when a later run publishes."""
     with _errors_told(debug):
@@ -206,7 +218,10 @@ def path(run_dir: RunDir, debug: Debug = False) -> None:
         print(current.resolve())
 
 
-@app.command(epilog="Example: starkiln calibrate my_reference_stars.toml")
+@app.command(
+    short_help="Learn departures from blackbodies from reference stars.",
+    epilog="Example: starkiln calibrate my_reference_stars.toml",
+)
 def calibrate(config: Config, debug: Debug = False) -> None:
     """Learn the departures of photospheres from blackbodies from reference stars of known T and size."""
     with _errors_told(debug):
@@ -224,7 +239,10 @@ def calibrate(config: Config, debug: Debug = False) -> None:
         print(f"pictures are in {folder}")
 
 
-@app.command(epilog="Example: starkiln forecast configs/forecast.toml")
+@app.command(
+    short_help="Tell how precise T, R and L will be, before any data.",
+    epilog="Example: starkiln forecast configs/forecast.toml",
+)
 def forecast(
     config: Config,
     quiet: Annotated[bool, typer.Option("--quiet", help="Print nothing if all is well.")] = False,
@@ -249,10 +267,10 @@ def forecast(
             print(f"The table is {paths[0]}, the picture {paths[1]}")
 
 
-@app.command(epilog="Example: starkiln passbands gaia_dr3_g")
+@app.command(short_help="List the built-in passbands, or one in full.", epilog="Example: starkiln passbands gaia_dr3_g")
 def passbands(
     name: Annotated[
-        str | None, typer.Argument(metavar="[NAME]", help="Only this one, in full.", show_default=False)
+        str | None, typer.Argument(metavar="NAME", help="Only this one, in full.", show_default=False)
     ] = None,
     debug: Debug = False,
 ) -> None:
