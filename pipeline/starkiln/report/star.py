@@ -171,8 +171,9 @@ def alike(numbers: Sequence[float]) -> list[str]:
     digits = min(max(top - finest, 1), 6)
     if -3 <= top <= 5:
         return [f"{number:.{max(digits - top, 0)}f}" for number in numbers]
-    scale = 10.0 ** math.floor(math.log10(abs(median)) if median else top)
-    return [f"{number / scale:.{digits}f}e{round(math.log10(scale)):+03d}" for number in numbers]
+    power = math.floor(math.log10(abs(median))) if median else top
+    decimals = min(max(power - finest, 1), 6)
+    return [f"{number / 10.0**power:.{decimals}f}e{power:+03d}" for number in numbers]
 
 
 def _fit_lines(values: dict[str, Any]) -> list[str]:
@@ -181,14 +182,18 @@ def _fit_lines(values: dict[str, Any]) -> list[str]:
     odds = values.get("ln_evidence_ratio")
     chosen = "" if odds is None else f"; ln odds of a blackbody {odds:.1f}"
     measured = values["n_bands"] - values["n_limits"]
-    limits = f" and {values['n_limits']} limits" if values["n_limits"] else ""
+    limits = _counted(values["n_limits"], "upper limit")
     draws = f"{_number(values['ess_bulk'], '.0f')} effective draws (tail {_number(values['ess_tail'], '.0f')})"
     return [
         f"photosphere   {values['photosphere']}{common}{chosen}",
-        f"agreement     chi2 = {_number(values['chi2'], '.1f')} in {measured} measured bands{limits}; "
+        f"agreement     chi2 = {_number(values['chi2'], '.1f')} in {_counted(measured, 'measured band')}, {limits}; "
         f"predictive p-value {_number(values['ppp_value'], '.3f')}",
         f"sampling      {draws}, R-hat {_number(values['rhat_max'], '.3f')}, {values['n_steps']} steps",
     ]
+
+
+def _counted(count: int, noun: str) -> str:
+    return f"{count} {noun}" if count == 1 else f"{count or 'no'} {noun}s"
 
 
 def _number(value: float | None, form: str) -> str:

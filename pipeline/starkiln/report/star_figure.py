@@ -14,7 +14,7 @@ from starkiln.engine.onestar import Star
 from starkiln.physics.extinction import extinction_ratio
 from starkiln.physics.passbands import Passband
 from starkiln.physics.planck import exitance_jy
-from starkiln.report.star import BandRow, band_rows, finite, flags_of, shown_id, why_not_the_same
+from starkiln.report.star import BandRow, alike, band_rows, finite, flags_of, shown_id, why_not_the_same
 from starkiln.stages.closeup import Spectrum
 
 FloatArray = NDArray[np.float64]
@@ -22,6 +22,9 @@ FloatArray = NDArray[np.float64]
 # Tol's bright scheme, told apart by the colour-blind; every kind of point has a shape of its own, too.
 OBSERVED, MODEL, LIMIT, UNUSED, SHADE = "#222222", "#4477aa", "#cc3311", "#999999", "#bbccee"
 CORNER = (("teff", "T", "K"), ("radius", "R", r"$R_\odot$"), ("lum", "L", r"$L_\odot$"), ("av", "$A_V$", "mag"))
+OBSERVED_LABEL = "observed"
+INTERVAL_LABEL = "95 % interval of the blackbody"
+CARET_DOWN = 11  # hangs below its place: matplotlib.markers.CARETDOWNBASE, which would load it
 SHARES = (0.68, 0.95)
 MOST_POINTS = 1500
 SIZE_INCH = (13.0, 7.2)
@@ -49,11 +52,13 @@ def draw_star(star: Star) -> Any:
     figure: Any = Figure(figsize=SIZE_INCH)
     left, right = figure.subfigures(1, 2, width_ratios=(1.12, 1.0))
     _draw_energy(left, star)
-    drawn = [(name, *texts) for name, *texts in CORNER if finite(star.draws, name) is not None]
+    told = [each for each in CORNER if star.stored.values.get(f"{each[0]}_p50") is not None]
+    drawn = [each for each in told if finite(star.draws, each[0]) is not None]
     if len(drawn) > 1:
         _draw_corner(right, star, drawn)
+        right.text(0.975, 0.865, _summary(star), fontsize=8, ha="right", va="top", linespacing=1.6)
     else:
-        right.text(0.5, 0.5, _no_corner(star), ha="center", va="center", color=UNUSED, wrap=True)
+        _draw_intervals(right, star)
     figure.text(0.012, 0.972, shown_id(star.star_id), fontsize=14, weight="bold", va="top", parse_math=False)
     figure.text(0.012, 0.932, _subtitle(star), fontsize=8.5, va="top", parse_math=False)
     return figure
@@ -69,16 +74,45 @@ def _subtitle(star: Star) -> str:
     return f"{text}\nnumbers as stored: {short}"
 
 
-def _no_corner(star: Star) -> str:
-    if star.draws is not None:
-        return "no posterior to draw:\ntoo few detections, or nothing was left free"
-    return "no posterior draws:\nthe star could not be fitted again,\nand the run kept none (sampling.keep_draws)"
+def _summary(star: Star) -> str:
+    """Return what the corner plot leaves out, for the room above it."""
+    values = star.stored.values
+    lines = [f"photosphere {values['photosphere']}"]
+    if values.get("photosphere_z1_p50") is not None:
+        lines.append(f"common departure $z_1$ = {values['photosphere_z1_p50']:.2f}")
+    if values.get("dist_p50") is not None:
+        middle, low, high = alike([values[f"dist_{suffix}"] for suffix in ("p50", "lo68", "hi68")])
+        lines.append(f"d = {middle} pc, 68 % {low} to {high}")
+    lines.append(f"$\\chi^2$ = {values['chi2']:.1f} in {values['n_bands'] - values['n_limits']} measured bands")
+    if values.get("ppp_value") is not None:
+        lines.append(f"predictive p-value {values['ppp_value']:.3f}")
+    return "\n".join(lines)
+
+
+def _draw_intervals(figure: Any, star: Star) -> None:
+    """Draw the stored intervals where there are no draws, and say why there are none."""
+    text = "68 and 95 % intervals" + (" as stored: no posterior draws to show" if star.draws is None else "")
+    if star.stored.values.get("teff_p50") is None:
+        text = "fewer than two bands above 3 sigma: T, R and L are left open"
+    figure.text(0.12, 0.865, text, fontsize=8.5, color="#666666", va="bottom")
+    known = [each for each in CORNER if star.stored.values.get(f"{each[0]}_p50") is not None]
+    grid = figure.add_gridspec(4, 1, hspace=1.0, left=0.12, right=0.94, top=0.8, bottom=0.115)
+    for place, (name, symbol, unit) in enumerate(known):
+        numbers = [star.stored.values[f"{name}_{suffix}"] for suffix in ("lo95", "lo68", "p50", "hi68", "hi95")]
+        (low95, low68, middle, high68, high95), label = _scaled(np.array(numbers, np.float64), symbol, unit)
+        axes = figure.add_subplot(grid[place])
+        axes.plot([low95, high95], [0, 0], color=MODEL, linewidth=2.0)
+        axes.plot([low68, high68], [0, 0], color=MODEL, linewidth=8.0, solid_capstyle="butt", alpha=0.55)
+        axes.plot(middle, 0, "o", color=OBSERVED, markersize=5)
+        axes.set_title(_title(low68, middle, high68, label), fontsize=8, pad=4)
+        axes.set_yticks([])
+        axes.tick_params(axis="x", labelsize=7.5)
 
 
 def _draw_energy(figure: Any, star: Star) -> None:
     """Draw fluxes and model, residuals below, and the passbands under them."""
     grid = figure.add_gridspec(
-        3, 1, height_ratios=(3.4, 1.0, 1.25), hspace=0.0, left=0.11, right=0.975, top=0.865, bottom=0.075
+        3, 1, height_ratios=(3.3, 1.1, 1.25), hspace=0.0, left=0.11, right=0.975, top=0.865, bottom=0.075
     )
     fluxes = figure.add_subplot(grid[0])
     residuals = figure.add_subplot(grid[1], sharex=fluxes)
@@ -88,12 +122,13 @@ def _draw_energy(figure: Any, star: Star) -> None:
     passbands = list(star.model.passbands.values())
     fluxes.set_xscale("log")
     fluxes.set_xlim(*_wavelength_range(passbands))
-    if star.spectrum is not None:
+    if star.spectrum is not None and star.bands is not None and star.stored.values.get("teff_p50") is not None:
         _draw_spectrum(fluxes, star)
+        _draw_band_model(fluxes, star)
     _draw_observed(fluxes, rows)
     _set_flux_range(fluxes, rows)
     fluxes.set_ylabel("flux density [Jy]")
-    fluxes.legend(frameon=False, fontsize=7.5, loc="best")
+    _add_legend(fluxes)
     _draw_residuals(residuals, star, rows)
     _draw_passbands(curves, rows, passbands)
     for axes in (fluxes, residuals):
@@ -102,6 +137,16 @@ def _draw_energy(figure: Any, star: Star) -> None:
     for axes in (fluxes, residuals, curves):
         axes.tick_params(labelsize=8, which="both", direction="in", top=True, right=True)
     figure.align_ylabels([fluxes, residuals, curves])
+
+
+def _add_legend(axes: Any) -> None:
+    """Name what was drawn, the data first."""
+    handles, labels = axes.get_legend_handles_labels()
+    drawn = dict(zip(labels, handles, strict=True))
+    kinds = ("observed", "upper", "model", "blackbody", INTERVAL_LABEL)
+    place_of = {label: next(place for place, kind in enumerate(kinds) if label.startswith(kind)) for label in drawn}
+    order = sorted(drawn, key=lambda label: (label != OBSERVED_LABEL, place_of[label]))
+    axes.legend([drawn[label] for label in order], order, frameon=False, fontsize=7.5, loc="best")
 
 
 def _wavelength_range(passbands: Sequence[Passband]) -> tuple[float, float]:
@@ -120,7 +165,7 @@ def _wavelength_ticks(axes: Any) -> None:
     steps = [step * 10.0**power for power in range(-2, 3) for step in (1, 1.5, 2, 3, 5, 7)]
     wanted = [step for step in steps if low * 1.02 <= step <= high / 1.02]
     if high / low > 12:
-        wanted = [step for step in wanted if f"{step:e}"[0:3] in ("1.0", "2.0", "5.0")]
+        wanted = [step for step in wanted if f"{step:e}"[0:3] in ("1.0", "2.0", "3.0", "5.0")]
     axes.set_xticks(wanted, [f"{step:g}" for step in wanted])
     axes.set_xticks([], minor=True)
     axes.set_xlabel("wavelength [µm]")
@@ -136,12 +181,15 @@ def _draw_spectrum(axes: Any, star: Star) -> None:
     if star.closeup is not None:
         draws = _flux_jy(star.closeup.spread, wavelength_um, ratio)
         low, high = np.quantile(draws, [0.025, 0.975], axis=0)
-        axes.fill_between(wavelength_um, low, high, color=SHADE, linewidth=0, label="its central 95 %")
+        axes.fill_between(wavelength_um, low, high, color=SHADE, linewidth=0, label=INTERVAL_LABEL)
     where = "at the mode" if star.closeup is not None else "at the stored medians"
     (middle,) = _flux_jy(star.spectrum, wavelength_um, ratio)
     axes.plot(wavelength_um, middle, color=MODEL, linewidth=1.0, label=f"blackbody behind dust, {where}")
-    if star.bands is None or star.model is None:
-        return
+
+
+def _draw_band_model(axes: Any, star: Star) -> None:
+    assert star.bands is not None
+    assert star.model is not None
     pivots_um = [passband.pivot_um for passband in star.model.passbands.values()]
     kind = "" if star.stored.values.get("photosphere") == "blackbody" else ", departures included"
     bars = np.abs(np.stack([star.bands.flux_jy - star.bands.low_jy, star.bands.high_jy - star.bands.flux_jy]))
@@ -168,7 +216,7 @@ def _draw_observed(axes: Any, rows: Sequence[BandRow]) -> None:
     style = {"linestyle": "none", "capsize": 0, "elinewidth": 1.2, "zorder": 3}
     seen = [row for row in rows if row.flux_jy is not None and row.pivot_um is not None]
     for use, colour, marker, label in (
-        ("used", OBSERVED, "o", "observed"),
+        ("used", OBSERVED, "o", OBSERVED_LABEL),
         ("not used", UNUSED, "x", "observed, not used"),
     ):
         some = [row for row in seen if row.use == use and (row.flux_jy or 0.0) > 0.0]
@@ -183,7 +231,7 @@ def _draw_observed(axes: Any, rows: Sequence[BandRow]) -> None:
                 label=label,
                 **style,
             )
-    below = [row for row in seen if row.use != "limit" and (row.flux_jy or 0.0) <= 0.0 and row.error_jy]
+    below = [row for row in seen if _is_below_zero(row)]
     _draw_arrows(axes, [row for row in seen if row.use == "limit"], LIMIT, "upper limit", 0.0)
     _draw_arrows(axes, below, OBSERVED, "observed below zero (arrow: 0 + 3 sigma)", BELOW_ZERO_SIGMA)
 
@@ -193,19 +241,32 @@ def _draw_arrows(axes: Any, rows: Sequence[BandRow], colour: str, label: str, si
         return
     heights = [sigmas * (row.error_jy or 0.0) if sigmas else row.flux_jy for row in rows]
     pivots = [row.pivot_um for row in rows]
-    axes.plot(pivots, heights, linestyle="none", marker="_", markersize=11, markeredgewidth=1.6, color=colour)
-    axes.plot(pivots, heights, linestyle="none", marker=r"$\downarrow$", markersize=11, color=colour, label=label)
+    _hang(axes, pivots, heights, colour, label)
+
+
+def _hang(axes: Any, places: Sequence[Any], heights: Sequence[Any], colour: str, label: str | None = None) -> None:
+    """Draw bars with arrows that hang from them: somewhere below."""
+    style = {"linestyle": "none", "color": colour}
+    axes.plot(places, heights, marker="_", markersize=11, markeredgewidth=1.8, **style)
+    axes.plot(places, heights, marker=CARET_DOWN, markersize=7, label=label, **style)
+
+
+def _is_below_zero(row: BandRow) -> bool:
+    return row.use == "used" and row.flux_jy is not None and row.flux_jy <= 0.0
 
 
 def _set_flux_range(axes: Any, rows: Sequence[BandRow]) -> None:
     """Let the data set the range; a model far below every limit must not squeeze them."""
     data = [row.flux_jy for row in rows if row.flux_jy is not None and row.flux_jy > 0.0 and row.use != "not used"]
     models = [row.model_jy for row in rows if row.model_jy is not None and row.model_jy > 0.0]
+    data += [BELOW_ZERO_SIGMA * row.error_jy for row in rows if _is_below_zero(row) and row.error_jy is not None]
     known = data or models
     if not known:
         return
     low, high = min(known), max(*known, max(models, default=known[0]))
-    low = min([low, *(model for model in models if model > 0.03 * low)])
+    others = [row.flux_jy for row in rows if row.flux_jy is not None and row.use == "not used"]
+    low = min([low, *(flux for flux in [*models, *others] if flux > 0.03 * low)])
+    high = max([high, *(flux for flux in others if flux < 30.0 * high)])
     axes.set_yscale("log", nonpositive="clip")
     axes.set_ylim(low / 2.2, high * 2.2)
 
@@ -221,23 +282,17 @@ def _draw_residuals(axes: Any, star: Star, rows: Sequence[BandRow]) -> None:
         spreads = zip(rows, star.bands.spread, strict=True)
         limits = [(row.pivot_um, _limit_sigmas(row, float(spread))) for row, spread in spreads if row.use == "limit"]
         inside = [(pivot, height) for pivot, height in limits if height is not None]
-        axes.plot(
-            [pivot for pivot, _ in inside],
-            [height for _, height in inside],
-            linestyle="none",
-            marker=r"$\downarrow$",
-            markersize=9,
-            color=LIMIT,
-        )
+        _hang(axes, [pivot for pivot, _ in inside], [height for _, height in inside], LIMIT)
         heights = np.append(heights, [height for _, height in inside if height is not None])
-    largest = float(np.max(np.abs(heights), initial=0.0))
     axes.set_ylabel("residual [σ]", labelpad=2)
-    if largest > 8.0:
-        axes.set_yscale("symlog", linthresh=3.0, linscale=1.5)
-        ticks = [-100, -30, -10, -3, 0, 3, 10, 30, 100]
+    low, high = min(-3.4, 1.3 * float(heights.min(initial=0.0))), max(3.4, 1.3 * float(heights.max(initial=0.0)))
+    if max(-low, high) > 10.0:
+        axes.set_yscale("symlog", linthresh=3.0)
+        low, high = (end * 1.5 if abs(end) > 10.0 else end for end in (low, high))
+        ticks = [tick for tick in (-1000, -100, -10, -3, 0, 3, 10, 100, 1000) if low < tick < high]
         axes.set_yticks(ticks, [str(tick) for tick in ticks])
         axes.set_yticks([], minor=True)
-    axes.set_ylim(-max(3.4, 1.4 * largest), max(3.4, 1.4 * largest))
+    axes.set_ylim(low, high)
 
 
 def _limit_sigmas(row: BandRow, spread: float) -> float | None:
@@ -336,10 +391,16 @@ def _draw_histogram(axes: Any, draws: FloatArray, label: str) -> None:
     axes.axvline(middle, color=MODEL, linewidth=1.0)
     axes.set_xlim(*_range(draws))
     axes.set_yticks([])
+    axes.set_title(_title(low, middle, high, label), fontsize=8, pad=4)
+
+
+def _title(low: float, middle: float, high: float, label: str) -> str:
+    """Return a median and its 68 % interval as a formula."""
     decimals = max(0, 1 - int(np.floor(np.log10(max(0.5 * (high - low), 1e-12)))))
     text = f"{middle:.{decimals}f}$^{{+{high - middle:.{decimals}f}}}_{{-{middle - low:.{decimals}f}}}$"
     symbol, _, unit = label.partition(" [")
-    axes.set_title(f"{symbol} = {text} {unit.rstrip(']')}", fontsize=8.5, pad=4)
+    times = r"$\times$" if unit.startswith("$10^") else ""
+    return f"{symbol} = {text} {times}{unit.rstrip(']')}"
 
 
 def _draw_pair(axes: Any, x: FloatArray, y: FloatArray) -> None:
@@ -375,5 +436,7 @@ def _dress(axes: Any, x_label: str, y_label: str, is_diagonal: bool) -> None:
     axes.tick_params(axis="x", rotation=40, labelbottom=bool(x_label), top=not is_diagonal)
     if not is_diagonal:
         axes.tick_params(axis="y", labelleft=bool(y_label), right=True)
+    for text in axes.get_xticklabels():
+        text.set(horizontalalignment="right", rotation_mode="anchor")
     axes.set_xlabel(x_label, fontsize=9)
     axes.set_ylabel(y_label, fontsize=9)
