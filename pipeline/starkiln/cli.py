@@ -185,11 +185,66 @@ def run(
                 )
                 with open_progress(quiet) as progress:
                     result = run_settings(settings, options=options, progress=progress, stop=stop)
+                    page = None if result.path is None else _page_of(settings.run.output, result.path, progress, debug)
             if not quiet or result.exit_code:
                 print(result.message)
             if not quiet and result.path is not None:
                 print(first_rows(result.path))
+            if not quiet and page is not None:
+                print(f"the quality page is {page}")
             raise typer.Exit(result.exit_code)
+
+
+def _page_of(run_dir: Path, generation: Path, progress: Any, debug: bool) -> Path | None:
+    """Return the quality page, built if need be; a page that fails is told of, and the run has ended as it has."""
+    page = run_dir / "report" / "index.html"
+    if (generation / "report" / "index.html").is_file():
+        return page
+    try:
+        from starkiln.report.page import build_page
+
+        progress.begin("drawing the quality page", 0)
+        build_page(run_dir)
+    except Exception as error:
+        if debug:
+            traceback.print_exc()
+        first_line = str(error).partition("\n")[0]
+        _tell(f"the quality page could not be built ({type(error).__name__}: {first_line}); the catalogue is whole")
+        return None
+    return page
+
+
+@app.command(
+    short_help="Build the quality page of a run, or build it again.",
+    epilog="Example: starkiln report runs/demo",
+)
+def report(run_dir: RunDir, debug: Debug = False) -> None:
+    """Build the quality page of the published catalogue, or build it again, and print its path."""
+    with _errors_told(debug):
+        from starkiln.report.page import build_page
+
+        build_page(run_dir)
+        print(run_dir / "report" / "index.html")
+
+
+@app.command(
+    short_help="Show one star: numbers, flags, bands and a picture.",
+    epilog="Example: starkiln star runs/tamarin-strip TS-T1-0001",
+)
+def star(
+    run_dir: RunDir,
+    star_id: Annotated[str, typer.Argument(metavar="ID", help="The star's id.", show_default=False)],
+    output: Annotated[
+        Path, typer.Option("--output", metavar="FOLDER", help="The folder of the picture.", show_default=False)
+    ] = Path(),
+    as_json: Annotated[bool, typer.Option("--json", help="Print JSON, with a schema number.")] = False,
+    debug: Debug = False,
+) -> None:
+    """Show one star of a run: its numbers, flags in words and bands, and write a picture of fit and posterior."""
+    with _errors_told(debug):
+        from starkiln.report.star_command import star as show
+
+        print(show(run_dir, star_id, output, as_json))
 
 
 @app.command(epilog="Example: starkiln status runs/demo --json")
