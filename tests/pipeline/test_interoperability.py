@@ -16,6 +16,7 @@ from astropy.time import Time
 import starkiln
 from fake_stages import stages
 from pipeline_survey import QUICK, blackbodies, write
+from readme_parts import block_with
 from small_survey import settings_for, stars, with_column
 from starkiln.engine.run import run_settings
 from starkiln.errors import InputError
@@ -240,3 +241,95 @@ def test_masks_in_columns_of_their_own_are_refused(tmp_path):
         open_source(settings)
     starkiln.write_parquet(table, tmp_path / "my.parquet")
     assert open_source(settings).rows == 5
+
+
+# ---- what the README tells to type
+
+
+@pytest.fixture(scope="module")
+def first_run(tmp_path_factory):
+    """A folder where the README's first run has been done, on somebody's CSV."""
+    folder = tmp_path_factory.mktemp("first_run")
+    with pytest.MonkeyPatch.context() as patch:
+        patch.chdir(folder)
+        somebodys_table().write("my.csv")
+        exec(block_with("python", 'Table.read("my.csv"), "my_tables'), {})
+        (folder / "my.toml").write_text(block_with("toml", '"my-survey"'))
+        assert starkiln.run("my.toml").exit_code == 0
+    return folder
+
+
+def somebodys_table():
+    """Eight stars under the names of the README, one without a magnitude, one with a placeholder."""
+    table = blackbodies(8).to_pydict()
+    mag = {"j_m": 1594.0, "k_m": 666.7}  # zero points of Cohen, Wheaton & Megeath 2003, AJ 126, 1090
+    flux_njy = np.array(table["panstarrs_r"])
+    made = Table({"source_id": [f"S{k}" for k in range(8)]})
+    made["parallax"], made["parallax_error"] = table["parallax"], table["parallax_error"]
+    made["flux_g"], made["flux_g_error"] = table["panstarrs_g"], table["panstarrs_g_error"]
+    for name, zero_jy in mag.items():
+        made[name] = MaskedColumn(-2.5 * np.log10(flux_njy * 0.7 / (zero_jy * 1e9)), mask=[True, *[False] * 7])
+        made[name.replace("_m", "_msigcom")] = 0.02
+    return made
+
+
+def play(folder, monkeypatch, text, **names):
+    """Run a block of the README in the folder of the first run; return the names it leaves."""
+    monkeypatch.chdir(folder)
+    scope = {"starkiln": starkiln, "Table": Table, **names}
+    exec(text, scope)
+    return scope
+
+
+def test_a_first_run_by_the_readme(first_run, monkeypatch, capsys):
+    left = play(first_run, monkeypatch, block_with("python", '"rejected"'))
+    assert left["catalogue"]["source_id"].tolist() == [f"S{k}" for k in range(1, 8)]
+    assert left["rejected"]["source_id"].tolist() == ["S0"]
+    assert "teff_p50" in capsys.readouterr().out
+    left = play(first_run, monkeypatch, block_with("python", "starkiln.fit_table"), table=somebodys_table())
+    assert left["frame"]["source_id"].tolist() == [f"S{k}" for k in range(1, 8)]
+    assert left["result"].exit_code == 0
+
+
+@pytest.mark.parametrize(
+    ("words", "name", "writer"),
+    [
+        ('Table.read("my.fits"), "my_tables', "my.fits", {}),
+        ('Table.read("my.vot"', "my.vot", {"format": "votable"}),
+        ("masked=True", "my.csv", {}),
+        ("memmap=True", "my.fits", {}),
+    ],
+)
+def test_recipes_in(tmp_path, monkeypatch, words, name, writer):
+    table = somebodys_table()
+    table["parallax"].unit = "mas"
+    table["j_m"][5] = 99.99
+    table.write(tmp_path / name, **writer)
+    play(tmp_path, monkeypatch, block_with("python", words))
+    found = starkiln.read(tmp_path / "my_tables")
+    assert found["source_id"].tolist() == table["source_id"].tolist()
+    assert found["parallax"].unit == u.mas
+    missing = np.isnan(np.ma.filled(np.ma.asarray(found["j_m"]), np.nan))
+    assert np.flatnonzero(missing).tolist() == ([0, 5] if name == "my.csv" else [0])
+
+
+def test_recipes_out(first_run, tmp_path, monkeypatch):
+    expected = starkiln.read(first_run / "runs" / "my-survey")
+    play(first_run, monkeypatch, block_with("python", "catalogue.ecsv"))
+    for name, reader in (("fits", {}), ("vot", {"format": "votable"}), ("ecsv", {}), ("csv", {})):
+        same(Table.read(first_run / f"catalogue.{name}", **reader), expected, kinds=name != "csv")
+
+
+@pytest.mark.filterwarnings("ignore:The inplace keyword in DataFrame:DeprecationWarning")  # dask's own use of pandas
+def test_recipes_of_readers(first_run, monkeypatch):
+    expected = starkiln.read(first_run / "runs" / "my-survey")
+    left = play(first_run, monkeypatch, block_with("python", 'format="parquet.votable")  #'))
+    assert left["table"]["teff_p50"].unit == u.K
+    left = play(first_run, monkeypatch, block_with("python", "import pandas"))
+    assert left["frame"]["teff_p50"].tolist() == expected["teff_p50"].tolist()
+    assert left["units"]["lum_p50"] == u.L_sun
+    assert left["sentences"]["teff_p50"] == "Effective temperature, posterior median"
+    left = play(first_run, monkeypatch, block_with("python", "import pyarrow"))
+    assert left["clean"]["source_id"].to_pylist() == expected["source_id"][expected["flags"] == 0].tolist()
+    left = play(first_run, monkeypatch, block_with("python", "import dask.dataframe"))
+    assert left["median"] == pytest.approx(np.median(expected["teff_p50"]), rel=0.2)

@@ -1,50 +1,66 @@
-"""What the README says of flags, commands and exit codes is what the code has."""
+"""What the README says of columns, flags, commands and exit codes is what the code has, and its links lead on."""
 
 import re
+import tomllib
 
-from typer.testing import CliRunner
+import pytest
+from typer.main import get_command
 
 import starkiln
-import starkiln.engine.run  # with all its errors
-import starkiln.engine.work
-from starkiln import cli
-from starkiln.errors import StarkilnError
-from starkiln.flags import FLAGS
+from readme_parts import README, TABLES, block_with, blocks, table_in_readme
+from starkiln import cli, errors
+from starkiln.settings import build_settings
+from starkiln.tables.columns import QUANTITIES, fitted_columns
+
+TEXT = README.read_text()
 
 
-def test_every_flag_is_told_with_its_bit_and_sentence(repository):
-    text = (repository / "README.md").read_text()
-    for flag in FLAGS:
-        assert f"| {flag.bit} | `{flag.name}` | {flag.sentence} |" in text
+@pytest.mark.parametrize("name", TABLES)
+def test_tables_are_those_of_the_registries(name):
+    assert table_in_readme(name) == TABLES[name](), "run `python tests/readme_parts.py`"
 
 
-def test_every_name_of_the_python_door_exists(repository):
-    names = set(re.findall(r"starkiln\.(\w+)\(", (repository / "README.md").read_text()))
-    assert names >= {"run", "read", "units", "fit_table", "descriptions"}
+def test_every_column_of_a_run_is_told():
+    settings = build_settings(tomllib.loads(block_with("toml", '"my-survey"')))
+    told = set(re.findall(r"^\| `(\w+)` \|", TEXT, re.MULTILINE))
+    for column in fitted_columns(settings):
+        quantity, _, suffix = column.name.rpartition("_")
+        if suffix in ("lo95", "lo68", "p50", "hi68", "hi95") and quantity in {q.name for q in QUANTITIES}:
+            assert quantity in told
+        else:
+            assert re.sub(r"^(residual|outlier)_.*", r"\1_BAND", column.name) in told
+
+
+def test_every_name_of_the_python_door_exists():
+    names = set(re.findall(r"starkiln\.(\w+)\(", TEXT))
+    assert names >= {"run", "read", "units", "fit_table", "descriptions", "write_parquet"}
     for name in names:
         assert callable(getattr(starkiln, name))
 
 
-def subclasses(kind):
-    return {kind}.union(*map(subclasses, kind.__subclasses__()))
+def test_every_command_is_told_and_no_other():
+    told = set(re.findall(r"`starkiln ([a-z]+)\b", TEXT))
+    assert told == set(get_command(cli.app).commands)
 
 
-def test_every_exit_code_is_told(repository):
-    text = (repository / "README.md").read_text()
-    table = text[text.index("| exit code | meaning |") :].partition("\n\n")[0]
-    told = {int(code) for code in re.findall(r"^\| (\d+) \|", table, re.MULTILINE)}
-    published, interrupted = {0, 4}, {cli.EXIT_INTERRUPTED}
-    assert told == published | interrupted | {kind.exit_code for kind in subclasses(StarkilnError)}
+def test_every_exit_code_of_an_error_is_told():
+    told = {int(code) for code in re.findall(r"^\| (\d+) \| [^`]", TEXT, re.MULTILINE)}
+    kinds = [
+        kind for kind in vars(errors).values() if isinstance(kind, type) and issubclass(kind, errors.StarkilnError)
+    ]
+    assert {kind.exit_code for kind in kinds} | {cli.EXIT_STOPPED, cli.EXIT_INTERRUPTED} <= told
 
 
-def test_every_option_that_is_told_exists(repository):
-    text = (repository / "README.md").read_text()
-    shown = CliRunner().invoke(cli.app, ["run", "--help"], env={"COLUMNS": "200"}).output
-    for option in ("--time-limit", "--refit-all", "--retry-failed", "--workers", "--scheduler", "--scheduler-file"):
-        assert f"`{option}" in text
-        assert option in shown
+def test_pictures_and_links_lead_somewhere(repository):
+    links = re.findall(r"\]\(([^)]+)\)", TEXT)
+    assert "demo_catalog/temperature-luminosity.png" in links
+    for link in links:
+        assert (repository / link).is_file()
+    for path in re.findall(r"python (tests/\S+\.py|demo_catalog/\S+\.py)", TEXT):
+        assert (repository / path.rstrip("`")).is_file()
+    assert (repository / "demo_catalog/temperature-luminosity.png").stat().st_size < 150_000
 
 
-def test_the_crontab_line_is_the_one_of_the_example(repository):
-    (line,) = re.findall(r"^30 19 .*$", (repository / "README.md").read_text(), re.MULTILINE)
-    assert line in (repository / "configs" / "nightly.toml").read_text()
+def test_python_blocks_are_python():
+    for text in blocks("python"):
+        compile(text, "README.md", "exec")
