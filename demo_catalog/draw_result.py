@@ -45,7 +45,9 @@ def _draw_radii(axes: Axes) -> None:
         lum_lsun = radius_rsun**2 * (teff_k / TSUN_K) ** 4
         axes.plot(teff_k, lum_lsun, color=CHALK, alpha=0.35, linewidth=0.7, linestyle=(0, (6, 4)), zorder=0)
         place = np.searchsorted(teff_k, 31000 if radius_rsun < 5 else 7600 if radius_rsun > 50 else 14000)
-        axes.text(teff_k[place], lum_lsun[place], f"{radius_rsun:g} R$_\\odot$", size=8, alpha=0.8, va="bottom", ha="right")
+        axes.text(
+            teff_k[place], lum_lsun[place], f"{radius_rsun:g} R$_\\odot$", size=8, alpha=0.8, va="bottom", ha="right"
+        )
 
 
 def _draw_stars(axes: Axes, stars: Table) -> None:
