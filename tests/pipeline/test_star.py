@@ -57,11 +57,19 @@ def survey(tmp_path_factory):
 
 @pytest.fixture(scope="module")
 def named_survey(tmp_path_factory):
-    """A run of six stars with names for ids, which keeps draws."""
+    """A run of six stars with names for ids, dust given, and jitter; it keeps draws and no residuals."""
     folder = tmp_path_factory.mktemp("named")
     names = ["HD 1", "HD 2", ODD_ID, "hd 3\n", "α Vir", "6"]
     write(folder / "tables", a=with_column(blackbodies(6), "star_id", names))
-    settings = settings_for(folder / "tables", folder / "run", sampling__keep_draws=20, **QUICK)
+    settings = settings_for(
+        folder / "tables",
+        folder / "run",
+        sampling__keep_draws=20,
+        model__extinction={"prior": "fixed", "mean": 0.1},
+        model__jitter=True,
+        output__per_band="none",
+        **QUICK,
+    )
     assert run_settings(settings).exit_code == 0
     return folder
 
@@ -127,9 +135,12 @@ def test_another_platform_is_the_reason_for_other_bits(survey, tmp_path):
     assert "a new fit differs in lum_p50: cpu abacus ->" in text
 
 
-def test_residuals_are_those_of_the_fluxes_that_are_shown(survey):
-    for star_id in ids_of(survey):
-        found = find_star(survey / "run", str(star_id))
+@pytest.mark.parametrize("which", ["survey", "named_survey"])
+def test_residuals_are_those_of_the_fluxes_that_are_shown(request, which):
+    folder = request.getfixturevalue(which)
+    for star_id in ids_of(folder):
+        found = find_star(folder / "run", str(star_id))
+        assert {row.use for row in band_rows(found)} >= {"used"}
         for row, spread in zip(band_rows(found), found.bands.spread, strict=True):
             if row.use == "used":
                 sigma = np.hypot(row.error_jy, spread * row.model_jy)

@@ -5,7 +5,7 @@ from types import SimpleNamespace
 import numpy as np
 import pytest
 
-from starkiln.report.star import alike, finite, flags_of, shown_id
+from starkiln.report.star import _rejection, alike, finite, flags_of, shown_id
 from starkiln.report.star_command import file_stem
 from starkiln.report.star_figure import _levels, _scaled, spread_out
 
@@ -49,6 +49,15 @@ def test_ids_cannot_move_the_cursor():
 def test_bits_of_another_version_are_told():
     star = SimpleNamespace(stored=SimpleNamespace(values={"flags": 1 | 1 << 29}))
     assert [name for name, _ in flags_of(star)] == ["few_bands", "bits 0x20000000"]
+
+
+def test_a_fault_is_told_with_what_to_do():
+    values = {"reason": "exception", "detail": "ValueError: no", "kind": "fault"}
+    star = SimpleNamespace(stored=SimpleNamespace(values=values))
+    (text,) = _rejection(star)
+    assert text == (
+        "Not fitted: exception (ValueError: no); a fault while fitting: `starkiln run --retry-failed` tries again."
+    )
 
 
 def test_names_of_bands_are_kept_apart_in_order():

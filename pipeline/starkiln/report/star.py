@@ -143,7 +143,8 @@ def _input_text(star: Star) -> str:
 
 def _rejection(star: Star) -> list[str]:
     values = star.stored.values
-    whose = "the row itself" if values["kind"] == "data" else "a fault while fitting; `starkiln run --retry-failed`"
+    fault = "a fault while fitting: `starkiln run --retry-failed` tries again"
+    whose = fault if values["kind"] == "fault" else "its data are why"
     return [f"Not fitted: {values['reason']} ({values['detail']}); {whose}."]
 
 
@@ -217,8 +218,7 @@ def band_rows(star: Star) -> list[BandRow]:
 
 
 def _band_row(star: Star, label: str, place: int | None) -> BandRow:
-    values = star.stored.values
-    residual, outlier = values.get(f"residual_{label}"), values.get(f"outlier_{label}")
+    residual, outlier = (_of_band(star, f"{name}_{label}") for name in ("residual", "outlier"))
     seen = None if star.observed is None or place is None else star.observed[place]
     use = ("used" if residual is not None else "limit or not used") if seen is None else seen.use
     passband = None if star.model is None else star.model.passbands[label]
@@ -233,6 +233,14 @@ def _band_row(star: Star, label: str, place: int | None) -> BandRow:
         use=use,
         why="" if seen is None else seen.why,
     )
+
+
+def _of_band(star: Star, name: str) -> float | None:
+    """Return a stored number of a band, or that of the new fit where the run did not store it."""
+    if name in star.stored.values or star.closeup is None:
+        return star.stored.values.get(name)
+    value = float(star.closeup.columns[name][0])
+    return None if math.isnan(value) else value
 
 
 def _band_lines(rows: Sequence[BandRow], *, rejected: bool) -> list[str]:
