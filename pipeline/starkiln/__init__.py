@@ -15,7 +15,7 @@ _HOMES = {
     "write_parquet": "starkiln.tables.convert",
 }
 
-__all__ = ["RunResult", "__version__", "descriptions", "fit_table", "read", "run", "units", "write_parquet"]
+__all__ = ["RunResult", "__version__", "descriptions", "fit_table", "flags", "read", "run", "units", "write_parquet"]
 
 
 def __getattr__(name: str) -> Any:
@@ -24,6 +24,8 @@ def __getattr__(name: str) -> Any:
         from importlib.metadata import version
 
         return version("starkiln")
+    if name == "flags":
+        return import_module("starkiln.flags")
     if name in _HOMES:
         return getattr(import_module(_HOMES[name]), name)
     raise AttributeError(f"module 'starkiln' has no attribute {name!r}")

@@ -3,7 +3,8 @@ import pandas as pd
 import pyarrow as pa
 import pytest
 from astropy import units as u
-from astropy.table import MaskedColumn, Table
+from astropy.table import MaskedColumn, QTable, Table
+from astropy.utils.masked import Masked
 
 import starkiln
 from fake_stages import pass_through, reject_odd_ids, stages
@@ -48,6 +49,14 @@ def test_every_kind_of_table_gives_the_same_catalogue(table, convert):
     assert rejected[["star_id", "input_file", "input_row", "reason"]].values.tolist() == [
         [BIG_ID, "table", 9, "duplicate id"]
     ]
+
+
+def test_masked_quantities_are_nulls(table):
+    column = MaskedColumn(table["panstarrs_g"].to_numpy(), mask=[True, *[False] * 9], unit=u.nJy)
+    masked = QTable(astropy_table(table))
+    masked["panstarrs_g"] = Masked(column.data.data * u.nJy, column.mask)
+    nulled = with_column(table, "panstarrs_g", pa.array(column.data.data, mask=np.asarray(column.mask)))
+    assert fit(masked)["row_hash"].tolist() == fit(nulled)["row_hash"].tolist() != fit(table)["row_hash"].tolist()
 
 
 def test_an_integer_id_beside_a_null_stays_exact(table):

@@ -36,6 +36,8 @@ def test_every_name_of_the_python_door_exists():
     assert names >= {"run", "read", "units", "fit_table", "descriptions", "write_parquet"}
     for name in names:
         assert callable(getattr(starkiln, name))
+    assert "`starkiln.flags.names(value)`" in TEXT
+    assert starkiln.flags.names(3) == ["few_bands", "poor_parallax"]
 
 
 def test_every_command_is_told_and_no_other():

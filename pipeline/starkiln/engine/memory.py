@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 import pyarrow as pa
-from astropy.table import Column, MaskedColumn, Table
+from astropy.table import Table
 
 from starkiln.engine.job import Stages, fitting_stages
 from starkiln.engine.plan import even_parts
@@ -17,6 +17,7 @@ from starkiln.engine.repeats import copies, id_digests, mark_repeats
 from starkiln.errors import InputError, nearest
 from starkiln.settings import Settings, build_settings, load_settings
 from starkiln.tables.checks import column_problem, column_uses, handed_out_type
+from starkiln.tables.convert import array_of
 from starkiln.tables.filters import RowFilter
 
 TABLE_NAME = "table"
@@ -93,23 +94,12 @@ def _arrow(table: Table | pd.DataFrame | pa.Table, columns: list[str]) -> pa.Tab
         return table.select(columns)
     if isinstance(table, pd.DataFrame):
         return pa.Table.from_pandas(table[columns], preserve_index=False).replace_schema_metadata(None)
-    arrays = [_array(table[name]) for name in columns]
+    arrays = [array_of(table[name]) for name in columns]
     fields = [
         pa.field(name, array.type, metadata={"unit": str(table[name].unit)} if table[name].unit else None)
         for name, array in zip(columns, arrays, strict=True)
     ]
     return pa.table(arrays, schema=pa.schema(fields))
-
-
-def _array(column: Column | MaskedColumn) -> pa.Array:
-    """Return a column of an astropy Table, which may be masked, hold bytes or be in another byte order."""
-    values = np.asarray(getattr(column, "value", column))
-    mask = np.asarray(column.mask) if isinstance(column, MaskedColumn) else None
-    if values.dtype.kind == "S":
-        values = np.char.decode(values, "utf-8")
-    if values.dtype.kind == "U":
-        values = values.astype(object)
-    return pa.array(values.astype(values.dtype.newbyteorder("=")), mask=mask)
 
 
 def _selected(table: pa.Table, settings: Settings) -> pa.Table:
