@@ -215,6 +215,7 @@ def _answers(run: Run, stats: CatalogueStats) -> dict[str, Any]:
         "worry": page_verdict.worry_sentence(found),
         "is_worried": bool(found),
         "job": page_verdict.job_answer(run.facts),
+        "job_detail": page_verdict.job_detail(run.facts, stats),
         "sample": page_verdict.sample_answer(stats),
         "trust": page_verdict.trust_answer(stats),
         "data": page_verdict.data_answer(run.facts, stats),
@@ -297,7 +298,7 @@ def _strip(stats: CatalogueStats) -> dict[str, Any]:
     median = float(quantiles(AXES["log_teff"], stats.histograms["log_teff"], (0.5,))[0])
     return {
         "stops": ", ".join(f"{blackbody_hex(10.0**stop)} {place(stop)}%" for stop in stops),
-        "ticks": [(place(np.log10(teff)), f"{teff:,}") for teff in (30_000, 10_000, 6_000, 4_000, 3_000)],
+        "ticks": [(place(np.log10(teff)), f"{teff:,}") for teff in (30_000, 10_000, 5_000, 3_000)],
         "median": place(median) if np.isfinite(median) else None,
         "median_text": page_words.number(10.0**median),
     }

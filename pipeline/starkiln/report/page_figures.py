@@ -54,7 +54,7 @@ STYLE: dict[Any, Any] = {
     "axes.titlecolor": INK,
     "axes.titlelocation": "left",
     "axes.titlesize": 10.0,
-    "font.size": 9.0,
+    "font.size": 9.5,
     "svg.fonttype": "none",
     "text.color": INK,
     "xtick.color": FAINT,
@@ -96,7 +96,7 @@ class Figures:
 
     def plane(self, stats: CatalogueStats) -> Picture:
         """Draw luminosity against temperature."""
-        axes = _axes(6.6, 5.4)
+        axes = _axes(5.4, 4.7)
         axes.set_facecolor(PLATE)
         teff, lum = AXES["log_teff"], AXES["log_lum"]
         (x_low, x_high), (y_low, y_high) = (_occupied(teff, stats.plane.sum(1)), _occupied(lum, stats.plane.sum(0)))
@@ -104,7 +104,7 @@ class Figures:
         _draw_radii(axes, (x_low, x_high), (y_low, y_high))
         axes.set_xlim(x_high, x_low)
         axes.set_ylim(y_low, y_high)
-        _log_ticks(axes.xaxis, x_low, x_high, steps=(1, 1.5, 2, 3, 4, 6))
+        _log_ticks(axes.xaxis, x_low, x_high, steps=(1, 2, 3, 4, 6))
         _log_ticks(axes.yaxis, y_low, y_high, steps=(1,))
         axes.set_xlabel("effective temperature T [K], hot to cool")
         axes.set_ylabel("luminosity L [L☉]")
@@ -144,11 +144,12 @@ class Figures:
         whole
             Whether to show the whole axis and not only where there are stars.
         """
-        axes = _axes(4.3, 2.7)
+        axes = _axes(4.0, 2.6)
         low, high = (axis.low, axis.high) if whole else _occupied(axis, counts, at_least=limit)
         edges, shown = _rebinned(axis, counts, low, high)
         axes.stairs(shown, edges, fill=True, color=BLUE)
         if part is not None:
+            axes.set_ylim(top=1.12 * max(1, int(shown.max())))  # room for the words
             axes.stairs(_rebinned(axis, part, low, high)[1], edges, fill=True, color=VERMILION, hatch="////", ec="none")
             axes.text(0.98, 0.98, part_text, transform=axes.transAxes, ha="right", va="top", size=8)
         if limit is not None:
@@ -173,7 +174,7 @@ class Figures:
 
     def widths(self, stats: CatalogueStats) -> Picture:
         """Draw the widths of the intervals of T, R and L against brightness."""
-        axes = _axes(4.3, 2.9)
+        axes = _axes(4.0, 2.7)
         told: list[str] = []
         ends: list[tuple[str, float, float]] = []
         for name, symbol, colour, style in (
@@ -203,7 +204,7 @@ class Figures:
 
     def residual(self, label: str, band: BandStats) -> Picture:
         """Draw a band's residuals against temperature: all of them, their median and their spread."""
-        axes = _axes(4.3, 2.5)
+        axes = _axes(4.0, 2.4)
         of_teff = band.counts.sum(axis=1)
         low, high = _occupied(COARSE_LOG_TEFF, of_teff)
         axes.axhspan(-1, 1, color=RULE, alpha=0.5, linewidth=0)

@@ -26,6 +26,7 @@ BATCH_ROWS = 65_536
 WIDTH, FLUX_HEIGHT, RESIDUAL_HEIGHT = 320.0, 150.0, 62.0
 LEFT, RIGHT, TOP, GAP, BOTTOM = 46.0, 10.0, 20.0, 12.0, 30.0
 MOST_SIGMA = 8.0
+FEWEST_TICKS, MOST_TICKS = 3, 5
 
 
 @dataclass(frozen=True)
@@ -182,8 +183,8 @@ def _draw(
             mark.error_top, mark.error_bottom = y_of(seen.flux_jy + seen.error_jy), y_of(seen.flux_jy - seen.error_jy)
         picture.marks.append(mark)
     picture.has_observed = any(mark.observed_y is not None for mark in picture.marks)
-    picture.x_ticks = [(x_of(tick), axis_number(10.0**tick)) for tick in _ticks(x_low, x_high, (1, 2, 5), 5)]
-    picture.y_ticks = [(y_of(10.0**tick), axis_number(10.0**tick)) for tick in _ticks(y_low, y_high, (1, 3), 5)]
+    picture.x_ticks = [(x_of(tick), axis_number(10.0**tick)) for tick in _ticks(x_low, x_high)]
+    picture.y_ticks = [(y_of(10.0**tick), axis_number(10.0**tick)) for tick in _ticks(y_low, y_high)]
 
 
 def residual_y(sigma: float) -> float:
@@ -192,12 +193,16 @@ def residual_y(sigma: float) -> float:
     return round(TOP + FLUX_HEIGHT + GAP + 0.5 * RESIDUAL_HEIGHT * (1.0 - share), 1)
 
 
-def _ticks(low: float, high: float, steps: Sequence[float], most: int) -> list[float]:
-    """Return logarithms of round numbers in a range, at most so many."""
+def _ticks(low: float, high: float) -> list[float]:
+    """Return logarithms of a few round numbers in a range."""
     powers = range(int(np.floor(low)), int(np.ceil(high)) + 1)
-    found = [float(np.log10(step) + power) for power in powers for step in steps]
-    ticks = [tick for tick in found if low <= tick <= high]
-    return ticks[:: max(1, -(-len(ticks) // most))]
+    ticks: list[float] = []
+    for steps in ((1,), (1, 3), (1, 2, 5), (1, 1.5, 2, 3, 4, 6, 8)):
+        found = [float(np.log10(step)) + power for power in powers for step in steps]
+        ticks = [tick for tick in found if low <= tick <= high]
+        if len(ticks) >= FEWEST_TICKS:
+            break
+    return ticks[:: max(1, -(-len(ticks) // MOST_TICKS))]
 
 
 def read_observed(

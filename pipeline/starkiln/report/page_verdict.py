@@ -36,6 +36,18 @@ def job_answer(facts: Mapping[str, Any]) -> str:
     )
 
 
+def job_detail(facts: Mapping[str, Any], stats: CatalogueStats) -> str:
+    """Return how the run ended, in more words."""
+    counts, code = facts["counts"], facts["exit_code"]
+    wall = facts.get("seconds", {}).get("wall", {})
+    took = f" The last run that built it took {duration(sum(wall.values()))}." if wall else ""
+    return (
+        f"Exit code {code}: {EXIT_CODES.get(code, 'see the README')}. Of {integer(counts['read'])} rows read "
+        f"{integer(counts['filtered'])} were filtered out and {integer(counts['selected'])} selected; "
+        f"{integer(stats.flagged)} rows of the catalogue carry a flag.{took}"
+    )
+
+
 def sample_answer(stats: CatalogueStats) -> str:
     """Return what the sample looks like."""
     told = []
@@ -156,7 +168,7 @@ def worries(facts: Mapping[str, Any], stats: CatalogueStats) -> list[str]:
         (bool(off), f"the zero points of {', '.join(off)} look wrong"),
         (
             low > WORRY_LOW_P_VALUES,
-            f"{percent(low)} of the stars fit worse than one star in a hundred should",
+            f"{percent(low)} of the predictive p-values lie below {LOW_P_VALUE:g}",
         ),
         (
             bool(medians),
