@@ -41,6 +41,7 @@ class DirectoryBusy(StarkilnError):
 
 
 def nearest(name: str, known: Iterable[str]) -> str:
-    """Return " (did you mean 'x'?)" for the closest known name, or an empty string."""
-    close = difflib.get_close_matches(name, list(known), n=1, cutoff=0.5)
-    return f" (did you mean {close[0]!r}?)" if close else ""
+    """Return " (did you mean 'x'?)" for the closest known name, whatever its case, or an empty string."""
+    spelt = {text.lower(): text for text in known}
+    close = difflib.get_close_matches(name.lower(), list(spelt), n=1, cutoff=0.5)
+    return f" (did you mean {spelt[close[0]]!r}?)" if close else ""

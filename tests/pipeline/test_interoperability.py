@@ -230,6 +230,20 @@ def test_columns_that_no_run_can_take_are_all_named(tmp_path):
     assert list(tmp_path.iterdir()) == []
 
 
+def test_what_is_no_table_is_refused(tmp_path):
+    for other in ("my.csv", mixed_table().to_pandas()):
+        with pytest.raises(
+            TypeError, match=r"takes an astropy Table, not a .*: Table.read\(path\) makes one of a file"
+        ):
+            starkiln.write_parquet(other, tmp_path / "my.parquet")
+
+
+def test_a_csv_as_input_is_told_the_way_in(tmp_path):
+    mixed_table().write(tmp_path / "my.csv")
+    with pytest.raises(InputError, match=r"my.csv: is no Parquet file: starkiln.write_parquet\(Table.read"):
+        open_source(settings_for(tmp_path / "my.csv", tmp_path / "run"))
+
+
 def test_masks_in_columns_of_their_own_are_refused(tmp_path):
     table = Table.from_pandas(stars(5).to_pandas())
     table["panstarrs_g"] = MaskedColumn(table["panstarrs_g"], mask=[True, *[False] * 4])

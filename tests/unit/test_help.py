@@ -11,6 +11,7 @@ from typer.main import get_command
 from typer.testing import CliRunner
 
 from starkiln import cli
+from starkiln.errors import nearest
 from starkiln.stages.model import METHOD_VERSION
 
 COMMANDS = sorted(get_command(cli.app).commands)
@@ -167,3 +168,8 @@ def assert_one_voice(stderr, said):
 def test_an_unknown_command_and_option_name_the_nearest():
     assert "Did you mean 'run'?" in call("runn").stderr
     assert "--quiet" in call("run", "--quite").stderr
+
+
+def test_the_nearest_name_is_found_in_any_case():
+    assert nearest("jmag", ["Hmag", "Jmag", "Kmag"]) == " (did you mean 'Jmag'?)"
+    assert nearest("flux", ["name", "ra"]) == ""

@@ -23,11 +23,18 @@ def write_parquet(table: Table, path: str | Path) -> None:
 
     Raises
     ------
+    TypeError
+        If it is no astropy Table.
     InputError
         If a column holds more than one number, text, truth or time in a row, or coordinates.
     EnvironmentTrouble
         If the disk refuses the file.
     """
+    if not isinstance(table, Table):
+        raise TypeError(
+            f"write_parquet takes an astropy Table, not a {type(table).__name__}: Table.read(path) makes one of a "
+            "file, Table.from_pandas(frame) one of a DataFrame"
+        )
     path = Path(path)
     arrays, problems = [], []
     for name in table.colnames:

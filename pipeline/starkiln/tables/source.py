@@ -156,10 +156,20 @@ def _read_footer(path: Path) -> _Footer | str:
     except (OSError, ValueError, pa.ArrowException) as problem:
         if not path.exists():
             return "is a broken link, or has vanished"
+        if not _begins_as_parquet(path):
+            return "is no Parquet file: starkiln.write_parquet(Table.read(...), ...) makes one of FITS, VOTable or CSV"
         return f"is no whole Parquet file ({_first_line(problem)}): write it again"
     return _Footer(
         schema, tuple(metadata.row_group(group).num_rows for group in range(metadata.num_row_groups))
     )
+
+
+def _begins_as_parquet(path: Path) -> bool:
+    try:
+        with path.open("rb") as file:
+            return file.read(4) == b"PAR1"
+    except OSError:
+        return True
 
 
 def _with_units(schema: pa.Schema, units: Mapping[str, str]) -> pa.Schema:
