@@ -64,7 +64,8 @@ def test_a_run_tells_where_the_catalogue_is_and_shows_its_first_rows(command, co
     assert shown.exit_code == 0
     lines = shown.stdout.splitlines()
     assert lines[0] == f"20 of 20 stars are in {tmp_path}/run/catalogue"
-    assert len(lines) == 1 + 1 + 5
+    assert len(lines) == 1 + 1 + 5 + 1
+    assert lines[-1] == f"the quality page is {tmp_path}/run/report/index.html"
     assert shown.stderr == ""
     assert command("path", tmp_path / "run").output == f"{tmp_path}/run/generations/000001\n"
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import logging
 import re
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -258,6 +259,8 @@ def _axes(width_inch: float, height_inch: float) -> Any:
 
 def drawing_style() -> Any:
     """Return the context in which figures are drawn."""
+    # Where it cannot keep its list of fonts is no news for a cron job.
+    logging.getLogger("matplotlib").setLevel(logging.ERROR)
     import matplotlib
 
     return matplotlib.rc_context(STYLE | {"svg.hashsalt": "starkiln"})

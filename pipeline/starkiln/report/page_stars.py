@@ -130,9 +130,9 @@ def model_fluxes(star: Mapping[str, Any], bands: Bands) -> dict[str, float] | No
     second factor is left at zero.
     """
     needed = [star.get(name) for name in ("teff_p50", "ang_diam_p50", "av_p50")]
-    if any(value is None for value in needed):
+    teff_k, ang_diam_mas, av_mag = (float("nan") if value is None else float(value) for value in needed)
+    if not (teff_k > 0.0 and ang_diam_mas > 0.0):
         return None
-    teff_k, ang_diam_mas, av_mag = (float(value) for value in needed)  # type: ignore[arg-type]
     try:
         ln_flux_jy = ln_flux(bands.table, teff_k, av_mag)[0] + 2.0 * np.log(0.5 * ang_diam_mas / MAS_PER_RAD)
     except ValueError:
