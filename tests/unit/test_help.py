@@ -71,8 +71,8 @@ NO_NETWORK = (
 )
 
 
-def complete(**environment):
-    command = [sys.executable, "-c", NO_NETWORK]
+def complete(*arguments, **environment):
+    command = [sys.executable, "-c", NO_NETWORK, *arguments]
     return subprocess.run(command, capture_output=True, text=True, env=os.environ | environment)
 
 
@@ -84,6 +84,16 @@ def test_completion_is_written_without_a_network(shell, words):
     assert words in shown.stdout
     assert "starkiln" in shown.stdout
     assert shown.stderr == ""
+
+
+def test_completion_is_installed_at_home_without_a_network(tmp_path):
+    # Under a test runner there is no shell to be found out.
+    environment = {"HOME": str(tmp_path), "_TYPER_COMPLETE_TEST_DISABLE_SHELL_DETECTION": "1"}
+    shown = complete("--install-completion", "bash", **environment)
+    assert shown.returncode == 0
+    sourced = re.search(r"source '?([^'\n]+)", (tmp_path / ".bashrc").read_text())
+    with open(sourced[1]) as script:
+        assert "complete -o default -F _starkiln_completion starkiln" in script.read()
 
 
 @pytest.mark.parametrize(
