@@ -1,7 +1,8 @@
 """The VOTable header that makes a Parquet file a VOParquet file (IVOA Note VOParquet 1.0, 2025-01-16).
 
 astropy reads such files with ``Table.read(path, format="parquet.votable")``. That reader turns null floats
-and integers into NaN and a null string into the word None; `starkiln.read` keeps them apart.
+and integers into NaN and a null string into the word None, and cannot read a null among lists of draws;
+`starkiln.read` keeps them apart and reads those.
 """
 
 from __future__ import annotations
