@@ -74,7 +74,7 @@ def test_duration(seconds, text):
 
 
 def test_percent_and_size():
-    assert (page_words.percent(0.0123), page_words.percent(1.0)) == ("1.2 %", "100 %")
+    assert (page_words.percent(0.0123), page_words.percent(1.0)) == ("1.2\xa0%", "100\xa0%")
     assert (page_words.size(999), page_words.size(5_088_912), page_words.size(2.5e9)) == ("999 bytes", "5 MB", "2.5 GB")
 
 
@@ -114,8 +114,8 @@ def test_worries_of_a_catalogue(run):
     band = stats.bands["2mass_j"]
     band.counts[:] = np.roll(band.counts, 20, axis=1)  # two sigma
     found = " | ".join(page_verdict.worries(run.facts, stats))
-    assert "10.0 % of the stars did not converge" in found
-    assert "20.0 % of the predictive p-values lie below 0.01" in found
+    assert "10.0\xa0% of the stars did not converge" in found
+    assert "20.0\xa0% of the predictive p-values lie below 0.01" in found
     assert "2mass_j (+2." in found
 
 

@@ -198,7 +198,7 @@ class Figures:
         axes.yaxis.set_major_formatter(lambda value, _: f"{100.0 * value:g} %")
         axes.yaxis.set_minor_formatter(lambda value, _: "")
         axes.grid(axis="y", color=RULE, linewidth=0.6)
-        axes.set_xlabel("apparent bolometric magnitude [mag], bright to faint")
+        axes.set_xlabel("bolometric magnitude [mag], bright to faint")
         axes.set_ylabel("half of the 68 % interval / median")
         alt = "Lines of the median half-width of the 68 % intervals against brightness. " + "; ".join(told) + "."
         return self._finish(axes.figure, "interval-widths", "Interval widths against brightness", alt)

@@ -131,7 +131,7 @@ def scale_answer(settings: Mapping[str, Any]) -> str:
     else:
         scale = (
             "The temperature scale is that of the reference stars behind the departures. Published scales differ by "
-            "2 %, for M dwarfs by 5 %, which the intervals do not hold."
+            "2\N{NO-BREAK SPACE}%, for M dwarfs by 5\N{NO-BREAK SPACE}%, which the intervals do not hold."
         )
     return scale + " Unresolved companions and dust unlike the law make a star look other than it is."
 

@@ -44,7 +44,7 @@ def percent(share: Any) -> str:
     share = float(share)
     if not math.isfinite(share):
         return "–"
-    return f"{number(100.0 * share, 2 if abs(share) < 0.1 else 3)} %"
+    return f"{number(100.0 * share, 2 if abs(share) < 0.1 else 3)}\N{NO-BREAK SPACE}%"
 
 
 def duration(seconds: float) -> str:
