@@ -16,6 +16,9 @@ from starkiln.engine.onestar import find_star
 from starkiln.engine.run import run_settings
 from starkiln.errors import SettingsError
 from starkiln.flags import names
+from starkiln.physics.constants import MAS_PER_RAD
+from starkiln.physics.extinction import extinction_ratio
+from starkiln.physics.planck import exitance_jy
 from starkiln.report.star import band_rows, describe_star
 from starkiln.report.star_command import file_stem, star
 
@@ -49,6 +52,7 @@ def survey(tmp_path_factory):
         input__photometry=photometry,
         input__where=[["night", "=", 1]],
         model__photosphere="auto",
+        model__blackbody={"fraction": 0.9999999},  # three bands say little, and some stars must be taken for one
         **QUICK,
     )
     assert run_settings(settings).exit_code == 0
@@ -100,6 +104,7 @@ def copied(folder, tmp_path):
 def test_a_star_alone_has_the_bits_of_the_catalogue(survey):
     rows = pq.read_table(survey / "run" / "catalogue").to_pylist()
     assert len(rows) == 20
+    assert {row["photosphere"] for row in rows} == {"blackbody", "calibrated"}
     for row in rows:
         found = find_star(survey / "run", str(row["star_id"]))
         assert found.refit_problem == ""
@@ -198,6 +203,22 @@ def test_another_method_leaves_the_stored_numbers(named_survey, monkeypatch):
     assert "the method's version changed" in found.refit_problem
     assert found.closeup is None
     assert found.input_row is not None
+
+
+@pytest.mark.parametrize("photosphere", ["blackbody", "calibrated"])
+def test_without_a_fit_the_model_is_that_of_the_stored_medians(survey, monkeypatch, photosphere):
+    monkeypatch.setattr(provenance, "METHOD_VERSION", 99)
+    rows = pq.read_table(survey / "run" / "catalogue").to_pylist()
+    row = next(row for row in rows if row["photosphere"] == photosphere)
+    found = find_star(survey / "run", str(row["star_id"]))
+    omega = (row["ang_diam_p50"] / 2.0 / MAS_PER_RAD) ** 2
+    for passband, flux_jy in zip(found.model.passbands.values(), found.bands.flux_jy, strict=True):
+        bare_jy = omega * passband.average(
+            lambda um: (
+                exitance_jy(um, row["teff_p50"]) * 10 ** (-0.4 * row["av_p50"] * extinction_ratio("G23", 3.1, um))
+            )
+        )
+        assert (abs(flux_jy / bare_jy - 1) < 1e-3) == (photosphere == "blackbody")
 
 
 def test_settings_that_cannot_be_read_leave_the_stored_numbers(named_survey, tmp_path):

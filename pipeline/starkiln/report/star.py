@@ -247,7 +247,7 @@ def _band_lines(rows: Sequence[BandRow], *, rejected: bool) -> list[str]:
     head = ("band", "pivot [um]", "observed [Jy]", "error [Jy]", "model [Jy]", "resid. [sigma]", "outlier", "")
     table = [head]
     for row in rows:
-        use = "" if rejected and row.use == "used" else row.use
+        use = "usable" if rejected and row.use == "used" else row.use
         table.append(
             (
                 row.band,
