@@ -15,6 +15,7 @@ if CHROMIUM is None:
 playwright_api = pytest.importorskip("playwright.sync_api")
 
 WIDE, NARROW = {"width": 1280, "height": 900}, {"width": 360, "height": 780}
+PAPER = {"width": 700, "height": 1000}  # A4 less its margins, in CSS pixels
 LEAST_CONTRAST = 4.5  # WCAG 2.2, success criterion 1.4.3
 FLAGS = "table:has-text('Flags of the catalogue')"
 WORST = "table:has-text('Largest residual')"
@@ -242,8 +243,9 @@ def test_what_scrolls_inside_is_reached_by_keyboard(open_page):
 
 
 def test_print_shows_the_pictures_and_no_controls(open_page):
-    page = open_page()
+    page = open_page(PAPER)
     page.emulate_media(media="print")
+    assert page.evaluate("document.documentElement.scrollWidth") == PAPER["width"]
     assert page.locator(".filter").first.is_hidden()
     assert page.locator("nav").is_hidden()
     page.evaluate("dispatchEvent(new Event('beforeprint'))")

@@ -256,6 +256,7 @@ def test_json_holds_all_of_it(named_survey, tmp_path):
     [
         ("survey", "HD 1", "column 'star_id', are integers"),
         ("survey", "99999999999999999999", "are integers"),
+        ("survey", str(2**61).replace("3", "3_", 1), "are integers"),
         ("survey", "12", "no star of this run has star_id = 12 among its 22 rows; its ids look like"),
         ("survey", str(2**61 + 23), "input.where leaves out"),
         ("named_survey", "hd 1 ", r"did you mean 'HD 1'\?"),

@@ -5,6 +5,7 @@ import os
 import re
 from html import unescape
 from html.parser import HTMLParser
+from pathlib import Path
 
 import pytest
 from typer.testing import CliRunner
@@ -153,6 +154,23 @@ def test_a_failing_page_leaves_the_old_one_and_no_rest(run_dir, monkeypatch):
 
     monkeypatch.setattr(page, "render", fail)
     with pytest.raises(EnvironmentTrouble, match="No space left"):
+        build_page(run_dir)
+    assert (run_dir / "report" / "index.html").read_bytes() == before
+    assert not list((run_dir / "generations" / "000001").glob(".report*"))
+
+
+def test_a_page_that_cannot_be_put_in_place_leaves_the_old_one(run_dir, monkeypatch):
+    rename = Path.rename
+
+    def refuse(path, target):
+        if path.suffix == ".tmp":
+            raise PermissionError(13, "Permission denied")
+        return rename(path, target)
+
+    before = (run_dir / "report" / "index.html").read_bytes()
+    monkeypatch.setattr(page, "render", lambda run, figures: "new")
+    monkeypatch.setattr(Path, "rename", refuse)
+    with pytest.raises(EnvironmentTrouble, match="Permission denied"):
         build_page(run_dir)
     assert (run_dir / "report" / "index.html").read_bytes() == before
     assert not list((run_dir / "generations" / "000001").glob(".report*"))

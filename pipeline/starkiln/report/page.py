@@ -11,6 +11,7 @@ import tomllib
 import uuid
 import warnings
 from collections.abc import Mapping
+from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -120,13 +121,16 @@ def build_page(run_dir: Path) -> Path:
 
 
 def _put_in_place(fresh: Path, place: Path) -> None:
-    if place.exists():
-        old = fresh.with_suffix(".old")
+    old = fresh.with_suffix(".old")
+    with suppress(FileNotFoundError):
         place.rename(old)
+    try:
         fresh.rename(place)
-        shutil.rmtree(old)
-    else:
-        fresh.rename(place)
+    except OSError:
+        with suppress(OSError):
+            old.rename(place)
+        raise
+    shutil.rmtree(old, ignore_errors=True)
 
 
 def _link(link: Path, target: Path) -> None:

@@ -9,7 +9,8 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from starkiln.engine.onestar import Star, StarId
+from starkiln.engine.lookup import StarId
+from starkiln.engine.onestar import Star
 from starkiln.flags import FLAGS
 from starkiln.tables.columns import QUANTITIES
 
