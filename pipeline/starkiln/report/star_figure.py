@@ -162,10 +162,10 @@ def _core(passband: Passband) -> tuple[float, float]:
 
 def _wavelength_ticks(axes: Any) -> None:
     low, high = axes.get_xlim()
-    steps = [step * 10.0**power for power in range(-2, 3) for step in (1, 1.5, 2, 3, 5, 7)]
+    ratio = high / low
+    digits = (1, 2, 3, 5) if ratio > 12 else (1, 1.5, 2, 3, 5, 7) if ratio > 5 else (1, 1.5, 2, 3, 4, 5, 6, 7, 8, 9)
+    steps = [digit * 10.0**power for power in range(-2, 4) for digit in digits]
     wanted = [step for step in steps if low * 1.02 <= step <= high / 1.02]
-    if high / low > 12:
-        wanted = [step for step in wanted if f"{step:e}"[0:3] in ("1.0", "2.0", "3.0", "5.0")]
     axes.set_xticks(wanted, [f"{step:g}" for step in wanted])
     axes.set_xticks([], minor=True)
     axes.set_xlabel("wavelength [µm]")
