@@ -6,7 +6,7 @@ A small survey of blackbodies is fitted with short chains on two workers, once u
 steps take. Then as many runs are killed as are asked for, each in a run directory of its own that holds two older
 generations: the driver, one worker, or the whole process group, at an instant drawn uniformly from the undisturbed
 run's duration; five more each at an instant of planning, packing and publishing, by what the run itself says it does,
-since those are short and a busy machine shifts them; one that comes too late is drawn again. Each is run again, until it
+since those are short and a busy machine shifts them; one that comes too late is drawn again. Each is run again until it
 ends with 0. All the while a reader reads the catalogue again and again. A worker that is to be killed before there are
 any stands for the driver.
 """
