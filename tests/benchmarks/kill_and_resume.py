@@ -5,8 +5,10 @@
 A small survey of blackbodies is fitted with short chains on two workers, once undisturbed, which tells how long its
 steps take. Then as many runs are killed as are asked for, each in a run directory of its own that holds two older
 generations: the driver, one worker, or the whole process group, at an instant drawn uniformly from the undisturbed
-run's duration; ten more at one drawn from its packing and publishing. Each is run again, until it ends with 0. All the
-while a reader reads the catalogue again and again.
+run's duration; five more each at an instant of planning, packing and publishing, by what the run itself says it does,
+since those are short and a busy machine shifts them; one that comes too late is drawn again. Each is run again until it
+ends with 0. All the while a reader reads the catalogue again and again. A worker that is to be killed before there are
+any stands for the driver.
 """
 
 from __future__ import annotations
@@ -22,8 +24,9 @@ import threading
 import time
 from collections import Counter
 from contextlib import suppress
-from datetime import datetime
+from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import psutil
@@ -38,7 +41,11 @@ from starkiln.settings import Settings, dump_toml
 
 FILES, ROWS_A_FILE = 3, 180
 COMPUTE = {"compute__workers": 2, "compute__rows_per_part": 30}
-AIMED = 10
+AIMED = 5
+STEPS = {"planning": "plan", "packing": "pack", "publishing": None}
+"""Steps as progress.json names them, and as run.json names the time they took."""
+
+PUBLISHING_S = 0.1
 VICTIMS = ("driver", "worker", "group")
 KEPT = ["000002", "000003"]
 
@@ -134,26 +141,44 @@ def state_of(run_dir: Path) -> str:
     return "before"
 
 
-def one(survey: Path, run_dir: Path, instant_s: float, victim: str, random: np.random.Generator) -> dict[str, object]:
-    """Kill a run at an instant, run again, and return what was found."""
+@dataclass(frozen=True)
+class Case:
+    """Whom to kill, and when: so many seconds after the start, or after a step has begun."""
+
+    victim: str
+    after_s: float
+    step: str | None = None
+
+    def __str__(self) -> str:
+        return f"{self.victim:6s} {self.after_s:5.2f} s into {self.step or 'the run'}"
+
+
+def wait_for(case: Case, process: subprocess.Popen[bytes], run_dir: Path) -> None:
+    """Wait until the moment of a case, or until the run has ended."""
+    while case.step is not None and process.poll() is None and state_of(run_dir) != case.step:
+        time.sleep(0.002)
+    began = time.monotonic()
+    while process.poll() is None and time.monotonic() - began < case.after_s:
+        time.sleep(0.002)
+
+
+def one(survey: Path, run_dir: Path, case: Case, random: np.random.Generator) -> dict[str, Any]:
+    """Kill a run, run again, and return what was found."""
     settings = settings_of(survey, run_dir, seed=2)
     reader = Reader(run_dir)
     reader.start()
-    began = time.monotonic()
     process = start(settings)
-    while process.poll() is None and time.monotonic() - began < instant_s:
-        time.sleep(0.005)
-    state = state_of(run_dir)
-    killed = kill(process, victim, random)
+    wait_for(case, process, run_dir)
+    killed = kill(process, case.victim, random)
     process.communicate(timeout=600)
+    state = state_of(run_dir)
     if process.returncode != 0:
         finish(settings)
     reader.leave()
     left = sorted(path.name for path in (run_dir / "generations").iterdir())
     table = catalogue_of(run_dir / "current")
     return {
-        "state": state,
-        "killed": killed,
+        "state": state if killed and process.returncode else "went on",
         "digest": digest(table),
         "rows": table.num_rows,
         "ids": len(table["star_id"].unique()),
@@ -162,19 +187,22 @@ def one(survey: Path, run_dir: Path, instant_s: float, victim: str, random: np.r
     }
 
 
+def cases_of(count: int, duration_s: float, undisturbed: Path, random: np.random.Generator) -> list[Case]:
+    """Return the cases: some at any instant, and some aimed at the short steps."""
+    cases = [Case(VICTIMS[n % 3], random.uniform(0, duration_s)) for n in range(count)]
+    wall = json.loads((undisturbed / "current" / "run.json").read_text())["seconds"]["wall"]
+    for step, lap in STEPS.items():
+        length_s = wall[lap] if lap else PUBLISHING_S
+        cases += [Case(VICTIMS[2 * (n % 2)], random.uniform(0, length_s), step) for n in range(AIMED)]
+    return cases
+
+
 def fresh_dir(folder: Path, name: str, older: Path) -> Path:
     """Return a run directory that is a copy of one with an older generation."""
     run_dir = folder / name
     subprocess.run(["cp", "-a", older, run_dir], check=True)
     (run_dir / "progress.json").unlink()
     return run_dir
-
-
-def spans_of(run_dir: Path) -> tuple[float, float]:
-    """Return the seconds from a run's start to its packing, and to its end, by its own account."""
-    facts = json.loads((run_dir / "current" / "run.json").read_text())
-    whole = (datetime.fromisoformat(facts["end"]) - datetime.fromisoformat(facts["start"])).total_seconds()
-    return whole - facts["seconds"]["wall"]["pack"], whole
 
 
 def main() -> None:
@@ -192,26 +220,23 @@ def main() -> None:
         undisturbed = fresh_dir(folder, "undisturbed", older)
         duration_s = finish(settings_of(survey, undisturbed, seed=2))
         expected = digest(catalogue_of(undisturbed / "current"))
-        packing_s, end_s = spans_of(undisturbed)
         rows = FILES * ROWS_A_FILE
-        late_s = duration_s - (end_s - packing_s)
-        print(f"undisturbed: {rows} rows in {duration_s:.1f} s, packing and publishing from {late_s:.1f} s on")
-        cases = [(random.uniform(0, duration_s), VICTIMS[n % 3]) for n in range(count)]
-        cases += [(random.uniform(late_s, duration_s), VICTIMS[2 * (n % 2)]) for n in range(AIMED)]
-        bad, states = 0, Counter()
-        for number, (instant_s, victim) in enumerate(cases):
+        print(f"undisturbed: {rows} rows in {duration_s:.1f} s", flush=True)
+        cases, states, bad = cases_of(count, duration_s, undisturbed, random), Counter(), 0
+        for number, case in enumerate(cases):
             run_dir = fresh_dir(folder, f"run{number}", older)
-            found = one(survey, run_dir, instant_s, victim, random)
-            same = found["digest"] == expected
-            whole = set(found["seen"]) <= {old, expected}
+            found = one(survey, run_dir, case, random)
+            same, whole = found["digest"] == expected, set(found["seen"]) <= {old, expected}
             fine = same and whole and found["rows"] == found["ids"] == rows and found["left"] == KEPT
-            states[found["state"] if found["killed"] else "had ended"] += 1
+            states[found["state"]] += 1
+            if case.step is not None and found["state"] == "went on":
+                # The step was over before: once more, sooner.
+                cases.append(replace(case, after_s=random.uniform(0, case.after_s)))
             bad += not fine
             print(
-                f"{number:3d} {victim:6s} at {instant_s:5.2f} s, {found['state']:12s} "
-                f"{'same bytes' if same else 'OTHER BYTES'}, {found['rows']} rows, {found['ids']} ids, "
-                f"{sum(found['seen'].values())} readings {'whole' if whole else 'MIXED'}"
-                f"{'' if found['left'] == KEPT else ' LEFT ' + ' '.join(found['left'])}",
+                f"{number:3d} {case}, {found['state']:10s} {'same bytes' if same else 'OTHER BYTES'}, "
+                f"{found['rows']} rows, {found['ids']} ids, {sum(found['seen'].values())} readings "
+                f"{'whole' if whole else 'MIXED'}{'' if found['left'] == KEPT else ' LEFT ' + ' '.join(found['left'])}",
                 flush=True,
             )
             subprocess.run(["rm", "-r", run_dir], check=True)
