@@ -63,7 +63,7 @@ def test_nights_add_up(start, tmp_path):
 def test_a_limit_that_leaves_no_time_at_all_is_an_error_of_the_command_line(start, settings):
     code, out, err = ended(start(settings, "pass_through", "--time-limit", "0.1s", cluster=False))
     assert (code, out) == (2, "")
-    assert err == "starkiln: --time-limit is too short to read a single input file; give more\n"
+    assert err == "starkiln: --time-limit is too short to start, or to read a single input file; give more\n"
 
 
 def stop_instead_of_working(monkeypatch):
@@ -79,6 +79,19 @@ def test_a_part_that_takes_longer_than_the_limit_is_told_with_the_remedy(setting
     told = r"a part of 20 rows takes about 1 s.*or lower compute.rows_per_part"
     with StopFlag(1e6) as stop, pytest.raises(SettingsError, match=told):
         run_settings(settings, stages=stages(pass_through), stop=stop)
+
+
+def test_workers_are_not_started_when_there_is_no_time_left(settings, monkeypatch):
+    monkeypatch.setattr(build, "SMALL_RUN_ROWS", -1)
+    monkeypatch.setattr(build, "open_cluster", None)
+    monkeypatch.setattr(StopFlag, "has_time_for", lambda stop, seconds: seconds != build.START_SECONDS)
+    with pytest.raises(RunStopped, match="stopped by the time limit: 0 of 6 parts are done"):
+        run_settings(settings, stages=stages(pass_through))
+
+
+def test_workers_that_are_killed_at_the_end_of_the_time_make_no_noise(start, settings):
+    code, out, err = ended(start(settings, "take_long", "--time-limit", "20s", "--quiet"))
+    assert (code, out, err) == (5, "", "")
 
 
 def test_planning_goes_on_with_the_next_file(settings, tmp_path, monkeypatch):

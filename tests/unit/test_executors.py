@@ -1,5 +1,6 @@
 import asyncio
 import gc
+import logging
 import os
 import signal
 import tempfile
@@ -12,7 +13,14 @@ import pytest
 
 from real_runs import still_running, workers_of
 from starkiln.engine import executors
-from starkiln.engine.executors import ClusterTrouble, Finished, SerialExecutor, WorkerDied, open_cluster
+from starkiln.engine.executors import (
+    ClusterTrouble,
+    Finished,
+    SerialExecutor,
+    WorkerDied,
+    asyncio_silenced,
+    open_cluster,
+)
 
 MEMORY = 1_000_000_000
 
@@ -232,3 +240,11 @@ def test_workers_that_do_not_start_are_trouble(tmp_path, monkeypatch):
 
 def refuse(**options):
     raise RuntimeError("no")
+
+
+def test_dask_is_silent_until_a_cluster_is_closed_and_speaks_again():
+    told = logging.getLogger("distributed.nanny")
+    before = told.isEnabledFor(logging.WARNING)
+    with asyncio_silenced():
+        assert not told.isEnabledFor(logging.ERROR)
+    assert told.isEnabledFor(logging.WARNING) == before

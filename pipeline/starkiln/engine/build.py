@@ -36,6 +36,9 @@ from starkiln.settings import Settings
 
 TOLD_BEFORE_SECONDS = 0.5
 
+START_SECONDS = 5.0
+"""With less time than that workers are not started: they could do no part any more."""
+
 KEPT_ROWS_LIKE_ONE_FITTED = 200
 """So many rows can be taken over while one is fitted."""
 
@@ -324,10 +327,16 @@ class Making:
             yield _InterruptedExecutor(bench.stop), job
         else:
             self._warm_up()
+            self._check_time_to_start()
             workers = min(worker_count(bench.settings), left)
             with open_cluster(workers, bench.settings.compute.memory_per_worker_bytes, bench.scratch) as cluster:
                 bench.laps.lap("start workers")
                 yield cluster, job.save()
+
+    def _check_time_to_start(self) -> None:
+        # Starting them cannot be interrupted.
+        if not self._bench.stop.has_time_for(START_SECONDS):
+            raise RunStopped("stopped before workers were started; run again to go on")
 
     def _warm_up(self) -> None:
         """Compile what the stages need, so that no task takes long for it."""

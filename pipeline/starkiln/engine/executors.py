@@ -255,15 +255,20 @@ def _temporary_files_in(folder: Path) -> Iterator[None]:
 
 @contextmanager
 def asyncio_silenced() -> Iterator[None]:
-    """Keep asyncio from telling of errors that nobody fetched: dask leaves some behind when workers die."""
-    logger = logging.getLogger("asyncio")
-    level = logger.level
-    logger.setLevel(logging.CRITICAL)
+    """Keep asyncio from telling of errors that nobody fetched, and dask of workers that are killed in the end.
+
+    dask leaves such errors behind when workers die, and tells of deaths even after it has closed a cluster.
+    """
+    loggers = [logging.getLogger(name) for name in ("asyncio", "distributed")]
+    levels = [logger.level for logger in loggers]
+    for logger in loggers:
+        logger.setLevel(logging.CRITICAL)
     try:
         yield
     finally:
         gc.collect()  # asyncio tells when it finds the error thrown away
-        logger.setLevel(level)
+        for logger, level in zip(loggers, levels, strict=True):
+            logger.setLevel(level)
 
 
 @contextmanager

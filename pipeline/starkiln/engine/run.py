@@ -235,7 +235,7 @@ class _Run:
 
     def _too_short(self, ledger: Ledger) -> SettingsError:
         if self._making is None:
-            return SettingsError("--time-limit is too short to read a single input file; give more")
+            return SettingsError("--time-limit is too short to start, or to read a single input file; give more")
         rows = max(max(unit.part_rows) for unit in self._making.plan.units)
         seconds = Pace(ledger.fit_rates()).seconds_for(rows)
         return SettingsError(
