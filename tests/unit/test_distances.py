@@ -5,9 +5,9 @@ import pytest
 from scipy.integrate import quad
 from scipy.stats import kstest, norm
 
+from distance_posterior import log_density, mode_pc
 from starkiln.inference.distances import GAUSSIAN, NONE, PARALLAX, DistanceData, draw_distances
 from starkiln.inference.streams import star_streams
-from starkiln.physics.distance import log_density, mode_pc
 
 BOUNDS_PC = (0.1, 2e5)
 ANY_RADIUS = (-1000.0, 1000.0)
