@@ -10,21 +10,14 @@ import emcee
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.inference.arithmetic import exp, log
+from starkiln.inference.arithmetic import log
 from starkiln.inference.compile import kernel
 from starkiln.inference.convergence import Convergence, autocorrelation_times, diagnose
-from starkiln.inference.moves import (
-    INFLATION,
-    BlockMove,
-    Proposal,
-    draw_independent,
-    learn_proposal,
-    make_scratch,
-    proposal_axes,
-)
+from starkiln.inference.knots import fit_proposal
+from starkiln.inference.moves import BlockMove
 from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, log_posterior
-from starkiln.inference.start import Modes, cholesky, find_modes
-from starkiln.inference.streams import uniform
+from starkiln.inference.proposal import Proposal, draw_independent, make_scratch
+from starkiln.inference.start import Modes, find_modes
 
 BURN_IN = (16, 16, 16, 24)
 INDEPENDENCE = (0.4, 0.5, 0.6, 0.7, 0.85)
@@ -129,7 +122,6 @@ def burn_in(block: Block, grid: Grid, prior: Prior, streams: NDArray[np.uint64],
     run = _Run(block, grid, prior, streams, walkers, *_first_walkers(block, grid, prior, modes, streams, walkers))
     for length, share in zip(BURN_IN, INDEPENDENCE, strict=False):
         window, _ = run.advance(length, share)
-        run.proposal = learn_proposal(window[length // 4 :], run.n_stars, prior.fit_av)
     run.forget()
     return run
 
@@ -144,9 +136,9 @@ def _first_walkers(
 ) -> tuple[Proposal, NDArray[np.float64], NDArray[np.float64]]:
     """Draw each star's first walkers from its Laplace fit, and again where one falls outside the bounds."""
     n_stars, _, ndim = modes.coords.shape
-    proposal = _laplace_proposal(modes, prior.fit_av)
+    proposal = fit_proposal(block, grid, prior, modes)
     coords = np.empty((n_stars * walkers, ndim))
-    _draw_walkers(proposal, modes, streams, coords)
+    _draw_walkers(proposal, prior.fit_av, streams, coords)
     log_prob_of = log_prob_function(block, grid, prior)
     log_prob = log_prob_of(coords)
     for _ in range(6):
@@ -158,49 +150,13 @@ def _first_walkers(
     return proposal, coords, log_prob
 
 
-def _laplace_proposal(modes: Modes, fit_av: bool) -> Proposal:
-    n_stars, _, ndim = modes.coords.shape
-    axes = proposal_axes(ndim, fit_av)
-    centre = np.ascontiguousarray(modes.coords[:, 0][:, axes])
-    factor = np.empty((n_stars, ndim, ndim))
-    _factor_modes(modes.covariance, axes, factor)
-    return Proposal(axes, fit_av, centre, factor, np.zeros((n_stars, ndim)))
-
-
 @kernel
-def _factor_modes(covariance, axes, factor):
-    ndim = axes.size
-    ordered = np.empty((ndim, ndim))
-    for star in range(covariance.shape[0]):
-        for k in range(ndim):
-            for m in range(ndim):
-                ordered[k, m] = INFLATION * covariance[star, 0, axes[k], axes[m]]
-        factor[star] = cholesky(ordered)
-
-
-@kernel
-def _draw_walkers(proposal, modes, streams, coords):
-    """Draw walkers about a star's peaks, each peak's share by its height; the spread is the first peak's."""
+def _draw_walkers(proposal, fit_av, streams, coords):
     n_stars = streams.shape[0]
     walkers = coords.shape[0] // n_stars
-    ndim = coords.shape[1]
-    scratch = make_scratch(ndim, walkers)
+    scratch = make_scratch(proposal.centre.shape[2], walkers)
     for star in range(n_stars):
-        draw_independent(proposal, star, streams[star], scratch, coords[star * walkers : (star + 1) * walkers])
-        total = 0.0
-        for m in range(modes.n_modes[star]):
-            total += exp(modes.log_density[star, m] - modes.log_density[star, 0])
-        for i in range(walkers):
-            row = star * walkers + i
-            pick = uniform(streams[star]) * total
-            mode = 0
-            for m in range(modes.n_modes[star]):
-                pick -= exp(modes.log_density[star, m] - modes.log_density[star, 0])
-                mode = m
-                if pick <= 0.0:
-                    break
-            for k in range(ndim):
-                coords[row, k] += modes.coords[star, mode, k] - modes.coords[star, 0, k]
+        draw_independent(proposal, star, fit_av, streams[star], scratch, coords[star * walkers : (star + 1) * walkers])
 
 
 @kernel
@@ -248,7 +204,7 @@ class _Run:
     def advance(self, n_steps: int, independence: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Take steps of every star's ensemble; return positions and log densities."""
         n_walkers, ndim = self.coords.shape
-        move = BlockMove(self.streams, self.proposal, independence)
+        move = BlockMove(self.streams, self.proposal, self.prior.fit_av, independence)
         sampler = emcee.EnsembleSampler(
             n_walkers, ndim, log_prob_function(self.block, self.grid, self.prior), moves=move, vectorize=True
         )

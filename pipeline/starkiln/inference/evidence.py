@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from math import gamma, log, pi
 from typing import NamedTuple
 
 import numpy as np
@@ -11,8 +10,8 @@ from numpy.typing import NDArray
 from starkiln.inference.arithmetic import HALF_LN_2PI
 from starkiln.inference.compile import kernel
 from starkiln.inference.ensemble import burn_in, log_prob_function
-from starkiln.inference.moves import TAIL, add_log_independent, draw_independent, make_scratch
 from starkiln.inference.posterior import Block, Grid, Prior
+from starkiln.inference.proposal import draw_independent, log_normalisation, log_proposal_density, make_scratch
 from starkiln.inference.start import Modes
 
 
@@ -49,33 +48,23 @@ def importance_draws(
         (S, 4) uint64, advanced in place.
     """
     run = burn_in(block, grid, prior, streams, walkers, modes)
-    n_stars, ndim = run.proposal.centre.shape
+    n_stars, ndim = run.n_stars, run.coords.shape[1]
     coords = np.empty((n_stars, n_draws, ndim))
-    log_density = np.zeros((n_stars, n_draws))
-    _draw(run.proposal, run.streams, coords, log_density)
+    log_density = np.empty((n_stars, n_draws))
+    _draw(run.proposal, prior.fit_av, run.streams, coords, log_density)
     log_prob = log_prob_function(block, grid, prior)(coords.reshape(-1, ndim)).reshape(n_stars, n_draws)
-    constant = _log_constant(1) + (_log_constant(ndim - 1) if ndim > 1 else 0.0)
-    log_weight = log_prob - log_density - constant - HALF_LN_2PI * len(grid.loading)
+    log_density += log_normalisation(run.proposal.centre.shape[2])
+    log_weight = log_prob - log_density - HALF_LN_2PI * len(grid.loading)
     return WeightedDraws(coords, log_weight)
 
 
-def _log_constant(ndim: int) -> float:
-    """Return the log normalisation of a standard multivariate t."""
-    return log(gamma(0.5 * (TAIL + ndim)) / gamma(0.5 * TAIL)) - 0.5 * ndim * log(pi * TAIL)
-
-
 @kernel
-def _draw(proposal, streams, coords, log_density):
+def _draw(proposal, fit_av, streams, coords, log_density):
     n_stars, n_draws, ndim = coords.shape
-    scratch = make_scratch(ndim, n_draws)
+    scratch = make_scratch(proposal.centre.shape[2], n_draws)
     for star in range(n_stars):
-        draw_independent(proposal, star, streams[star], scratch, coords[star])
-        add_log_independent(proposal, star, scratch.x, 1.0, log_density[star])
-        volume = 0.0
-        for k in range(ndim):
-            volume += np.log(proposal.factor[star, k, k])
-        for i in range(n_draws):
-            log_density[star, i] -= volume
+        draw_independent(proposal, star, fit_av, streams[star], scratch, coords[star])
+        log_proposal_density(proposal, star, fit_av, coords[star], scratch, log_density[star])
 
 
 def log_mean_exp(log_values: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -77,7 +77,7 @@ def _climb_all(block, grid, prior, coords):
     ndim = coords.shape[1]
     curvature = np.empty((ndim, ndim))
     for star in range(coords.shape[0]):
-        _climb(_one_star(block, star), grid, prior, coords[star], curvature)
+        _climb(one_star(block, star), grid, prior, coords[star], curvature)
 
 
 @kernel
@@ -87,7 +87,7 @@ def _search(block, grid, prior, ln_teff_nodes, av_nodes, modes):
     best_av = np.empty(n_nodes)
     best_ln_omega = np.empty(n_nodes)
     for star in range(block.n_bands.size):
-        one = _one_star(block, star)
+        one = one_star(block, star)
         _profile(one, grid, prior, ln_teff_nodes, av_nodes, profile, best_av, best_ln_omega)
         _climb_peaks(one, grid, prior, ln_teff_nodes, profile, best_av, best_ln_omega, modes, star)
         if prior.outlier_fraction > 0.0 and _has_outlier(one, grid, prior, modes.coords[star, :1]):
@@ -184,7 +184,7 @@ def _profile_by_band(one, grid, prior, ln_teff, av_nodes, profile, best_av, best
 
 
 @kernel
-def _one_star(block, star):
+def one_star(block, star):
     rows = slice(star, star + 1)
     return Block(
         block.n_bands[rows],
@@ -276,7 +276,7 @@ def _climb(one, grid, prior, point, curvature):
     log_posterior(trial, one, grid, prior, value)
     best = value[0]
     damping = 1e-3
-    _slopes(one, grid, prior, point, gradient, curvature)
+    slopes(one, grid, prior, point, gradient, curvature)
     for _ in range(40):
         damped = curvature.copy()
         for k in range(ndim):
@@ -284,13 +284,13 @@ def _climb(one, grid, prior, point, curvature):
         step = solve_positive(damped, gradient)
         for k in range(ndim):
             trial[0, k] = point[k] + step[k]
-        _clamp(prior, trial[0])
+        clamp(prior, trial[0])
         log_posterior(trial, one, grid, prior, value)
         if value[0] > best or (best == -np.inf and value[0] > -np.inf):
             gain = value[0] - best
             best = value[0]
             point[:] = trial[0]
-            _slopes(one, grid, prior, point, gradient, curvature)
+            slopes(one, grid, prior, point, gradient, curvature)
             damping = max(damping * 0.2, 1e-9)
             if gain < 1e-4:
                 break
@@ -302,7 +302,7 @@ def _climb(one, grid, prior, point, curvature):
 
 
 @kernel
-def _clamp(prior, point):
+def clamp(prior, point):
     heat_low = exp(LN_HEAT_K - prior.ln_teff_max) * (1.0 + 1e-9)
     heat_high = exp(LN_HEAT_K - prior.ln_teff_min) * (1.0 - 1e-9)
     point[0] = min(max(point[0], heat_low), heat_high)
@@ -316,7 +316,7 @@ def _clamp(prior, point):
 
 
 @kernel
-def _slopes(one, grid, prior, point, gradient, curvature):
+def slopes(one, grid, prior, point, gradient, curvature):
     """Write the gradient of the log density and its Gauss-Newton curvature, by differences of ln flux."""
     ndim = point.size
     n_factors = grid.loading.shape[0]
@@ -349,7 +349,7 @@ def _slopes(one, grid, prior, point, gradient, curvature):
     if prior.fit_av:
         offset = point[2] - one.av_mean[0]
         gradient[2] = -offset * one.av_inverse_variance[0] - one.av_rate[0]
-        curvature[2, 2] = one.av_inverse_variance[0] + max(one.av_rate[0] ** 2, 1.0 / prior.av_max**2)
+        curvature[2, 2] = one.av_inverse_variance[0] + 1e-4 / prior.av_max**2
     for k in range(n_factors):
         gradient[first_z + k] = -point[first_z + k]
         curvature[first_z + k, first_z + k] = 1.0

@@ -1,0 +1,323 @@
+"""Each star's posterior along temperature: a walk from its peaks, with a Laplace fit of everything else at every knot."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+
+from starkiln.inference.arithmetic import exp, log
+from starkiln.inference.compile import kernel
+from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, log_posterior, n_parameters
+from starkiln.inference.proposal import FARTHEST_AV, Proposal, empty_proposal
+from starkiln.inference.start import Modes, cholesky, clamp, inverse_positive, one_star, slopes, solve_positive
+
+MAX_KNOTS = 64
+WALK = 24  # knots on each side of a peak
+DEPTH = 14.0  # the marginal is followed down to exp(-14) of its peak
+BEYOND = 8.0  # and falls so much again towards the bounds of the temperature
+FIRST_STEP = 0.6  # in standard deviations
+STEEP, FLAT = 3.0, 0.5  # changes of the log marginal between knots that are too large, or smaller than need be
+AV_STRETCH = 1.05
+STRETCH = 1.05  # of the others' scatter
+LOGISTIC_SCALE = 1.81  # of a normal: pi / sqrt(3), its scale for unit variance
+
+
+class Knots(NamedTuple):
+    """What a walk leaves: as in `Proposal`, for one star, and the log marginal in heat."""
+
+    heat: np.ndarray
+    log_marginal: np.ndarray
+    av: np.ndarray
+    centre: np.ndarray
+    slope: np.ndarray
+    factor: np.ndarray
+
+
+def fit_proposal(block: Block, grid: Grid, prior: Prior, modes: Modes) -> Proposal:
+    """Return each star's proposal from the peaks of its posterior."""
+    proposal = empty_proposal(block.n_bands.size, MAX_KNOTS + 2, n_parameters(grid, prior), prior.fit_av)
+    _fit_all(block, grid, prior, modes, proposal)
+    return proposal
+
+
+@kernel
+def _fit_all(block, grid, prior, modes, proposal):
+    others = proposal.centre.shape[2]
+    knots = Knots(
+        np.empty(MAX_KNOTS),
+        np.empty(MAX_KNOTS),
+        np.empty((MAX_KNOTS, 2)),
+        np.empty((MAX_KNOTS, others)),
+        np.empty((MAX_KNOTS, others)),
+        np.empty((MAX_KNOTS, others, others)),
+    )
+    for star in range(block.n_bands.size):
+        one = one_star(block, star)
+        n = _walk_all(one, grid, prior, modes, star, knots)
+        _lay_out(knots, n, prior, proposal, star)
+
+
+@kernel
+def _walk_all(one, grid, prior, modes, star, knots):
+    """Walk both ways from every peak that no walk has passed; return the number of knots."""
+    ndim = modes.coords.shape[2]
+    gradient, curvature = np.empty(ndim), np.empty((ndim, ndim))
+    n = 0
+    best = -np.inf
+    low, high = np.inf, -np.inf
+    for mode in range(max(modes.n_modes[star], 1)):
+        peak = modes.coords[star, mode].copy()
+        if low < peak[0] < high or n >= MAX_KNOTS - 2:
+            continue
+        value = _climb_beside(one, grid, prior, peak, gradient, curvature)
+        first = n
+        knots.log_marginal[n] = _condition(peak, gradient, curvature, value, prior, knots, n)
+        best = max(best, knots.log_marginal[n])
+        n += 1
+        for direction in (-1.0, 1.0):
+            n, best = _walk(one, grid, prior, peak, modes.covariance[star, mode], direction, knots, first, n, best)
+        for k in range(first, n):
+            low, high = min(low, knots.heat[k]), max(high, knots.heat[k])
+    return n
+
+
+@kernel
+def _walk(one, grid, prior, peak, covariance, direction, knots, first, n, best):
+    """Walk from a peak until the marginal is low, a bound, or a knot of an earlier walk."""
+    ndim = peak.size
+    heat_low = exp(LN_HEAT_K - prior.ln_teff_max) * (1.0 + 1e-9)
+    heat_high = exp(LN_HEAT_K - prior.ln_teff_min) * (1.0 - 1e-9)
+    gradient, curvature = np.empty(ndim), np.empty((ndim, ndim))
+    point, trial = peak.copy(), np.empty(ndim)
+    tangent = covariance[0] / covariance[0, 0]
+    step = min(FIRST_STEP * np.sqrt(covariance[0, 0]), 0.2 * point[0])
+    before = knots.log_marginal[first]
+    last = min(n + WALK, MAX_KNOTS)
+    tries = 0
+    while n < last:
+        heat = min(max(point[0] + direction * step, heat_low), heat_high)
+        if heat == point[0] or _passes_earlier(knots, first, point[0], heat):
+            break
+        trial[0] = heat
+        for k in range(1, ndim):
+            trial[k] = point[k] + tangent[k] * (heat - point[0])
+        value = _climb_beside(one, grid, prior, trial, gradient, curvature)
+        marginal = _condition(trial, gradient, curvature, value, prior, knots, n)
+        change = abs(before - marginal)
+        if change > STEEP and tries < 4:
+            step *= 0.5
+            tries += 1
+            continue
+        for k in range(1, ndim):
+            tangent[k] = (trial[k] - point[k]) / (heat - point[0])
+        if change < FLAT:
+            step = min(step * 1.5, 0.2 * heat)
+        elif change > 0.6 * STEEP:
+            step *= 0.7
+        knots.log_marginal[n] = marginal
+        point[:] = trial
+        before, tries = marginal, 0
+        best = max(best, marginal)
+        n += 1
+        if marginal < best - DEPTH or heat == heat_low or heat == heat_high:
+            break
+    return n, best
+
+
+@kernel
+def _passes_earlier(knots, first, start, end):
+    for k in range(first):
+        if (knots.heat[k] - start) * (knots.heat[k] - end) < 0.0:
+            return True
+    return False
+
+
+@kernel
+def _climb_beside(one, grid, prior, point, gradient, curvature):
+    """Climb at fixed heat; move ``point`` and return its log density, with gradient and curvature there."""
+    ndim = point.size
+    trial = np.empty((1, ndim))
+    value = np.empty(1)
+    clamp(prior, point)
+    trial[0] = point
+    log_posterior(trial, one, grid, prior, value)
+    best = value[0]
+    damping = 1e-4
+    slopes(one, grid, prior, point, gradient, curvature)
+    for _ in range(8):
+        step = _step_beside(gradient, curvature, point, prior, damping)
+        trial[0] = point
+        for k in range(1, ndim):
+            trial[0, k] += step[k]
+        clamp(prior, trial[0])
+        log_posterior(trial, one, grid, prior, value)
+        if value[0] > best:
+            gain = value[0] - best
+            best = value[0]
+            point[:] = trial[0]
+            slopes(one, grid, prior, point, gradient, curvature)
+            damping *= 0.1
+            if gain < 0.02:
+                break
+        else:
+            damping = max(100.0 * damping, 1e-2)
+            if damping > 1e3:
+                break
+    return best
+
+
+@kernel
+def _step_beside(gradient, curvature, point, prior, damping):
+    """Return a damped Newton step without heat; A_V stops at zero and the others go on along it."""
+    ndim = point.size
+    damped = curvature.copy()
+    damped[0, :] = 0.0
+    damped[:, 0] = 0.0
+    damped[0, 0] = 1.0
+    for k in range(1, ndim):
+        damped[k, k] *= 1.0 + damping
+    force = gradient.copy()
+    force[0] = 0.0
+    step = solve_positive(damped, force)
+    if prior.fit_av and point[2] + step[2] < 0.0:
+        for k in range(1, ndim):
+            force[k] += damped[k, 2] * point[2]
+        damped[2, :] = 0.0
+        damped[:, 2] = 0.0
+        damped[2, 2] = 1.0
+        force[2] = -point[2]
+        step = solve_positive(damped, force)
+    return step
+
+
+@kernel
+def _condition(point, gradient, curvature, value, prior, knots, n):
+    """Write what everything but heat is like at a knot, and return the log marginal of heat.
+
+    With g and A the gradient and the curvature at a point, all else is normal about its place plus C g, C = 1 / A, and
+    its mass is exp(log density + g C g / 2) / sqrt(det A), times the chance of A_V > 0.
+    """
+    ndim = point.size
+    inner, force = np.empty((ndim - 1, ndim - 1)), np.empty(ndim - 1)
+    for k in range(1, ndim):
+        force[k - 1] = gradient[k]
+        for m in range(1, ndim):
+            inner[k - 1, m - 1] = curvature[k, m]
+    shift = solve_positive(inner, force)
+    root = cholesky(inner)
+    marginal = value
+    for k in range(ndim - 1):
+        marginal += 0.5 * force[k] * shift[k] - log(root[k, k])
+    knots.heat[n] = point[0]
+    if prior.fit_av:
+        covariance = inverse_positive(inner)
+        sigma = np.sqrt(covariance[1, 1])
+        peak = point[2] + shift[1]
+        marginal += _cut_at_zero(peak, sigma, knots.av[n])
+    _others(point, shift, inner, prior, knots, n)
+    return marginal
+
+
+@kernel
+def _cut_at_zero(peak, sigma, logistic):
+    """Write location and scale of a logistic like a normal cut at zero, and return the log of the mass left.
+
+    The normal's upper tail is Börjesson & Sundberg's (1979, IEEE Trans. Commun. 27, 639; formula from memory), good to
+    a per cent.
+    """
+    t = -peak / sigma
+    u = abs(t)
+    root = np.sqrt(u * u + 2.0 * np.pi)
+    tail = exp(-0.5 * u * u) / np.sqrt(2.0 * np.pi) / ((1.0 - 1.0 / np.pi) * u + root / np.pi)
+    if t > 0.0:
+        mean = sigma * 2.0 / (root + u)
+        log_mass = -0.5 * u * u - 0.5 * np.log(2.0 * np.pi) - log((1.0 - 1.0 / np.pi) * u + root / np.pi)
+    else:
+        mean = peak + sigma * exp(-0.5 * u * u) / np.sqrt(2.0 * np.pi) / (1.0 - tail)
+        log_mass = log(1.0 - tail)
+    ratio = min(max(-LOGISTIC_SCALE / AV_STRETCH * t, FARTHEST_AV), 100.0)
+    scale = mean / (log(1.0 + exp(ratio)) * (1.0 + exp(-ratio)))
+    logistic[0], logistic[1] = ratio * scale, scale
+    return log_mass
+
+
+@kernel
+def _others(point, shift, inner, prior, knots, n):
+    """Write centre, slope with A_V and scatter of the coordinates other than heat and A_V."""
+    others = knots.centre.shape[1]
+    reduced, coupling = np.empty((others, others)), np.zeros(others)
+    for m in range(others):
+        a = m + 1 if prior.fit_av and m > 0 else m
+        if prior.fit_av:
+            coupling[m] = -inner[a, 1]
+        for j in range(others):
+            b = j + 1 if prior.fit_av and j > 0 else j
+            reduced[m, j] = inner[a, b]
+    slope = solve_positive(reduced, coupling)
+    scatter = inverse_positive(reduced)
+    for m in range(others):
+        for j in range(others):
+            scatter[m, j] *= STRETCH * STRETCH
+    knots.factor[n] = cholesky(scatter)
+    for m in range(others):
+        a = m + 1 if prior.fit_av and m > 0 else m
+        knots.slope[n, m] = slope[m]
+        knots.centre[n, m] = point[1 + a] + shift[a]
+        if prior.fit_av:
+            knots.centre[n, m] -= slope[m] * (point[2] + shift[1])
+
+
+@kernel
+def _lay_out(knots, n, prior, proposal, star):
+    """Sort the knots, add the bounds of the temperature, and normalise."""
+    heat_low = exp(LN_HEAT_K - prior.ln_teff_max)
+    heat_high = exp(LN_HEAT_K - prior.ln_teff_min)
+    order = np.argsort(knots.heat[:n])
+    best = knots.log_marginal[:n].max()
+    heat, log_density, mass = proposal.heat[star], proposal.log_density[star], proposal.mass[star]
+    for k in range(n + 2):
+        source = order[min(max(k - 1, 0), n - 1)]
+        heat[k] = knots.heat[source]
+        log_density[k] = max(knots.log_marginal[source] - best, -DEPTH - BEYOND)
+        proposal.av[star, k] = knots.av[source]
+        proposal.centre[star, k] = knots.centre[source]
+        proposal.slope[star, k] = knots.slope[source]
+        proposal.factor[star, k] = knots.factor[source]
+    heat[0], heat[n + 1] = heat_low, heat_high
+    log_density[0] = min(log_density[0] - BEYOND, -DEPTH)
+    log_density[n + 1] = min(log_density[n + 1] - BEYOND, -DEPTH)
+    proposal.n_knots[star] = n + 2
+    _tangents(heat, proposal.av[star, :, 0], n + 2, proposal.tangent[star, :, 0])
+    for m in range(proposal.centre.shape[2]):
+        _tangents(heat, proposal.centre[star, :, m], n + 2, proposal.tangent[star, :, 1 + m])
+    normalise(heat, log_density, mass, n + 2)
+
+
+@kernel
+def _tangents(heat, values, n, out):
+    """Write the derivatives at the knots, each of the parabola through a knot and its neighbours; none at the ends."""
+    out[0] = out[n - 1] = 0.0
+    for k in range(1, n - 1):
+        left, right = heat[k] - heat[k - 1], heat[k + 1] - heat[k]
+        before, after = (values[k] - values[k - 1]) / left, (values[k + 1] - values[k]) / right
+        if k == 1:
+            out[k] = after
+        elif k == n - 2:
+            out[k] = before
+        else:
+            out[k] = (right * before + left * after) / (left + right)
+
+
+@kernel
+def normalise(heat, log_density, mass, n):
+    """Write the cumulative mass of a marginal that is exponential between knots, and normalise its density."""
+    mass[0] = 0.0
+    for k in range(n - 1):
+        rise = log_density[k + 1] - log_density[k]
+        mean = (exp(rise) - 1.0) / rise if abs(rise) > 1e-5 else 1.0 + 0.5 * rise
+        mass[k + 1] = mass[k] + (heat[k + 1] - heat[k]) * exp(log_density[k]) * mean
+    total = mass[n - 1]
+    for k in range(n):
+        mass[k] /= total
+        log_density[k] -= log(total)
