@@ -17,6 +17,7 @@ WALK = 24  # knots on each side of a peak
 DEPTH = 14.0  # the marginal is followed down to exp(-14) of its peak
 BEYOND = 8.0  # and falls so much again towards the bounds of the temperature
 FIRST_STEP = 0.6  # in standard deviations
+SAME = 1e-6  # relative difference of heat below which two knots are one
 STEEP, FLAT = 3.0, 0.5  # changes of the log marginal between knots that are too large, or smaller than need be
 AV_STRETCH = 1.05
 STRETCH = 1.05  # of the others' scatter
@@ -47,7 +48,7 @@ def _fit_all(block, grid, prior, modes, proposal):
     knots = Knots(
         np.empty(MAX_KNOTS),
         np.empty(MAX_KNOTS),
-        np.empty((MAX_KNOTS, 2)),
+        np.empty((MAX_KNOTS, 3)),
         np.empty((MAX_KNOTS, others)),
         np.empty((MAX_KNOTS, others)),
         np.empty((MAX_KNOTS, others, others)),
@@ -68,7 +69,8 @@ def _walk_all(one, grid, prior, modes, star, knots):
     low, high = np.inf, -np.inf
     for mode in range(max(modes.n_modes[star], 1)):
         peak = modes.coords[star, mode].copy()
-        if low < peak[0] < high or n >= MAX_KNOTS - 2:
+        low_peak = modes.log_density[star, mode] < modes.log_density[star, 0] - DEPTH
+        if low_peak or low < peak[0] < high or n >= MAX_KNOTS - 2:
             continue
         value = _climb_beside(one, grid, prior, peak, gradient, curvature)
         first = n
@@ -221,7 +223,7 @@ def _condition(point, gradient, curvature, value, prior, knots, n):
 
 @kernel
 def _cut_at_zero(peak, sigma, logistic):
-    """Write location and scale of a logistic like a normal cut at zero, and return the log of the mass left.
+    """Write location, mean and scale of a logistic like a normal cut at zero, and return the log of the mass left.
 
     The normal's upper tail is Börjesson & Sundberg's (1979, IEEE Trans. Commun. 27, 639; formula from memory), good to
     a per cent.
@@ -238,7 +240,7 @@ def _cut_at_zero(peak, sigma, logistic):
         log_mass = log(1.0 - tail)
     ratio = min(max(-LOGISTIC_SCALE / AV_STRETCH * t, FARTHEST_AV), 100.0)
     scale = mean / (log(1.0 + exp(ratio)) * (1.0 + exp(-ratio)))
-    logistic[0], logistic[1] = ratio * scale, scale
+    logistic[0], logistic[1], logistic[2] = ratio * scale, mean, scale
     return log_mass
 
 
@@ -265,7 +267,7 @@ def _others(point, shift, inner, prior, knots, n):
         knots.slope[n, m] = slope[m]
         knots.centre[n, m] = point[1 + a] + shift[a]
         if prior.fit_av:
-            knots.centre[n, m] -= slope[m] * (point[2] + shift[1])
+            knots.centre[n, m] += slope[m] * (knots.av[n, 1] - point[2] - shift[1])
 
 
 @kernel
@@ -276,22 +278,33 @@ def _lay_out(knots, n, prior, proposal, star):
     order = np.argsort(knots.heat[:n])
     best = knots.log_marginal[:n].max()
     heat, log_density, mass = proposal.heat[star], proposal.log_density[star], proposal.mass[star]
-    for k in range(n + 2):
-        source = order[min(max(k - 1, 0), n - 1)]
-        heat[k] = knots.heat[source]
-        log_density[k] = max(knots.log_marginal[source] - best, -DEPTH - BEYOND)
-        proposal.av[star, k] = knots.av[source]
-        proposal.centre[star, k] = knots.centre[source]
-        proposal.slope[star, k] = knots.slope[source]
-        proposal.factor[star, k] = knots.factor[source]
-    heat[0], heat[n + 1] = heat_low, heat_high
+    count = 1
+    for source in order:
+        if count == 1 or knots.heat[source] > heat[count - 1] * (1.0 + SAME):
+            _copy_knot(knots, source, best, proposal, star, count)
+            count += 1
+    _copy_knot(knots, order[0], best, proposal, star, 0)
+    _copy_knot(knots, order[n - 1], best, proposal, star, count)
+    heat[0], heat[count] = heat_low * (1.0 - SAME), heat_high * (1.0 + SAME)
     log_density[0] = min(log_density[0] - BEYOND, -DEPTH)
-    log_density[n + 1] = min(log_density[n + 1] - BEYOND, -DEPTH)
-    proposal.n_knots[star] = n + 2
-    _tangents(heat, proposal.av[star, :, 0], n + 2, proposal.tangent[star, :, 0])
+    log_density[count] = min(log_density[count] - BEYOND, -DEPTH)
+    n = count + 1
+    proposal.n_knots[star] = n
+    for m in range(2):
+        _tangents(heat, proposal.av[star, :, m], n, proposal.tangent[star, :, m])
     for m in range(proposal.centre.shape[2]):
-        _tangents(heat, proposal.centre[star, :, m], n + 2, proposal.tangent[star, :, 1 + m])
-    normalise(heat, log_density, mass, n + 2)
+        _tangents(heat, proposal.centre[star, :, m], n, proposal.tangent[star, :, 2 + m])
+    normalise(heat, log_density, mass, n)
+
+
+@kernel
+def _copy_knot(knots, source, best, proposal, star, target):
+    proposal.heat[star, target] = knots.heat[source]
+    proposal.log_density[star, target] = max(knots.log_marginal[source] - best, -DEPTH - BEYOND)
+    proposal.av[star, target] = knots.av[source]
+    proposal.centre[star, target] = knots.centre[source]
+    proposal.slope[star, target] = knots.slope[source]
+    proposal.factor[star, target] = knots.factor[source]
 
 
 @kernel

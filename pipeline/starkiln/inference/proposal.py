@@ -37,12 +37,12 @@ class Proposal(NamedTuple):
     mass
         (S, K): cumulative, from 0 to 1.
     av
-        (S, K, 2): location and scale of A_V's logistic in magnitudes.
+        (S, K, 3): location, mean and scale of A_V's cut logistic in magnitudes.
     centre, slope
-        (S, K, M): means of the other coordinates at A_V = 0, and their change with A_V: glow first, then the rest.
+        (S, K, M): means of the other coordinates at the mean A_V, and their change with A_V: glow first, then the rest.
     tangent
-        (S, K, 1 + M): derivatives with heat of A_V's location and of the centres, which follow cubics between knots,
-        as the ridge of a posterior bends; all else is linear.
+        (S, K, 2 + M): derivatives with heat of A_V's location and mean and of the centres, which follow cubics between
+        knots, as the ridge of a posterior bends; all else is linear.
     factor
         (S, K, M, M): lower Cholesky factors of their scatter.
     """
@@ -72,10 +72,10 @@ def empty_proposal(n_stars: int, n_knots: int, ndim: int, fit_av: bool) -> Propo
         np.zeros(shape),
         np.zeros(shape),
         np.zeros(shape),
-        np.zeros((*shape, 2)),
+        np.zeros((*shape, 3)),
         np.zeros((*shape, others)),
         np.zeros((*shape, others)),
-        np.zeros((*shape, 1 + others)),
+        np.zeros((*shape, 2 + others)),
         np.zeros((*shape, others, others)),
     )
 
@@ -157,7 +157,7 @@ def draw_independent(proposal, star, fit_av, stream, scratch, out):
         for i in range(lanes):
             k, s = knot[i], spot[i]
             location = between(av[:, 0], tangent[:, 0], k, s, heat[k + 1] - heat[k])
-            scale = av[k, 1] + s * (av[k + 1, 1] - av[k, 1])
+            scale = av[k, 2] + s * (av[k + 1, 2] - av[k, 2])
             survival = uniforms[1, i] / (1.0 + exp(-location / scale))
             out[i, 2] = max(location + scale * log((1.0 - survival) / survival), 0.0)
     for i in range(lanes):
@@ -169,9 +169,10 @@ def draw_independent(proposal, star, fit_av, stream, scratch, out):
         axis = other_axis(m, fit_av)
         for i in range(lanes):
             k, s = knot[i], spot[i]
-            value = between(centre[:, m], tangent[:, 1 + m], k, s, heat[k + 1] - heat[k])
+            value = between(centre[:, m], tangent[:, 2 + m], k, s, heat[k + 1] - heat[k])
             if fit_av:
-                value += (slope[k, m] + s * (slope[k + 1, m] - slope[k, m])) * out[i, 2]
+                offset = out[i, 2] - between(av[:, 1], tangent[:, 1], k, s, heat[k + 1] - heat[k])
+                value += (slope[k, m] + s * (slope[k + 1, m] - slope[k, m])) * offset
             for j in range(m + 1):
                 value += (factor[k, m, j] + s * (factor[k + 1, m, j] - factor[k, m, j])) * normals[j, i]
             out[i, axis] = value
@@ -206,7 +207,7 @@ def log_proposal_density(proposal, star, fit_av, coords, scratch, out):
         weight = 1.0
         if fit_av:
             location = between(av[:, 0], tangent[:, 0], k, s, heat[k + 1] - heat[k])
-            scale = av[k, 1] + s * (av[k + 1, 1] - av[k, 1])
+            scale = av[k, 2] + s * (av[k + 1, 2] - av[k, 2])
             inverse = 1.0 / scale
             tail = exp((location - coords[i, 2]) * inverse)
             weight = tail * (1.0 + exp(-location * inverse)) * inverse / ((1.0 + tail) * (1.0 + tail))
@@ -220,15 +221,16 @@ def log_proposal_density(proposal, star, fit_av, coords, scratch, out):
 def standardise(proposal, star, fit_av, coords, scratch):
     """Write the others' standardised coordinates to ``scratch.x``, with ``scratch.knot`` and ``spot`` known."""
     spot, knot, x = scratch.spot, scratch.knot, scratch.x
-    heat, tangent = proposal.heat[star], proposal.tangent[star]
+    heat, av, tangent = proposal.heat[star], proposal.av[star], proposal.tangent[star]
     centre, slope, factor = proposal.centre[star], proposal.slope[star], proposal.factor[star]
     for m in range(x.shape[0]):
         axis = other_axis(m, fit_av)
         for i in range(x.shape[1]):
             k, s = knot[i], spot[i]
-            value = coords[i, axis] - between(centre[:, m], tangent[:, 1 + m], k, s, heat[k + 1] - heat[k])
+            value = coords[i, axis] - between(centre[:, m], tangent[:, 2 + m], k, s, heat[k + 1] - heat[k])
             if fit_av:
-                value -= (slope[k, m] + s * (slope[k + 1, m] - slope[k, m])) * coords[i, 2]
+                offset = coords[i, 2] - between(av[:, 1], tangent[:, 1], k, s, heat[k + 1] - heat[k])
+                value -= (slope[k, m] + s * (slope[k + 1, m] - slope[k, m])) * offset
             for j in range(m):
                 value -= (factor[k, m, j] + s * (factor[k + 1, m, j] - factor[k, m, j])) * x[j, i]
             x[m, i] = value / (factor[k, m, m] + s * (factor[k + 1, m, m] - factor[k, m, m]))

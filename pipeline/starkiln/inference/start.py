@@ -381,7 +381,9 @@ def slopes(one, grid, prior, point, gradient, curvature):
                 q = residual * residual * inverse_variance
                 core = (1.0 - f) * exp(-0.5 * q * (1.0 - wide))
                 weight *= (core + f * wide / prior.outlier_width) / (core + f / prior.outlier_width)
-            force = weight * residual * model
+            # The second part is the variance's, which grows with the model.
+            growth = lanes.spread2[0] * model * model * inverse_variance
+            force = weight * residual * model + growth * (weight * residual * residual - 1.0)
         for k in range(ndim):
             gradient[k] += force * jacobian[k]
             for m in range(ndim):
