@@ -19,8 +19,8 @@ from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, log_post
 from starkiln.inference.proposal import Proposal, draw_independent, make_scratch
 from starkiln.inference.start import Modes, find_modes
 
-BURN_IN = (16, 16, 16, 24)
-INDEPENDENCE = (0.4, 0.5, 0.6, 0.7, 0.85)
+BURN_IN = 12  # steps: the walkers are drawn from the proposal
+INDEPENDENCE = 0.85  # of the steps; the others are differential evolution, for what the proposal has missed
 MIN_STEPS = 60
 MIN_TAUS = 50.0
 TAIL_SHARE = 0.4
@@ -35,8 +35,8 @@ class Stopping:
     max_steps: int = 4000
 
     def lengths(self) -> list[int]:
-        """Return the chain lengths at which stars are looked at: even, each up to half as long again."""
-        lengths = [length for k in range(40) for length in (64 << k, 96 << k) if length < self.max_steps]
+        """Return the chain lengths at which stars are looked at: even, each up to a quarter longer."""
+        lengths = [quarter << k for k in range(40) for quarter in (64, 80, 96, 112) if quarter << k < self.max_steps]
         return [*sorted(set(lengths)), self.max_steps - self.max_steps % 2]
 
 
@@ -109,7 +109,7 @@ def sample_block(
             halves = run.taking(np.arange(middle)), run.taking(np.arange(middle, run.n_stars))
             waiting += [(half, [length, *longer]) for half in halves]
             continue
-        run.extend(length, INDEPENDENCE[-1])
+        run.extend(length)
         done, run = run.judge(stopping)
         if done is not None:
             yield done
@@ -118,11 +118,11 @@ def sample_block(
 
 
 def burn_in(block: Block, grid: Grid, prior: Prior, streams: NDArray[np.uint64], walkers: int, modes: Modes) -> _Run:
-    """Return the run of a block after the burn-in, its proposal learnt and frozen."""
+    """Return the run of a block after the burn-in."""
     run = _Run(block, grid, prior, streams, walkers, *_first_walkers(block, grid, prior, modes, streams, walkers))
-    for length, share in zip(BURN_IN, INDEPENDENCE, strict=False):
-        window, _ = run.advance(length, share)
-    run.forget()
+    for _ in run.steps(BURN_IN):
+        pass
+    run.accepted[:] = 0
     return run
 
 
@@ -171,7 +171,7 @@ def _pull_in(coords, lost, modes):
 
 
 class _Run:
-    """The stars of a block that are still sampled, and their chains so far."""
+    """The stars of a block that are still sampled, and their chains so far: (S, P, n, W) of the natural parameters."""
 
     def __init__(
         self,
@@ -188,48 +188,41 @@ class _Run:
         self.streams, self.walkers, self.proposal = streams, walkers, proposal
         self.coords, self.log_prob = coords, log_prob
         self.stars = np.arange(len(streams))
-        self.forget()
+        self.chain = np.empty((self.n_stars, coords.shape[1], 0, walkers))
+        self.chain_log_prob = np.empty((self.n_stars, 0, walkers))
+        self.accepted = np.zeros(self.n_stars, np.int64)
 
     @property
     def n_stars(self) -> int:
         return len(self.stars)
 
-    def forget(self) -> None:
-        """Drop the chains so far."""
-        n_walkers, ndim = self.coords.shape
-        self.chain = np.empty((0, n_walkers, ndim))
-        self.chain_log_prob = np.empty((0, n_walkers))
-        self.accepted = np.zeros(self.n_stars, np.int64)
+    @property
+    def n_steps(self) -> int:
+        return self.chain.shape[2]
 
-    def advance(self, n_steps: int, independence: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        """Take steps of every star's ensemble; return positions and log densities."""
-        n_walkers, ndim = self.coords.shape
-        move = BlockMove(self.streams, self.proposal, self.prior.fit_av, independence)
-        sampler = emcee.EnsembleSampler(
-            n_walkers, ndim, log_prob_function(self.block, self.grid, self.prior), moves=move, vectorize=True
-        )
+    def steps(self, n_steps: int) -> Iterator[None]:
+        """Take steps of every star's ensemble, and let the caller look at each."""
+        move = BlockMove(self.streams, self.proposal, self.prior.fit_av, INDEPENDENCE, self.accepted)
+        log_prob_of = log_prob_function(self.block, self.grid, self.prior)
+        sampler = emcee.EnsembleSampler(*self.coords.shape, log_prob_of, moves=move, vectorize=True)
         state = emcee.State(self.coords, log_prob=self.log_prob)
-        chain = np.empty((n_steps, n_walkers, ndim))
-        log_prob = np.empty((n_steps, n_walkers))
-        steps = sampler.sample(state, iterations=n_steps, store=False, skip_initial_state_check=True)
-        for step, state in enumerate(steps):
-            chain[step] = state.coords
-            log_prob[step] = state.log_prob
-        self.coords, self.log_prob = state.coords, state.log_prob
-        self.accepted += move.accepted_per_star
-        return chain, log_prob
+        for state in sampler.sample(state, iterations=n_steps, store=False, skip_initial_state_check=True):
+            self.coords, self.log_prob = state.coords, state.log_prob
+            yield
 
-    def extend(self, length: int, independence: float) -> None:
+    def extend(self, length: int) -> None:
         """Sample until the chains are ``length`` steps long."""
-        chain, log_prob = self.advance(length - len(self.chain), independence)
-        self.chain = np.concatenate([self.chain, chain])
-        self.chain_log_prob = np.concatenate([self.chain_log_prob, log_prob])
+        before = self.n_steps
+        chain, log_prob = self.chain, self.chain_log_prob
+        self.chain = np.empty((*chain.shape[:2], length, self.walkers))
+        self.chain_log_prob = np.empty((self.n_stars, length, self.walkers))
+        self.chain[:, :, :before], self.chain_log_prob[:, :before] = chain, log_prob
+        for step, _ in enumerate(self.steps(length - before), start=before):
+            _record(self.coords, self.log_prob, step, self.chain, self.chain_log_prob)
 
     def judge(self, stopping: Stopping) -> tuple[Draws | None, _Run]:
         """Diagnose every star; return the finished ones, and the run of those that go on."""
-        n_steps = len(self.chain)
-        chain = np.empty((self.n_stars, self.coords.shape[1], n_steps, self.walkers))
-        _natural_parameters(self.chain, chain)
+        n_steps, chain = self.n_steps, self.chain
         # Autocorrelation is cheap to look at; the rest only where it has become short enough.
         last = n_steps >= stopping.lengths()[-1]
         taus = autocorrelation_times(chain)
@@ -244,11 +237,10 @@ class _Run:
         if not len(done):
             return None, self
         leaving = candidates[done]
-        log_prob = self.chain_log_prob.reshape(n_steps, self.n_stars, self.walkers)[:, leaving]
         draws = Draws(
             stars=self.stars[leaving],
             chain=flat[done],
-            log_prob=np.ascontiguousarray(log_prob.transpose(1, 0, 2)).reshape(len(leaving), -1),
+            log_prob=self.chain_log_prob[leaving].reshape(len(leaving), -1),
             n_steps=n_steps,
             accept_frac=self.accepted[leaving] / (n_steps * self.walkers),
             convergence=convergence.take(done),
@@ -269,7 +261,7 @@ class _Run:
             self.coords[walkers],
             self.log_prob[walkers],
         )
-        run.chain, run.chain_log_prob = self.chain[:, walkers], self.chain_log_prob[:, walkers]
+        run.chain, run.chain_log_prob = self.chain[stars], self.chain_log_prob[stars]
         run.accepted, run.stars = self.accepted[stars], self.stars[stars]
         return run
 
@@ -288,15 +280,16 @@ def _long_enough(convergence: Convergence, n_steps: int, stopping: Stopping) -> 
 
 
 @kernel
-def _natural_parameters(steps, chain):
-    """Reorder (n, S * W, ndim) sampler coordinates into (S, ndim, n, W) of ln T, ln Omega and the rest."""
-    n_stars, ndim, n_steps, walkers = chain.shape
+def _record(coords, log_prob, step, chain, chain_log_prob):
+    """Write the walkers' ln T, ln Omega and the rest, and their log densities, as a step of the chains."""
+    n_stars, ndim, _, walkers = chain.shape
     for star in range(n_stars):
-        for n in range(n_steps):
+        first = star * walkers
+        for w in range(walkers):
+            ln_teff = LN_HEAT_K - log(coords[first + w, 0])
+            chain[star, 0, step, w] = ln_teff
+            chain[star, 1, step, w] = coords[first + w, 1] - ln_teff
+            chain_log_prob[star, step, w] = log_prob[first + w]
+        for k in range(2, ndim):
             for w in range(walkers):
-                row = star * walkers + w
-                ln_teff = LN_HEAT_K - log(steps[n, row, 0])
-                chain[star, 0, n, w] = ln_teff
-                chain[star, 1, n, w] = steps[n, row, 1] - ln_teff
-                for k in range(2, ndim):
-                    chain[star, k, n, w] = steps[n, row, k]
+                chain[star, k, step, w] = coords[first + w, k]

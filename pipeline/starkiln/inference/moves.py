@@ -31,6 +31,8 @@ class BlockMove(Move):
         Whether the third coordinate is A_V.
     independence
         The chance that a star's step uses the independence proposal.
+    accepted
+        (S,) int64: counts accepted proposals, in place.
 
     Notes
     -----
@@ -39,13 +41,18 @@ class BlockMove(Move):
     """
 
     def __init__(
-        self, streams: NDArray[np.uint64], proposal: Proposal, fit_av: bool, independence: float
+        self,
+        streams: NDArray[np.uint64],
+        proposal: Proposal,
+        fit_av: bool,
+        independence: float,
+        accepted: NDArray[np.int64],
     ) -> None:
         self.streams = streams
         self.proposal = proposal
         self.fit_av = fit_av
         self.independence = independence
-        self.accepted_per_star = np.zeros(len(streams), np.int64)
+        self.accepted = accepted
 
     def propose(self, model: Any, state: emcee.State) -> tuple[emcee.State, NDArray[np.bool_]]:
         """Advance every walker once; ``state`` is changed in place, as emcee's own moves do."""
@@ -68,7 +75,7 @@ class BlockMove(Move):
                 log_prob,
                 log_factor,
                 accepted,
-                self.accepted_per_star,
+                self.accepted,
             )
         return state, accepted
 

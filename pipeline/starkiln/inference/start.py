@@ -354,8 +354,7 @@ def slopes(one, grid, prior, point, gradient, curvature):
         gradient[first_z + k] = -point[first_z + k]
         curvature[first_z + k, first_z + k] = 1.0
     if prior.fit_jitter:
-        # The jitter is left where it is: its gradient lies in the variance, which this climb holds fixed.
-        curvature[ndim - 1, ndim - 1] = 1.0
+        curvature[ndim - 1, ndim - 1] = 0.25
     f = prior.outlier_fraction
     wide = 1.0 / (prior.outlier_width * prior.outlier_width)
     for j in range(one.n_bands[0]):
@@ -384,6 +383,10 @@ def slopes(one, grid, prior, point, gradient, curvature):
             # The second part is the variance's, which grows with the model.
             growth = lanes.spread2[0] * model * model * inverse_variance
             force = weight * residual * model + growth * (weight * residual * residual - 1.0)
+            if prior.fit_jitter:
+                growth = lanes.jitter2[0] * model * model * inverse_variance
+                gradient[ndim - 1] += growth * (weight * residual * residual - 1.0)
+                curvature[ndim - 1, ndim - 1] += 2.0 * growth * growth
         for k in range(ndim):
             gradient[k] += force * jacobian[k]
             for m in range(ndim):
