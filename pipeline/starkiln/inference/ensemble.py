@@ -16,10 +16,11 @@ from starkiln.inference.convergence import Convergence, autocorrelation_times, d
 from starkiln.inference.knots import fit_proposal
 from starkiln.inference.moves import BlockMove
 from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, log_posterior
-from starkiln.inference.proposal import Proposal, draw_independent, make_scratch
+from starkiln.inference.proposal import Proposal, draw_independent, learn_others, make_scratch
 from starkiln.inference.start import Modes, find_modes
 
-BURN_IN = 12  # steps: the walkers are drawn from the proposal
+BURN_IN = 16  # steps: the walkers are drawn from the proposal
+LEARN_FROM = 4  # the step of the burn-in from which on the proposal learns
 INDEPENDENCE = 0.85  # of the steps; the others are differential evolution, for what the proposal has missed
 MIN_STEPS = 60
 MIN_TAUS = 50.0
@@ -120,8 +121,11 @@ def sample_block(
 def burn_in(block: Block, grid: Grid, prior: Prior, streams: NDArray[np.uint64], walkers: int, modes: Modes) -> _Run:
     """Return the run of a block after the burn-in."""
     run = _Run(block, grid, prior, streams, walkers, *_first_walkers(block, grid, prior, modes, streams, walkers))
-    for _ in run.steps(BURN_IN):
-        pass
+    window = np.empty((BURN_IN - LEARN_FROM, *run.coords.shape))
+    for step, _ in enumerate(run.steps(BURN_IN)):
+        if step >= LEARN_FROM:
+            window[step - LEARN_FROM] = run.coords
+    learn_others(window, prior.fit_av, run.proposal)
     run.accepted[:] = 0
     return run
 

@@ -17,9 +17,11 @@ from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import exp, log
 from starkiln.inference.compile import kernel
+from starkiln.inference.start import cholesky
 from starkiln.inference.streams import fill_normal, fill_uniform
 
 TAIL = 8.0  # degrees of freedom: heavier tails than a posterior's at fixed temperature and dust
+FIRST_NORMAL = 7  # the uniforms before it: heat, A_V, four for the t's scale, and which t
 FARTHEST_AV = -15.0  # of the logistic's location in its scales: beyond, it is an exponential
 
 
@@ -45,6 +47,8 @@ class Proposal(NamedTuple):
         knots, as the ridge of a posterior bends; all else is linear.
     factor
         (S, K, M, M): lower Cholesky factors of their scatter.
+    learnt_mean, learnt_factor
+        (S, M) and (S, M, M): the second t's place and Cholesky factor, in units of the first's scatter.
     """
 
     n_knots: NDArray[np.int64]
@@ -56,6 +60,8 @@ class Proposal(NamedTuple):
     slope: NDArray[np.float64]
     tangent: NDArray[np.float64]
     factor: NDArray[np.float64]
+    learnt_mean: NDArray[np.float64]
+    learnt_factor: NDArray[np.float64]
 
     def take(self, stars: NDArray[np.int64]) -> Proposal:
         """Return the proposal of some stars."""
@@ -77,6 +83,8 @@ def empty_proposal(n_stars: int, n_knots: int, ndim: int, fit_av: bool) -> Propo
         np.zeros((*shape, others)),
         np.zeros((*shape, 2 + others)),
         np.zeros((*shape, others, others)),
+        np.zeros((n_stars, others)),
+        np.broadcast_to(np.eye(others), (n_stars, others, others)).copy(),
     )
 
 
@@ -93,6 +101,8 @@ class Scratch(NamedTuple):
     spot: NDArray[np.float64]  # where between two knots
     knot: NDArray[np.int64]
     x: NDArray[np.float64]
+    y: NDArray[np.float64]
+    weight: NDArray[np.float64]
 
 
 @kernel
@@ -100,11 +110,13 @@ def make_scratch(n_others, lanes):
     """Return the buffers for proposals of a star."""
     even = n_others + n_others % 2
     return Scratch(
-        np.empty((6 + even, lanes)),
+        np.empty((FIRST_NORMAL + even, lanes)),
         np.empty((even, lanes)),
         np.empty(lanes),
         np.empty(lanes, dtype=np.int64),
         np.empty((n_others, lanes)),
+        np.empty((n_others, lanes)),
+        np.empty(lanes),
     )
 
 
@@ -143,8 +155,9 @@ def draw_independent(proposal, star, fit_av, stream, scratch, out):
     heat, mass, log_density = proposal.heat[star], proposal.mass[star], proposal.log_density[star]
     av, centre, slope = proposal.av[star], proposal.centre[star], proposal.slope[star]
     tangent, factor = proposal.tangent[star], proposal.factor[star]
+    learnt_mean, learnt_factor = proposal.learnt_mean[star], proposal.learnt_factor[star]
     fill_uniform(stream, uniforms)
-    fill_normal(uniforms[6:], normals)
+    fill_normal(uniforms[FIRST_NORMAL:], normals)
     for i in range(lanes):
         k = last_at_most(mass, n, uniforms[0, i])
         knot[i] = k
@@ -165,6 +178,12 @@ def draw_independent(proposal, star, fit_av, stream, scratch, out):
         spread = np.sqrt(TAIL / (-2.0 * log(product)))
         for m in range(even):
             normals[m, i] *= spread
+        if uniforms[6, i] < 0.5:
+            for m in range(n_others - 1, -1, -1):
+                value = learnt_mean[m]
+                for j in range(m + 1):
+                    value += learnt_factor[m, j] * normals[j, i]
+                normals[m, i] = value
     for m in range(n_others):
         axis = other_axis(m, fit_av)
         for i in range(lanes):
@@ -190,13 +209,11 @@ def log_proposal_density(proposal, star, fit_av, coords, scratch, out):
     lanes = coords.shape[0]
     n_others = scratch.x.shape[0]
     spot, knot, x = scratch.spot, scratch.knot, scratch.x
-    n = proposal.n_knots[star]
     heat, log_density = proposal.heat[star], proposal.log_density[star]
     av, tangent, factor = proposal.av[star], proposal.tangent[star], proposal.factor[star]
+    find_knots(proposal, star, coords, scratch)
     for i in range(lanes):
-        k = last_at_most(heat, n, coords[i, 0])
-        s = min(max((coords[i, 0] - heat[k]) / (heat[k + 1] - heat[k]), 0.0), 1.0)
-        knot[i], spot[i] = k, s
+        k, s = knot[i], spot[i]
         out[i] = log_density[k] + s * (log_density[k + 1] - log_density[k])
     standardise(proposal, star, fit_av, coords, scratch)
     for i in range(lanes):
@@ -211,10 +228,45 @@ def log_proposal_density(proposal, star, fit_av, coords, scratch, out):
             inverse = 1.0 / scale
             tail = exp((location - coords[i, 2]) * inverse)
             weight = tail * (1.0 + exp(-location * inverse)) * inverse / ((1.0 + tail) * (1.0 + tail))
-        distance2 = 0.0
+        scratch.weight[i] = weight / volume
+    learnt_mean, learnt_factor = proposal.learnt_mean[star], proposal.learnt_factor[star]
+    learnt_volume = 1.0
+    for m in range(n_others):
+        learnt_volume *= learnt_factor[m, m]
+    y = scratch.y
+    for i in range(lanes):
+        first, second = 0.0, 0.0
         for m in range(n_others):
-            distance2 += x[m, i] * x[m, i]
-        out[i] += log(weight / volume) - 0.5 * (TAIL + n_others) * log(1.0 + distance2 / TAIL)
+            first += x[m, i] * x[m, i]
+            value = x[m, i] - learnt_mean[m]
+            for j in range(m):
+                value -= learnt_factor[m, j] * y[j, i]
+            y[m, i] = value / learnt_factor[m, m]
+            second += y[m, i] * y[m, i]
+        density = 0.5 * (_t_density(first, n_others) + _t_density(second, n_others) / learnt_volume)
+        out[i] += log(scratch.weight[i] * density)
+
+
+@kernel
+def _t_density(distance2, n_others):
+    """Return (1 + distance2 / 8) to the power -(8 + n_others) / 2."""
+    inverse = 1.0 / (1.0 + distance2 / TAIL)
+    root = np.sqrt(inverse)
+    power = inverse * inverse
+    power *= power
+    for _ in range(n_others):
+        power *= root
+    return power
+
+
+@kernel
+def find_knots(proposal, star, coords, scratch):
+    """Write between which knots each position lies, and where."""
+    heat, n = proposal.heat[star], proposal.n_knots[star]
+    for i in range(coords.shape[0]):
+        k = last_at_most(heat, n, coords[i, 0])
+        scratch.knot[i] = k
+        scratch.spot[i] = min(max((coords[i, 0] - heat[k]) / (heat[k + 1] - heat[k]), 0.0), 1.0)
 
 
 @kernel
@@ -234,3 +286,30 @@ def standardise(proposal, star, fit_av, coords, scratch):
             for j in range(m):
                 value -= (factor[k, m, j] + s * (factor[k + 1, m, j] - factor[k, m, j])) * x[j, i]
             x[m, i] = value / (factor[k, m, m] + s * (factor[k + 1, m, m] - factor[k, m, m]))
+
+
+@kernel
+def learn_others(window, fit_av, proposal):
+    """Fit each star's second t to positions (n, S * W, ndim) of its walkers."""
+    n_stars, n_others = proposal.learnt_mean.shape
+    n_steps, n_walkers, ndim = window.shape
+    walkers = n_walkers // n_stars
+    coords = np.empty((n_steps * walkers, ndim))
+    scratch = make_scratch(n_others, n_steps * walkers)
+    covariance = np.empty((n_others, n_others))
+    for star in range(n_stars):
+        for t in range(n_steps):
+            coords[t * walkers : (t + 1) * walkers] = window[t, star * walkers : (star + 1) * walkers]
+        find_knots(proposal, star, coords, scratch)
+        standardise(proposal, star, fit_av, coords, scratch)
+        for m in range(n_others):
+            proposal.learnt_mean[star, m] = scratch.x[m].sum() / len(coords)
+            for j in range(m + 1):
+                total = 0.0
+                for i in range(len(coords)):
+                    total += (scratch.x[m, i] - proposal.learnt_mean[star, m]) * (
+                        scratch.x[j, i] - proposal.learnt_mean[star, j]
+                    )
+                covariance[m, j] = covariance[j, m] = total / len(coords)
+            covariance[m, m] += 1e-6
+        proposal.learnt_factor[star] = cholesky(covariance)
