@@ -18,6 +18,8 @@ DEPTH = 14.0  # the marginal is followed down to exp(-14) of its peak
 BEYOND = 8.0  # and falls so much again towards the bounds of the temperature
 FIRST_STEP = 0.6  # in standard deviations
 SAME = 1e-6  # relative difference of heat below which two knots are one
+LONGEST = 0.15  # step, of the heat itself
+BENT = 2.0  # a climb from the straight way to a knot that shows the way to be bent
 STEEP, FLAT = 3.0, 0.5  # changes of the log marginal between knots that are too large, or smaller than need be
 AV_STRETCH = 1.05
 STRETCH = 1.05  # of the others' scatter
@@ -72,7 +74,7 @@ def _walk_all(one, grid, prior, modes, star, knots):
         low_peak = modes.log_density[star, mode] < modes.log_density[star, 0] - DEPTH
         if low_peak or low < peak[0] < high or n >= MAX_KNOTS - 2:
             continue
-        value = _climb_beside(one, grid, prior, peak, gradient, curvature)
+        value, _ = _climb_beside(one, grid, prior, peak, gradient, curvature)
         first = n
         knots.log_marginal[n] = _condition(peak, gradient, curvature, value, prior, knots, n)
         best = max(best, knots.log_marginal[n])
@@ -93,7 +95,7 @@ def _walk(one, grid, prior, peak, covariance, direction, knots, first, n, best):
     gradient, curvature = np.empty(ndim), np.empty((ndim, ndim))
     point, trial = peak.copy(), np.empty(ndim)
     tangent = covariance[0] / covariance[0, 0]
-    step = min(FIRST_STEP * np.sqrt(covariance[0, 0]), 0.2 * point[0])
+    step = min(FIRST_STEP * np.sqrt(covariance[0, 0]), LONGEST * point[0])
     before = knots.log_marginal[first]
     last = min(n + WALK, MAX_KNOTS)
     tries = 0
@@ -104,19 +106,20 @@ def _walk(one, grid, prior, peak, covariance, direction, knots, first, n, best):
         trial[0] = heat
         for k in range(1, ndim):
             trial[k] = point[k] + tangent[k] * (heat - point[0])
-        value = _climb_beside(one, grid, prior, trial, gradient, curvature)
+        value, gain = _climb_beside(one, grid, prior, trial, gradient, curvature)
         marginal = _condition(trial, gradient, curvature, value, prior, knots, n)
         change = abs(before - marginal)
-        if change > STEEP and tries < 4:
+        if (change > STEEP or gain > BENT) and tries < 4:
             step *= 0.5
             tries += 1
             continue
         for k in range(1, ndim):
             tangent[k] = (trial[k] - point[k]) / (heat - point[0])
-        if change < FLAT:
-            step = min(step * 1.5, 0.2 * heat)
+        if change < FLAT and gain < 0.2 * BENT:
+            step *= 1.5
         elif change > 0.6 * STEEP:
             step *= 0.7
+        step = min(step, LONGEST * heat)
         knots.log_marginal[n] = marginal
         point[:] = trial
         before, tries = marginal, 0
@@ -137,14 +140,17 @@ def _passes_earlier(knots, first, start, end):
 
 @kernel
 def _climb_beside(one, grid, prior, point, gradient, curvature):
-    """Climb at fixed heat; move ``point`` and return its log density, with gradient and curvature there."""
+    """Climb at fixed heat; move ``point``, and return its log density and by how much it rose.
+
+    Gradient and curvature are left as they are there.
+    """
     ndim = point.size
     trial = np.empty((1, ndim))
     value = np.empty(1)
     clamp(prior, point)
     trial[0] = point
     log_posterior(trial, one, grid, prior, value)
-    best = value[0]
+    start = best = value[0]
     damping = 1e-4
     slopes(one, grid, prior, point, gradient, curvature)
     for _ in range(8):
@@ -166,7 +172,7 @@ def _climb_beside(one, grid, prior, point, gradient, curvature):
             damping = max(100.0 * damping, 1e-2)
             if damping > 1e3:
                 break
-    return best
+    return best, best - start
 
 
 @kernel

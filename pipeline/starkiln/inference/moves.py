@@ -102,7 +102,7 @@ def propose_half(coords, half, streams, proposal, fit_av, independence, trial, l
                 log_factor[star * lanes + i] -= density[i]
         else:
             log_factor[rows] = 0.0
-            scale = 2.38 / np.sqrt(2.0 * ndim) if uniform(stream) < 0.9 else 1.0
+            scale = 2.38 / np.sqrt(2.0 * ndim) if uniform(stream) < 0.5 else 1.0
             for i in range(lanes):
                 a = below(stream, lanes)
                 b = below(stream, lanes - 1)
