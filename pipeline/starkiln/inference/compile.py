@@ -11,8 +11,11 @@ from pathlib import Path
 from typing import Any
 
 import numba
-from numba.core import config
+from numba.core import config, types
 from numba.core.caching import FunctionCache
+from numba.core.codegen import JITCodeLibrary
+from numba.core.compiler import Compiler
+from numba.core.registry import CPUDispatcher
 
 ROOM_BYTES = 50_000_000
 """A cache takes a few megabytes; a disk that has less than this is not ours to fill."""
@@ -82,12 +85,60 @@ class _MendingCache(FunctionCache):
             return
 
 
+class _PartLibrary(JITCodeLibrary):
+    """Code of a kernel that other kernels call: optimised and made machine code there, not by itself as well."""
+
+    def _optimize_final_module(self) -> None:
+        pass
+
+    def _finalize_final_module(self) -> None:
+        self._finalize_dynamic_globals()
+        self._finalized = True
+
+
+class _PartCompiler(Compiler):
+    """Compiles a kernel for other kernels to link."""
+
+    def __init__(self, typingctx: Any, targetctx: Any, library: Any, *others: Any) -> None:
+        library = _PartLibrary(targetctx.codegen(), "part")
+        super().__init__(typingctx, targetctx, library, *others)
+        self.state.flags.no_compile = True
+
+    def compile_extra(self, func: Callable[..., Any]) -> Any:
+        """Compile a function, and let kernels that are lowered later find it."""
+        # There is nothing for Python to enter; what stands for it is only a key.
+        result = super().compile_extra(func)._replace(entry_point=object())
+        self.state.targetctx.insert_user_function(result.entry_point, result.fndesc, [result.library])
+        return result
+
+
+class _Part(CPUDispatcher):
+    """A kernel as other kernels call it."""
+
+    def add_overload(self, cres: Any) -> None:
+        # The inherited one also tells the entry point to the interpreter.
+        self.overloads[tuple(cres.signature.args)] = cres
+
+
+class _Kernel(CPUDispatcher):
+    """A kernel as Python calls it, and beside it the same as other kernels call it."""
+
+    def __init__(self, function: Callable[..., Any], options: dict[str, Any]) -> None:
+        super().__init__(function, targetoptions=options)
+        options = options | {"no_cpython_wrapper": True, "no_cfunc_wrapper": True}
+        self._part = _Part(function, targetoptions=options, pipeline_class=_PartCompiler)
+        if CACHE_FOLDER is not None:
+            # What njit(cache=True) does, with a cache of our own.
+            self._cache = _MendingCache(function)
+
+    @property
+    def _numba_type_(self) -> types.Dispatcher:
+        return types.Dispatcher(self._part)
+
+
 def kernel(function: Callable[..., Any]) -> Any:
     """Compile a function to machine code without the interpreter lock and without fast-math."""
-    dispatcher: Any = numba.njit(nogil=True, error_model="numpy")(function)
-    if CACHE_FOLDER is not None:
-        # What njit(cache=True) does, with a cache of our own.
-        dispatcher._cache = _MendingCache(function)
+    dispatcher = _Kernel(function, {"nogil": True, "error_model": "numpy", "nopython": True, "no_cfunc_wrapper": True})
     _KERNELS.append(dispatcher)
     return dispatcher
 
