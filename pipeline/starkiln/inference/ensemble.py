@@ -10,7 +10,7 @@ import emcee
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.inference.arithmetic import exp, log
+from starkiln.inference.arithmetic import exp, log, put
 from starkiln.inference.compile import kernel
 from starkiln.inference.convergence import Convergence, autocorrelation_times, diagnose
 from starkiln.inference.moves import (
@@ -175,7 +175,9 @@ def _factor_modes(covariance, axes, factor):
         for k in range(ndim):
             for m in range(ndim):
                 ordered[k, m] = INFLATION * covariance[star, 0, axes[k], axes[m]]
-        factor[star] = cholesky(ordered)
+        lower = cholesky(ordered)
+        for k in range(ndim):
+            put(lower[k], factor[star, k])
 
 
 @kernel

@@ -13,7 +13,7 @@ import numpy as np
 from emcee.moves import Move
 from numpy.typing import NDArray
 
-from starkiln.inference.arithmetic import log
+from starkiln.inference.arithmetic import log, put
 from starkiln.inference.compile import kernel
 from starkiln.inference.start import cholesky, solve_positive
 from starkiln.inference.streams import below, fill_normal, fill_uniform, uniform
@@ -215,7 +215,10 @@ def _learn_others(samples, centre, factor, bend):
         for m in range(1, k + 1):
             for i in range(n):
                 residual[k - 1, m - 1] += samples[k, i] * samples[m, i] / spread2(samples[0, i])
-    factor[1:, 1:] = cholesky(residual * (INFLATION / n))
+            residual[k - 1, m - 1] *= INFLATION / n
+    lower = cholesky(residual)
+    for k in range(1, ndim):
+        put(lower[k - 1], factor[k, 1:])
 
 
 class Scratch(NamedTuple):
