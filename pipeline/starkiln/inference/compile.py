@@ -65,6 +65,8 @@ CACHE_FOLDER = _cache_folder()
 if CACHE_FOLDER is not None:
     config.CACHE_DIR = str(CACHE_FOLDER)  # type: ignore[attr-defined]
 
+OPTIONS = {"nopython": True, "nogil": True, "error_model": "numpy", "no_cfunc_wrapper": True}
+
 _KERNELS: list[Any] = []
 
 
@@ -123,11 +125,11 @@ class _Part(CPUDispatcher):
 class _Kernel(CPUDispatcher):
     """A kernel as Python calls it, and beside it the same as other kernels call it."""
 
-    def __init__(self, function: Callable[..., Any], options: dict[str, Any]) -> None:
+    def __init__(self, function: Callable[..., Any], options: dict[str, Any], *, cached: bool = True) -> None:
         super().__init__(function, targetoptions=options)
         options = options | {"no_cpython_wrapper": True, "no_cfunc_wrapper": True}
         self._part = _Part(function, targetoptions=options, pipeline_class=_PartCompiler)
-        if CACHE_FOLDER is not None:
+        if cached and CACHE_FOLDER is not None:
             # What njit(cache=True) does, with a cache of our own.
             self._cache = _MendingCache(function)
 
@@ -138,14 +140,14 @@ class _Kernel(CPUDispatcher):
 
 def kernel(function: Callable[..., Any]) -> Any:
     """Compile a function to machine code without the interpreter lock and without fast-math."""
-    dispatcher = _Kernel(function, {"nogil": True, "error_model": "numpy", "nopython": True, "no_cfunc_wrapper": True})
+    dispatcher = _Kernel(function, OPTIONS)
     _KERNELS.append(dispatcher)
     return dispatcher
 
 
 def inlined(function: Callable[..., Any]) -> Any:
     """Compile a small helper that kernels inline; it has no cache entry of its own."""
-    return numba.njit(nogil=True, error_model="numpy", inline="always")(function)
+    return _Kernel(function, OPTIONS | {"forceinline": True}, cached=False)
 
 
 def compilations() -> int:
