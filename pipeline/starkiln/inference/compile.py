@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gc
 import hashlib
 import os
 import shutil
@@ -64,6 +65,9 @@ def _is_private(folder: Path) -> bool:
 CACHE_FOLDER = _cache_folder()
 if CACHE_FOLDER is not None:
     config.CACHE_DIR = str(CACHE_FOLDER)  # type: ignore[attr-defined]
+FOUND_EMPTY = CACHE_FOLDER is not None and not any(CACHE_FOLDER.iterdir())
+"""Whether every kernel must be compiled first, by this process or one beside it."""
+
 
 OPTIONS = {"nopython": True, "nogil": True, "error_model": "numpy", "no_cfunc_wrapper": True}
 
@@ -132,6 +136,17 @@ class _Kernel(CPUDispatcher):
         if cached and CACHE_FOLDER is not None:
             # What njit(cache=True) does, with a cache of our own.
             self._cache = _MendingCache(function)
+
+    def compile(self, sig: Any) -> Any:
+        """Compile for some types, or load what was compiled for them."""
+        # Compiling makes millions of objects, which the collector would look through again and again.
+        collects = gc.isenabled()
+        gc.disable()
+        try:
+            return super().compile(sig)
+        finally:
+            if collects:
+                gc.enable()
 
     @property
     def _numba_type_(self) -> types.Dispatcher:
