@@ -17,6 +17,7 @@ from numba.core.caching import FunctionCache
 from numba.core.codegen import JITCodeLibrary
 from numba.core.compiler import Compiler
 from numba.core.registry import CPUDispatcher
+from numba.core.sigutils import normalize_signature
 
 ROOM_BYTES = 50_000_000
 """A cache takes a few megabytes; a disk that has less than this is not ours to fill."""
@@ -68,7 +69,6 @@ if CACHE_FOLDER is not None:
 FOUND_EMPTY = CACHE_FOLDER is not None and not any(CACHE_FOLDER.iterdir())
 """Whether every kernel must be compiled first, by this process or one beside it."""
 
-
 OPTIONS = {"nopython": True, "nogil": True, "error_model": "numpy", "no_cfunc_wrapper": True}
 
 _KERNELS: list[Any] = []
@@ -79,10 +79,13 @@ class _MendingCache(FunctionCache):
 
     def load_overload(self, sig: Any, target_context: Any) -> Any:
         try:
-            return super().load_overload(sig, target_context)
+            found = super().load_overload(sig, target_context)
         except Exception:  # a damaged pickle raises anything
             shutil.rmtree(self.cache_path, ignore_errors=True)
             return None
+        # Processes that compile for different types at once may give their files one name.
+        fits = found is not None and found.signature.args == normalize_signature(sig)[0]
+        return found if fits else None
 
     def save_overload(self, sig: Any, data: Any) -> None:
         try:
@@ -168,6 +171,11 @@ def inlined(function: Callable[..., Any]) -> Any:
 def compilations() -> int:
     """Return how many times this process has compiled a kernel because it found no machine code of it."""
     return sum(sum(each.stats.cache_misses.values()) for each in _KERNELS)
+
+
+def loads() -> int:
+    """Return how many times this process has found machine code of a kernel in the cache."""
+    return sum(sum(each.stats.cache_hits.values()) for each in _KERNELS)
 
 
 def signatures() -> dict[str, list[str]]:

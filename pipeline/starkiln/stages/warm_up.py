@@ -27,12 +27,14 @@ from starkiln.stages.process import fit_columns
 from starkiln.stages.stars import Stars
 
 FEWEST_STEPS = 64
+LONGEST_SECONDS = 60.0
+"""How long to wait for the other process when this one's share is done."""
 
 
 def warm_up(settings: Settings, model: FitModel) -> None:
     """Call every kernel that a fit calls, so that their machine code is in the cache for other processes.
 
-    Takes half a second, or half a minute where the cache is empty.
+    Takes a quarter of a second, or a quarter of a minute where the cache is empty.
 
     Parameters
     ----------
@@ -55,10 +57,16 @@ def compile_in_two(settings: Settings, model: FitModel) -> None:
 
     Does nothing where something is in the cache already, or where there is but one processor.
     """
-    if FOUND_EMPTY and len(os.sched_getaffinity(0)) > 1:
-        with _finding_peaks(settings) as other:
+    if FOUND_EMPTY and _processors() > 1:
+        with suppress(OSError), _finding_peaks(settings) as other:
             sample_from_anywhere(settings, model)
-            other.wait()
+            with suppress(subprocess.TimeoutExpired):
+                other.wait(LONGEST_SECONDS)
+
+
+def _processors() -> int:
+    # Not every system tells which processors this process may use.
+    return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
 
 
 @contextmanager
