@@ -107,3 +107,65 @@ def test_a_folder_that_anybody_may_write_is_not_used(tmp_path):
 def test_without_any_folder_kernels_still_work():
     nowhere = 'import tempfile; tempfile.tempdir = "/proc"; os.path.expanduser = lambda path: path'
     assert call_kernel(nowhere) == ("None", 1)
+
+
+PARTS = """
+import gc
+import json
+import sys
+import numpy as np
+sys.path.insert(0, sys.argv[1])
+from starkiln.inference import compile as kernels
+import two_kernels
+result = two_kernels.outer(np.arange(3.0))
+files = len(list(kernels.CACHE_FOLDER.rglob("*.nbc")))
+print(json.dumps([result, files, two_kernels.inner(2.0), two_kernels.inner(2), kernels.compilations(), gc.isenabled()]))
+"""
+TWO_KERNELS = """
+from starkiln.inference.compile import kernel
+
+@kernel
+def inner(x):
+    return 10 * x
+
+@kernel
+def outer(values):
+    total = 0.0
+    for i in range(values.size):
+        total += inner(values[i])
+    return total
+"""
+
+
+@pytest.fixture
+def two_kernels(tmp_path):
+    """Call two kernels, one of which calls the other, in a process of its own."""
+    (tmp_path / "two_kernels.py").write_text(TWO_KERNELS)
+
+    def call():
+        shown = subprocess.run(
+            [sys.executable, "-c", PARTS, str(tmp_path)],
+            env=os.environ | {"STARKILN_KERNEL_CACHE": str(tmp_path / "cache")},
+            capture_output=True,
+            text=True,
+            check=True,
+        )
+        result, files, of_float, of_integer, compilations, collects = json.loads(shown.stdout)
+        assert (result, of_float, of_integer, collects) == (30.0, 20.0, 20, True)
+        assert isinstance(of_integer, int)
+        return files, compilations
+
+    return call
+
+
+def test_a_kernel_that_kernels_call_is_kept_only_when_python_calls_it_too(two_kernels):
+    assert two_kernels() == (1, 3)
+    assert two_kernels() == (3, 0)
+
+
+def test_machine_code_for_other_types_under_a_kernel_s_name_is_made_anew(two_kernels, tmp_path):
+    two_kernels()
+    one, other = sorted((tmp_path / "cache").rglob("two_kernels.inner-*.nbc"))
+    other.write_bytes(one.read_bytes())
+    assert two_kernels()[1] > 0
+    assert two_kernels()[1] == 0

@@ -55,3 +55,65 @@ def test_no_kernel_is_compiled_for_other_types_afterwards(repository, model):
     warm, others = json.loads(shown.stdout)
     assert others == {}
     assert warm["starkiln.inference.ensemble._pull_in"]
+
+
+FIRST_AND_SECOND = """
+import json
+import os
+import sys
+from simulated import make_settings
+from starkiln.inference import compile as kernels
+from starkiln.stages import warm_up as stage
+from starkiln.stages.model import build_model
+
+stage._processors = lambda: 2
+sys.executable = sys.argv[2] or sys.executable
+settings = make_settings(**json.loads(sys.argv[1]))
+model = build_model(settings)
+stage.compile_in_two(settings, model)
+shared = kernels.signatures()
+stage.warm_up(settings, model)
+print(json.dumps([kernels.FOUND_EMPTY, shared, kernels.compilations(), kernels.loads()]))
+"""
+
+
+def warm_up_in_two(repository, cache, model, python=""):
+    """Warm up in a process of its own; return whether it found no cache, the kernels of its share, and both counts."""
+    shown = subprocess.run(
+        [sys.executable, "-c", FIRST_AND_SECOND, json.dumps({"model": model}), python],
+        cwd=repository / "tests",
+        env=os.environ
+        | {"PYTHONPATH": f"{repository}/pipeline:{repository}/tests", "STARKILN_KERNEL_CACHE": str(cache)},
+        capture_output=True,
+        text=True,
+        check=True,
+    )
+    assert shown.stderr == ""
+    return json.loads(shown.stdout)
+
+
+PEAKS = "starkiln.inference.start._search"
+CHAINS = "starkiln.inference.convergence._diagnose"
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(
+    "model", [{}, {"photosphere": "auto"}, {"extinction": {"prior": "fixed"}}], ids=["usual", "either", "fixed dust"]
+)
+def test_two_processes_share_an_empty_cache(repository, tmp_path, model):
+    found_empty, share, compiled, loaded = warm_up_in_two(repository, tmp_path, model)
+    assert found_empty
+    assert share[CHAINS]
+    assert not share[PEAKS]
+    assert loaded >= 2
+    again = warm_up_in_two(repository, tmp_path, model)
+    assert not again[0]
+    assert again[2] == 0
+    assert again[3] == compiled + loaded
+
+
+@pytest.mark.slow
+def test_a_second_process_that_fails_costs_only_time(repository, tmp_path):
+    _, _, compiled, loaded = warm_up_in_two(repository, tmp_path, {}, python="/nowhere/python")
+    assert compiled > 15
+    assert loaded == 0

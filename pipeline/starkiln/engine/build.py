@@ -343,6 +343,7 @@ class Making:
         bench = self._bench
         bench.progress.begin("warming up", 0)
         with bench.stop.at_once():
+            bench.stages.prepare(bench.settings, bench.model)
             bench.stages.warm_up(bench.settings, bench.model)
         bench.laps.lap("warm up")
 

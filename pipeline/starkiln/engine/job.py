@@ -41,20 +41,23 @@ class Stages:
         From a table of input rows, the settings and the model to the output tables.
     warm_up
         Called once with the settings and the model before workers start, to leave them less to do.
+    prepare
+        Called before it where the run began, and not by workers.
     """
 
     build_model: Callable[[Settings], Any]
     process_part: Callable[[pa.Table, Settings, Any], Any]
     warm_up: Callable[[Settings, Any], None] = _nothing
+    prepare: Callable[[Settings, Any], None] = _nothing
 
 
 def fitting_stages() -> Stages:
     """Return the stages that fit stars."""
     from starkiln.stages.model import build_model
     from starkiln.stages.process import process_part
-    from starkiln.stages.warm_up import warm_up
+    from starkiln.stages.warm_up import compile_in_two, warm_up
 
-    return Stages(build_model, process_part, warm_up)
+    return Stages(build_model, process_part, warm_up, compile_in_two)
 
 
 @dataclass(frozen=True, kw_only=True)

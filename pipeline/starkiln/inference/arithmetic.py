@@ -155,6 +155,13 @@ def log_array(x: NDArray[np.float64]) -> NDArray[np.float64]:
 
 
 @kernel
+def put(values, out):
+    """Copy values; assigning an array to a slice takes a second and a half to compile."""
+    for i in range(out.size):
+        out[i] = values[i]
+
+
+@kernel
 def log_normal_cdf(x):
     """Return the logarithm of the standard normal distribution function, at any x.
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gc
 import hashlib
 import os
 import shutil
@@ -11,8 +12,12 @@ from pathlib import Path
 from typing import Any
 
 import numba
-from numba.core import config
+from numba.core import config, types
 from numba.core.caching import FunctionCache
+from numba.core.codegen import JITCodeLibrary
+from numba.core.compiler import Compiler
+from numba.core.registry import CPUDispatcher
+from numba.core.sigutils import normalize_signature
 
 ROOM_BYTES = 50_000_000
 """A cache takes a few megabytes; a disk that has less than this is not ours to fill."""
@@ -61,6 +66,10 @@ def _is_private(folder: Path) -> bool:
 CACHE_FOLDER = _cache_folder()
 if CACHE_FOLDER is not None:
     config.CACHE_DIR = str(CACHE_FOLDER)  # type: ignore[attr-defined]
+FOUND_EMPTY = CACHE_FOLDER is not None and not any(CACHE_FOLDER.iterdir())
+"""Whether every kernel must be compiled first, by this process or one beside it."""
+
+OPTIONS = {"nopython": True, "nogil": True, "error_model": "numpy", "no_cfunc_wrapper": True}
 
 _KERNELS: list[Any] = []
 
@@ -70,10 +79,13 @@ class _MendingCache(FunctionCache):
 
     def load_overload(self, sig: Any, target_context: Any) -> Any:
         try:
-            return super().load_overload(sig, target_context)
+            found = super().load_overload(sig, target_context)
         except Exception:  # a damaged pickle raises anything
             shutil.rmtree(self.cache_path, ignore_errors=True)
             return None
+        # Processes that compile for different types at once may give their files one name.
+        fits = found is not None and found.signature.args == normalize_signature(sig)[0]
+        return found if fits else None
 
     def save_overload(self, sig: Any, data: Any) -> None:
         try:
@@ -82,24 +94,88 @@ class _MendingCache(FunctionCache):
             return
 
 
+class _PartLibrary(JITCodeLibrary):
+    """Code of a kernel that other kernels call: optimised and made machine code there, not by itself as well."""
+
+    def _optimize_final_module(self) -> None:
+        pass
+
+    def _finalize_final_module(self) -> None:
+        self._finalize_dynamic_globals()
+        self._finalized = True
+
+
+class _PartCompiler(Compiler):
+    """Compiles a kernel for other kernels to link."""
+
+    def __init__(self, typingctx: Any, targetctx: Any, library: Any, *others: Any) -> None:
+        library = _PartLibrary(targetctx.codegen(), "part")
+        super().__init__(typingctx, targetctx, library, *others)
+        self.state.flags.no_compile = True
+
+    def compile_extra(self, func: Callable[..., Any]) -> Any:
+        """Compile a function, and let kernels that are lowered later find it."""
+        # There is nothing for Python to enter; what stands for it is only a key.
+        result = super().compile_extra(func)._replace(entry_point=object())
+        self.state.targetctx.insert_user_function(result.entry_point, result.fndesc, [result.library])
+        return result
+
+
+class _Part(CPUDispatcher):
+    """A kernel as other kernels call it."""
+
+    def add_overload(self, cres: Any) -> None:
+        # The inherited one also tells the entry point to the interpreter.
+        self.overloads[tuple(cres.signature.args)] = cres
+
+
+class _Kernel(CPUDispatcher):
+    """A kernel as Python calls it, and beside it the same as other kernels call it."""
+
+    def __init__(self, function: Callable[..., Any], options: dict[str, Any], *, cached: bool = True) -> None:
+        super().__init__(function, targetoptions=options)
+        options = options | {"no_cpython_wrapper": True, "no_cfunc_wrapper": True}
+        self._part = _Part(function, targetoptions=options, pipeline_class=_PartCompiler)
+        if cached and CACHE_FOLDER is not None:
+            # What njit(cache=True) does, with a cache of our own.
+            self._cache = _MendingCache(function)
+
+    def compile(self, sig: Any) -> Any:
+        """Compile for some types, or load what was compiled for them."""
+        # Compiling makes millions of objects, which the collector would look through again and again.
+        collects = gc.isenabled()
+        gc.disable()
+        try:
+            return super().compile(sig)
+        finally:
+            if collects:
+                gc.enable()
+
+    @property
+    def _numba_type_(self) -> types.Dispatcher:
+        return types.Dispatcher(self._part)
+
+
 def kernel(function: Callable[..., Any]) -> Any:
     """Compile a function to machine code without the interpreter lock and without fast-math."""
-    dispatcher: Any = numba.njit(nogil=True, error_model="numpy")(function)
-    if CACHE_FOLDER is not None:
-        # What njit(cache=True) does, with a cache of our own.
-        dispatcher._cache = _MendingCache(function)
+    dispatcher = _Kernel(function, OPTIONS)
     _KERNELS.append(dispatcher)
     return dispatcher
 
 
 def inlined(function: Callable[..., Any]) -> Any:
     """Compile a small helper that kernels inline; it has no cache entry of its own."""
-    return numba.njit(nogil=True, error_model="numpy", inline="always")(function)
+    return _Kernel(function, OPTIONS | {"forceinline": True}, cached=False)
 
 
 def compilations() -> int:
     """Return how many times this process has compiled a kernel because it found no machine code of it."""
     return sum(sum(each.stats.cache_misses.values()) for each in _KERNELS)
+
+
+def loads() -> int:
+    """Return how many times this process has found machine code of a kernel in the cache."""
+    return sum(sum(each.stats.cache_hits.values()) for each in _KERNELS)
 
 
 def signatures() -> dict[str, list[str]]:

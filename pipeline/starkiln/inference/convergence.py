@@ -19,6 +19,8 @@ from starkiln.inference.compile import kernel
 
 WALKER_ERRORS = 6.0
 SOKAL_WINDOW = 5.0
+NEXT = np.int64(1)
+"""The lag of one step: for a plain 1, a kernel would be compiled a second time."""
 
 
 class Convergence(NamedTuple):
@@ -188,8 +190,17 @@ def _within_and_total(draws, mean, variance):
     half = draws.shape[0] // 2
     chains = mean.size
     _half_moments(draws, mean, variance)
-    within = variance.sum() / chains
-    between = ((mean - mean.sum() / chains) ** 2).sum() / (chains - 1)
+    within, centre, between = 0.0, 0.0, 0.0
+    for h in range(2):
+        for w in range(mean.shape[1]):
+            within += variance[h, w]
+            centre += mean[h, w]
+    within /= chains
+    centre /= chains
+    for h in range(2):
+        for w in range(mean.shape[1]):
+            between += (mean[h, w] - centre) ** 2
+    between /= chains - 1
     return within, within * (half - 1) / half + between
 
 
@@ -231,7 +242,7 @@ def split_ess(draws):
         return np.nan
     rho = np.zeros(half)
     rho[0] = 1.0
-    rho[1] = 1.0 - (within - _mean_autocovariance(draws, mean, 1, buffer)) / total
+    rho[1] = 1.0 - (within - _mean_autocovariance(draws, mean, NEXT, buffer)) / total
     even, odd = 1.0, rho[1]
     t = 1
     while t < half - 3 and even + odd > 0.0:

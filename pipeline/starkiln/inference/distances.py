@@ -190,7 +190,15 @@ def _mass_at(s, left, right, mass):
 
 @kernel
 def _ln_at_mass(target, left, right, mass):
-    i = min(max(np.searchsorted(mass, target) - 1, 0), NODES - 2)
+    # np.searchsorted takes half a second to compile.
+    low, high = 0, NODES
+    while low < high:
+        middle = (low + high) // 2
+        if mass[middle] < target:
+            low = middle + 1
+        else:
+            high = middle
+    i = min(max(low - 1, 0), NODES - 2)
     width = mass[i + 1] - mass[i]
     fraction = (target - mass[i]) / width if width > 0.0 else 0.5
     return left + (right - left) * (i + min(max(fraction, 0.0), 1.0)) / (NODES - 1)

@@ -6,7 +6,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from starkiln.inference.arithmetic import exp, log
+from starkiln.inference.arithmetic import exp, log, put
 from starkiln.inference.compile import kernel
 from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, log_posterior, n_parameters
 from starkiln.inference.proposal import FARTHEST_AV, Proposal, empty_proposal
@@ -93,8 +93,9 @@ def _walk(one, grid, prior, peak, covariance, direction, knots, first, n, best):
     heat_low = exp(LN_HEAT_K - prior.ln_teff_max) * (1.0 + 1e-9)
     heat_high = exp(LN_HEAT_K - prior.ln_teff_min) * (1.0 - 1e-9)
     gradient, curvature = np.empty(ndim), np.empty((ndim, ndim))
-    point, trial = peak.copy(), np.empty(ndim)
-    tangent = covariance[0] / covariance[0, 0]
+    point, trial, tangent = peak.copy(), np.empty(ndim), np.empty(ndim)
+    for k in range(ndim):
+        tangent[k] = covariance[0, k] / covariance[0, 0]
     step = min(FIRST_STEP * np.sqrt(covariance[0, 0]), LONGEST * point[0])
     before = knots.log_marginal[first]
     last = min(n + WALK, MAX_KNOTS)
@@ -121,7 +122,7 @@ def _walk(one, grid, prior, peak, covariance, direction, knots, first, n, best):
             step *= 0.7
         step = min(step, LONGEST * heat)
         knots.log_marginal[n] = marginal
-        point[:] = trial
+        put(trial, point)
         before, tries = marginal, 0
         best = max(best, marginal)
         n += 1
@@ -148,14 +149,14 @@ def _climb_beside(one, grid, prior, point, gradient, curvature):
     trial = np.empty((1, ndim))
     value = np.empty(1)
     clamp(prior, point)
-    trial[0] = point
+    put(point, trial[0])
     log_posterior(trial, one, grid, prior, value)
     start = best = value[0]
     damping = 1e-4
     slopes(one, grid, prior, point, gradient, curvature)
     for _ in range(8):
         step = _step_beside(gradient, curvature, point, prior, damping)
-        trial[0] = point
+        put(point, trial[0])
         for k in range(1, ndim):
             trial[0, k] += step[k]
         clamp(prior, trial[0])
@@ -163,7 +164,7 @@ def _climb_beside(one, grid, prior, point, gradient, curvature):
         if value[0] > best:
             gain = value[0] - best
             best = value[0]
-            point[:] = trial[0]
+            put(trial[0], point)
             slopes(one, grid, prior, point, gradient, curvature)
             damping *= 0.1
             if gain < 0.02:
@@ -267,7 +268,9 @@ def _others(point, shift, inner, prior, knots, n):
     for m in range(others):
         for j in range(others):
             scatter[m, j] *= STRETCH * STRETCH
-    knots.factor[n] = cholesky(scatter)
+    lower = cholesky(scatter)
+    for m in range(others):
+        put(lower[m], knots.factor[n, m])
     for m in range(others):
         a = m + 1 if prior.fit_av and m > 0 else m
         knots.slope[n, m] = slope[m]
@@ -281,8 +284,10 @@ def _lay_out(knots, n, prior, proposal, star):
     """Sort the knots, add the bounds of the temperature, and normalise."""
     heat_low = exp(LN_HEAT_K - prior.ln_teff_max)
     heat_high = exp(LN_HEAT_K - prior.ln_teff_min)
-    order = np.argsort(knots.heat[:n])
-    best = knots.log_marginal[:n].max()
+    order = _ascending(knots.heat, n)
+    best = -np.inf
+    for k in range(n):
+        best = max(best, knots.log_marginal[k])
     heat, log_density, mass = proposal.heat[star], proposal.log_density[star], proposal.mass[star]
     count = 1
     for source in order:
@@ -304,13 +309,26 @@ def _lay_out(knots, n, prior, proposal, star):
 
 
 @kernel
+def _ascending(values, n):
+    """Return the order that sorts the first n values."""
+    order = np.arange(n)
+    for i in range(1, n):
+        k = i
+        while k > 0 and values[order[k - 1]] > values[order[k]]:
+            order[k - 1], order[k] = order[k], order[k - 1]
+            k -= 1
+    return order
+
+
+@kernel
 def _copy_knot(knots, source, best, proposal, star, target):
     proposal.heat[star, target] = knots.heat[source]
     proposal.log_density[star, target] = max(knots.log_marginal[source] - best, -DEPTH - BEYOND)
-    proposal.av[star, target] = knots.av[source]
-    proposal.centre[star, target] = knots.centre[source]
-    proposal.slope[star, target] = knots.slope[source]
-    proposal.factor[star, target] = knots.factor[source]
+    put(knots.av[source], proposal.av[star, target])
+    put(knots.centre[source], proposal.centre[star, target])
+    put(knots.slope[source], proposal.slope[star, target])
+    for m in range(knots.factor.shape[1]):
+        put(knots.factor[source, m], proposal.factor[star, target, m])
 
 
 @kernel

@@ -15,7 +15,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.inference.arithmetic import exp, log
+from starkiln.inference.arithmetic import exp, log, put
 from starkiln.inference.compile import kernel
 from starkiln.inference.start import cholesky
 from starkiln.inference.streams import fill_normal, fill_uniform
@@ -299,11 +299,15 @@ def learn_others(window, fit_av, proposal):
     covariance = np.empty((n_others, n_others))
     for star in range(n_stars):
         for t in range(n_steps):
-            coords[t * walkers : (t + 1) * walkers] = window[t, star * walkers : (star + 1) * walkers]
+            for w in range(walkers):
+                put(window[t, star * walkers + w], coords[t * walkers + w])
         find_knots(proposal, star, coords, scratch)
         standardise(proposal, star, fit_av, coords, scratch)
         for m in range(n_others):
-            proposal.learnt_mean[star, m] = scratch.x[m].sum() / len(coords)
+            total = 0.0
+            for i in range(len(coords)):
+                total += scratch.x[m, i]
+            proposal.learnt_mean[star, m] = total / len(coords)
             for j in range(m + 1):
                 total = 0.0
                 for i in range(len(coords)):
@@ -312,4 +316,6 @@ def learn_others(window, fit_av, proposal):
                     )
                 covariance[m, j] = covariance[j, m] = total / len(coords)
             covariance[m, m] += 1e-6
-        proposal.learnt_factor[star] = cholesky(covariance)
+        lower = cholesky(covariance)
+        for m in range(n_others):
+            put(lower[m], proposal.learnt_factor[star, m])

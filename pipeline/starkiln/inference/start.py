@@ -7,7 +7,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from starkiln.inference.arithmetic import HALF_LN_2PI, exp, log, log_normal_cdf
+from starkiln.inference.arithmetic import HALF_LN_2PI, exp, log, log_normal_cdf, put
 from starkiln.inference.compile import kernel
 from starkiln.inference.posterior import (
     LN_HEAT_K,
@@ -26,6 +26,8 @@ from starkiln.inference.posterior import (
 MAX_MODES = 3
 FIRST_LN_JITTER = -5.0
 LN_TEFF_STRIDE = 0.06
+ONLY = np.int64(0)
+"""The star of a block of one: for a plain 0, kernels would be compiled a second time."""
 AV_NODES = (0.0, 0.1, 0.3, 0.6, 1.0, 1.5, 2.25, 3.0, 4.0, 6.0, 9.0)
 
 
@@ -122,7 +124,7 @@ def _climb_peaks(one, grid, prior, ln_teff_nodes, profile, best_av, best_ln_omeg
 @kernel
 def _has_outlier(one, grid, prior, coords):
     """Return whether a band is more likely an outlier than not at a point (1, ndim)."""
-    lanes = make_lanes(1, grid.loading.shape[0])
+    lanes = make_lanes(coords.shape[0], grid.loading.shape[0])
     ln_teff, ln_omega, av = np.empty(1), np.empty(1), np.empty(1)
     read_coords(coords, one.av_fixed[0], prior, ln_teff, ln_omega, av, lanes)
     spline_weights(ln_teff, av, grid, lanes)
@@ -130,7 +132,7 @@ def _has_outlier(one, grid, prior, coords):
     for j in range(one.n_bands[0]):
         if one.limit[0, j]:
             continue
-        band_model(grid, one, 0, j, lanes)
+        band_model(grid, one, ONLY, j, lanes)
         model = min(exp(lanes.flux[0] + ln_omega[0]) * one.inverse_error[0, j], 1e30)
         q = (one.scaled_flux[0, j] - model) ** 2 / (1.0 + lanes.spread2[0] * model * model)
         core = (1.0 - prior.outlier_fraction) * exp(-0.5 * q * (1.0 - wide))
@@ -156,9 +158,9 @@ def _profile_by_band(one, grid, prior, ln_teff, av_nodes, profile, best_av, best
         av[:] = av_nodes[a] if prior.fit_av else one.av_fixed[0]
         spline_weights(ln_teff, av, grid, lanes)
         for j in range(n_bands):
-            band_model(grid, one, 0, j, lanes)
-            ln_template[j] = lanes.flux
-            spread2[j] = lanes.spread2
+            band_model(grid, one, ONLY, j, lanes)
+            put(lanes.flux, ln_template[j])
+            put(lanes.spread2, spread2[j])
         offset = av[0] - one.av_mean[0]
         log_prior = -0.5 * offset * offset * one.av_inverse_variance[0] - av[0] * one.av_rate[0]
         for leader in range(n_bands):
@@ -169,11 +171,11 @@ def _profile_by_band(one, grid, prior, ln_teff, av_nodes, profile, best_av, best
                 ln_omega[i] = min(max(ln_flux - ln_template[leader, i], prior.ln_omega_min), prior.ln_omega_max)
             total[:] = log_prior
             for j in range(n_bands):
-                lanes.flux[:] = ln_template[j]
-                lanes.spread2[:] = spread2[j]
+                put(ln_template[j], lanes.flux)
+                put(spread2[j], lanes.spread2)
                 if not one.limit[0, j]:
                     product[:] = 1.0
-                    add_band(lanes, ln_omega, one, 0, j, prior, total, product)
+                    add_band(lanes, ln_omega, one, ONLY, j, prior, total, product)
                     for i in range(n):
                         total[i] += 0.5 * log(product[i])
             for i in range(n):
@@ -222,12 +224,12 @@ def _profile(one, grid, prior, ln_teff, av_nodes, profile, best_av, best_ln_omeg
         sum_ft[:] = 0.0
         sum_tt[:] = 1e-300
         for j in range(one.n_bands[0]):
-            band_model(grid, one, 0, j, lanes)
+            band_model(grid, one, ONLY, j, lanes)
             for k in range(n_factors):
                 # Here the factors count as scatter of each band's own: one loading is the change for z = 1.
                 lanes_up.z[:] = 0.0
                 lanes_up.z[k] = 1.0
-                band_model(grid, one, 0, j, lanes_up)
+                band_model(grid, one, ONLY, j, lanes_up)
                 for i in range(n):
                     lanes.spread2[i] += (lanes_up.flux[i] - lanes.flux[i]) ** 2
             observed = 0.0 if one.limit[0, j] else one.scaled_flux[0, j]
@@ -272,7 +274,7 @@ def _climb(one, grid, prior, point, curvature):
     gradient = np.empty(ndim)
     trial = np.empty((1, ndim))
     value = np.empty(1)
-    trial[0] = point
+    put(point, trial[0])
     log_posterior(trial, one, grid, prior, value)
     best = value[0]
     damping = 1e-3
@@ -289,7 +291,7 @@ def _climb(one, grid, prior, point, curvature):
         if value[0] > best or (best == -np.inf and value[0] > -np.inf):
             gain = value[0] - best
             best = value[0]
-            point[:] = trial[0]
+            put(trial[0], point)
             slopes(one, grid, prior, point, gradient, curvature)
             damping = max(damping * 0.2, 1e-9)
             if gain < 1e-4:
@@ -330,7 +332,7 @@ def slopes(one, grid, prior, point, gradient, curvature):
     step_t, step_a = 1e-4, 1e-3
     same = np.empty((n, ndim))
     for i in range(n):
-        same[i] = point
+        put(point, same[i])
     read_coords(same, one.av_fixed[0], prior, ln_teff, ln_omega_all, av, lanes)
     ln_omega = ln_omega_all[0]
     ln_teff[1] += step_t
@@ -358,7 +360,7 @@ def slopes(one, grid, prior, point, gradient, curvature):
     f = prior.outlier_fraction
     wide = 1.0 / (prior.outlier_width * prior.outlier_width)
     for j in range(one.n_bands[0]):
-        band_model(grid, one, 0, j, lanes)
+        band_model(grid, one, ONLY, j, lanes)
         model = min(exp(flux[0] + ln_omega) * one.inverse_error[0, j], 1e30)
         inverse_variance = 1.0 / (1.0 + lanes.spread2[0] * model * model)
         jacobian[0] = -((flux[1] - flux[0]) / step_t - 1.0) / point[0]
@@ -436,7 +438,9 @@ def inverse_positive(matrix):
     for i in range(n):
         unit[:] = 0.0
         unit[i] = 1.0
-        inverse[:, i] = solve_positive(matrix, unit)
+        column = solve_positive(matrix, unit)
+        for k in range(n):
+            inverse[k, i] = column[k]
     return inverse
 
 
@@ -461,14 +465,17 @@ def _keep(modes, star, point, value, curvature):
         return
     for m in range(min(count, MAX_MODES - 1), place, -1):
         _copy_mode(modes, star, m - 1, m)
-    modes.coords[star, place] = point
+    put(point, modes.coords[star, place])
     modes.log_density[star, place] = value
-    modes.covariance[star, place] = inverse_positive(curvature)
+    covariance = inverse_positive(curvature)
+    for k in range(point.size):
+        put(covariance[k], modes.covariance[star, place, k])
     modes.n_modes[star] = min(count + 1, MAX_MODES)
 
 
 @kernel
 def _copy_mode(modes, star, source, target):
-    modes.coords[star, target] = modes.coords[star, source]
+    put(modes.coords[star, source], modes.coords[star, target])
     modes.log_density[star, target] = modes.log_density[star, source]
-    modes.covariance[star, target] = modes.covariance[star, source]
+    for k in range(modes.coords.shape[2]):
+        put(modes.covariance[star, source, k], modes.covariance[star, target, k])
