@@ -15,13 +15,12 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.special import ndtri
 
-from starkiln.inference.arithmetic import sine_cosine_turns
 from starkiln.inference.compile import kernel
+from starkiln.inference.fourier import all_products
 
 WALKER_ERRORS = 6.0
 SOKAL_WINDOW = 5.0
-DIRECT_LAGS = 32  # are summed one by one as they are asked for; all lags by Fourier transforms cost as much
-LANES = 8
+DIRECT_LAGS = 40  # are summed one by one in the time that Fourier transforms take for all lags
 
 
 class Convergence(NamedTuple):
@@ -149,15 +148,16 @@ def _diagnose(chain, order, scores, result):
         for p in range(chain.shape[1]):
             _put_in_order(chain[star, p].ravel(), order[star, p], value)
             _rank_scores(value, order[star, p], scores, scratch.first, flat)
+            first_lag = _first_transformed_lag(result.autocorr_steps[star, p])
             within, total = _within_and_total(scratch)
             rhat = np.sqrt(total / within)
-            result.ess_bulk[star, p] = _effective_size(scratch, within, total)
+            result.ess_bulk[star, p] = _effective_size(scratch, within, total, first_lag)
             _fold(value, order[star, p], scratch.distance, scratch.folded, scratch.order)
             _rank_scores(scratch.folded, scratch.order, scores, scratch.first, flat)
             within, total = _within_and_total(scratch)
             result.rhat[star, p] = max(rhat, np.sqrt(total / within))
-            low = _tail_size(chain[star, p], sorted_quantile(value, 0.05), scratch)
-            high = _tail_size(chain[star, p], sorted_quantile(value, 0.95), scratch)
+            low = _tail_size(chain[star, p], sorted_quantile(value, 0.05), scratch, first_lag)
+            high = _tail_size(chain[star, p], sorted_quantile(value, 0.95), scratch, first_lag)
             result.ess_tail[star, p] = np.nan if np.isnan(low) or np.isnan(high) else min(low, high)
             if _has_stray_walker(chain[star, p], result.autocorr_steps[star, p], scratch.column):
                 result.stray_walker[star] = True
@@ -262,22 +262,28 @@ def _within_and_total(scratch):
 
 
 @kernel
-def _tail_size(draws, cut, scratch):
+def _tail_size(draws, cut, scratch, first_lag):
     """Return the effective size of how many draws (n, W) lie below a cut."""
     for t in range(draws.shape[0]):
         for w in range(draws.shape[1]):
             scratch.draws[t, w] = 1.0 if draws[t, w] <= cut else 0.0
     within, total = _within_and_total(scratch)
-    return _effective_size(scratch, within, total)
+    return _effective_size(scratch, within, total, first_lag)
 
 
 @kernel
-def _mean_autocovariance(scratch, lag):
-    """Return the autocovariance at a lag, over n, averaged over half-chains; lags are asked for in order."""
-    if lag == DIRECT_LAGS:
+def _first_transformed_lag(tau):
+    """Return the lag from which on Fourier transforms are used: the first where it is clear that many are needed."""
+    return 1 if SOKAL_WINDOW * tau > DIRECT_LAGS else DIRECT_LAGS
+
+
+@kernel
+def _mean_autocovariance(scratch, lag, first_lag):
+    """Return the autocovariance at a lag, over n, averaged over half-chains; lags are asked for in order, from 1."""
+    if lag == first_lag:
         scratch.column[:] = 1.0
-        _all_products(scratch.centred, scratch.column, scratch.products)
-    if lag < DIRECT_LAGS:
+        all_products(scratch.centred, scratch.column, scratch.products)
+    if lag < first_lag:
         _products(scratch.centred, lag, scratch.column)
         total = 0.0
         for c in range(scratch.column.size):
@@ -298,7 +304,7 @@ def _products(series, lag, out):
 
 
 @kernel
-def _effective_size(scratch, within, total):
+def _effective_size(scratch, within, total, first_lag):
     """Return the split effective sample size of the centred half-chains; NaN where nothing varies."""
     if not total > 0.0:
         return np.nan
@@ -307,12 +313,12 @@ def _effective_size(scratch, within, total):
     rho = scratch.rho
     rho[:] = 0.0
     rho[0] = 1.0
-    rho[1] = 1.0 - (within - _mean_autocovariance(scratch, 1)) / total
+    rho[1] = 1.0 - (within - _mean_autocovariance(scratch, 1, first_lag)) / total
     even, odd = 1.0, rho[1]
     t = 1
     while t < half - 3 and even + odd > 0.0:
-        even = 1.0 - (within - _mean_autocovariance(scratch, t + 1)) / total
-        odd = 1.0 - (within - _mean_autocovariance(scratch, t + 2)) / total
+        even = 1.0 - (within - _mean_autocovariance(scratch, t + 1, first_lag)) / total
+        odd = 1.0 - (within - _mean_autocovariance(scratch, t + 2, first_lag)) / total
         if even + odd >= 0.0:
             rho[t + 1] = even
             rho[t + 2] = odd
@@ -346,89 +352,22 @@ def autocorrelation_time(draws):
     square = np.empty(walkers)
     _products(centred, 0, square)
     tau = 1.0
+    first_lag = n_steps
     for lag in range(1, n_steps):
+        if first_lag == n_steps and lag >= _first_transformed_lag(tau):
+            all_products(centred, 1.0 / square, products)
+            first_lag = lag
         correlation = 0.0
-        if lag < DIRECT_LAGS:
+        if lag < first_lag:
             _products(centred, lag, column)
             for w in range(walkers):
                 correlation += column[w] / square[w]
         else:
-            if lag == DIRECT_LAGS:
-                _all_products(centred, 1.0 / square, products)
             correlation = products[lag]
         tau += 2.0 * correlation / walkers
         if lag >= SOKAL_WINDOW * tau or np.isnan(tau):
             break
     return tau
-
-
-@kernel
-def _all_products(series, weight, out):
-    """Write the products of values of a series (n, C) by lag, all lags, summed over columns with a weight each.
-
-    Two columns are the real and the imaginary part of one series, LANES of which are transformed together: the power
-    spectrum of a complex series transforms to the sum of its parts' products, in its real part.
-    """
-    n, columns = series.shape
-    size = 2
-    while size < 2 * n:
-        size *= 2
-    cosine, sine = np.empty(size // 2), np.empty(size // 2)
-    for k in range(size // 2):
-        sine[k], cosine[k] = sine_cosine_turns(k / size)
-    room = np.empty((4, size * LANES))
-    power = np.zeros((4, size))
-    scale = np.sqrt(weight)
-    for begin in range(0, columns, 2 * LANES):
-        room[:2] = 0.0
-        for part in range(2):
-            some = slice(begin + part * LANES, min(begin + (part + 1) * LANES, columns))
-            its_scale = scale[some]
-            for t in range(n):
-                row, target = series[t, some], room[part, t * LANES :]
-                for lane in range(its_scale.size):
-                    target[lane] = row[lane] * its_scale[lane]
-        real, imaginary = _transform(room, cosine, sine)
-        for k in range(size):
-            for lane in range(k * LANES, (k + 1) * LANES):
-                power[0, k] += real[lane] * real[lane] + imaginary[lane] * imaginary[lane]
-    real, _ = _transform(power, cosine, sine)
-    for lag in range(n):
-        out[lag] = real[lag] / size
-
-
-@kernel
-def _transform(room, cosine, sine):
-    """Return real and imaginary parts of the Fourier transform of series beside each other (2 + 2, size * lanes).
-
-    The first two rows are theirs, the others scratch. Stockham's order: no series is left bit-reversed.
-    """
-    here, there = 0, 2
-    span = room.shape[1] // (2 * cosine.size)
-    while span < room.shape[1]:
-        _butterflies(room[here], room[here + 1], room[there], room[there + 1], span, cosine, sine)
-        here, there = there, here
-        span *= 2
-    return room[here], room[here + 1]
-
-
-@kernel
-def _butterflies(real, imaginary, out_real, out_imaginary, span, cosine, sine):
-    n = real.size // (2 * span)
-    for k in range(n):
-        c, s = cosine[k * cosine.size // n], sine[k * cosine.size // n]
-        a, b = slice(k * span, (k + 1) * span), slice((k + n) * span, (k + n + 1) * span)
-        even, odd = slice(2 * k * span, (2 * k + 1) * span), slice((2 * k + 1) * span, (2 * k + 2) * span)
-        a_real, a_imaginary, b_real, b_imaginary = real[a], imaginary[a], real[b], imaginary[b]
-        sum_real, sum_imaginary = out_real[even], out_imaginary[even]
-        turned_real, turned_imaginary = out_real[odd], out_imaginary[odd]
-        for i in range(span):
-            difference_real = a_real[i] - b_real[i]
-            difference_imaginary = a_imaginary[i] - b_imaginary[i]
-            sum_real[i] = a_real[i] + b_real[i]
-            sum_imaginary[i] = a_imaginary[i] + b_imaginary[i]
-            turned_real[i] = difference_real * c - difference_imaginary * s
-            turned_imaginary[i] = difference_real * s + difference_imaginary * c
 
 
 @kernel
