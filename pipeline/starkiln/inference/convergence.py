@@ -46,7 +46,7 @@ class Convergence(NamedTuple):
         return Convergence(**columns)
 
 
-@lru_cache(maxsize=8)
+@lru_cache(maxsize=32)
 def _normal_scores(n: int) -> NDArray[np.float64]:
     """Blom's normal scores of the ranks 1, 1.5, 2 ... n, by twice the rank."""
     twice_rank = np.arange(2 * n + 2)
