@@ -35,6 +35,7 @@ def chains(rng):
     yield "independent", rng.normal(size=(96, 32))
     yield "AR(0.9)", ar1(rng, 600, 16, 0.9)
     yield "anticorrelated", ar1(rng, 200, 16, -0.3)
+    yield "AR(0.99), long", ar1(rng, 2000, 32, 0.99)
     yield "skewed, sticky", sticky(np.exp(rng.normal(size=(128, 32))), rng, 0.5)
     yield "one walker apart", ar1(rng, 128, 16, 0.3) + 9.0 * (np.arange(16) == 3)
     yield "wider in half", rng.normal(size=(128, 16)) * np.where(np.arange(16) < 8, 1.0, 4.0)
@@ -79,4 +80,13 @@ def test_stray_walker_is_seen():
 def test_chain_that_never_moves_is_nan_not_good():
     found = run_diagnose(np.ones((64, 8)))
     assert np.isnan(found.ess_bulk[0, 0])
+    assert np.isnan(found.ess_tail[0, 0])
     assert np.isnan(found.autocorr_steps[0, 0])
+
+
+def test_ties_share_their_rank():
+    # Ties among the draws, and among their distances from the median.
+    draws = np.random.default_rng(3).integers(0, 4, size=(64, 8)).astype(float)
+    found = run_diagnose(draws)
+    assert found.ess_bulk[0, 0] == pytest.approx(float(arviz.ess(draws.T, method="bulk")), rel=1e-6)
+    assert found.rhat[0, 0] == pytest.approx(float(arviz.rhat(draws.T, method="rank")), rel=1e-6)

@@ -26,12 +26,10 @@ def test_gap_between_two_peaks_is_seen_and_one_peak_has_none():
     one = rng.normal(size=(200, 2000))
     two = rng.normal(size=(200, 2000)) + 12.0 * (np.arange(2000) < 300)
     for draws, expected in ((one, False), (two, True)):
-        q = quantiles(draws)
-        assert (has_gap(draws, q[:, 3] - q[:, 1]) == expected).all()
+        assert (has_gap(np.sort(draws)) == expected).all()
 
 
 def test_gap_ignores_a_few_stray_draws():
     draws = np.random.default_rng(4).normal(size=(1, 2000))
     draws[0, :20] += 50.0
-    q = quantiles(draws)
-    assert not has_gap(draws, q[:, 3] - q[:, 1])[0]
+    assert not has_gap(np.sort(draws))[0]

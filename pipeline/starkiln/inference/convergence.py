@@ -16,11 +16,11 @@ from numpy.typing import NDArray
 from scipy.special import ndtri
 
 from starkiln.inference.compile import kernel
+from starkiln.inference.fourier import all_products
 
 WALKER_ERRORS = 6.0
 SOKAL_WINDOW = 5.0
-NEXT = np.int64(1)
-"""The lag of one step: for a plain 1, a kernel would be compiled a second time."""
+DIRECT_LAGS = 40  # are summed one by one in the time that Fourier transforms take for all lags
 
 
 class Convergence(NamedTuple):
@@ -46,7 +46,7 @@ class Convergence(NamedTuple):
         return Convergence(**columns)
 
 
-@lru_cache(maxsize=8)
+@lru_cache(maxsize=32)
 def _normal_scores(n: int) -> NDArray[np.float64]:
     """Blom's normal scores of the ranks 1, 1.5, 2 ... n, by twice the rank."""
     twice_rank = np.arange(2 * n + 2)
@@ -88,166 +88,244 @@ def diagnose(chain: NDArray[np.float64], order: NDArray[np.int64], autocorr_step
     return result
 
 
+class _Scratch(NamedTuple):
+    """Room for the half-chains of one parameter, C = 2 W of n / 2 steps; a column each.
+
+    Attributes
+    ----------
+    draws
+        (n, W), what is diagnosed: normal scores, or whether a draw lies in a tail.
+    centred
+        (n / 2, C): each half-chain minus its mean.
+    mean, variance, column
+        (C,); the last for sums down the columns.
+    products, rho
+        (n / 2,), by lag.
+    value, distance, folded
+        (n W + 2,): sorted values, their distances from the median, those sorted; an infinity at both ends.
+    order, first
+        (n W,) int64.
+    """
+
+    draws: NDArray[np.float64]
+    centred: NDArray[np.float64]
+    mean: NDArray[np.float64]
+    variance: NDArray[np.float64]
+    column: NDArray[np.float64]
+    products: NDArray[np.float64]
+    rho: NDArray[np.float64]
+    value: NDArray[np.float64]
+    distance: NDArray[np.float64]
+    folded: NDArray[np.float64]
+    order: NDArray[np.int64]
+    first: NDArray[np.int64]
+
+
+@kernel
+def _make_scratch(n_steps, walkers):
+    half, n, columns = n_steps // 2, n_steps * walkers, 2 * walkers
+    return _Scratch(
+        np.empty((n_steps, walkers)),
+        np.empty((half, columns)),
+        np.empty(columns),
+        np.empty(columns),
+        np.empty(columns),
+        np.empty(half),
+        np.empty(half),
+        np.empty(n + 2),
+        np.empty(n + 2),
+        np.empty(n + 2),
+        np.empty(n, dtype=np.int64),
+        np.empty(n, dtype=np.int64),
+    )
+
+
 @kernel
 def _diagnose(chain, order, scores, result):
-    n_stars, n_parameters, n_steps, walkers = chain.shape
-    n = n_steps * walkers
-    ranked = np.empty((n_steps, walkers))
-    folded_order = np.empty(n, dtype=np.int64)
-    folded = np.empty(n)
-    for star in range(n_stars):
-        for p in range(n_parameters):
-            values = chain[star, p].ravel()
-            _rank_scores(values, order[star, p], scores, ranked.ravel())
-            rhat = split_rhat(ranked)
-            result.ess_bulk[star, p] = split_ess(ranked)
-            _fold(values, order[star, p], folded, folded_order)
-            _rank_scores(folded, folded_order, scores, ranked.ravel())
-            result.rhat[star, p] = max(rhat, split_rhat(ranked))
-            tail = np.inf
-            for probability in (0.05, 0.95):
-                cut = sorted_quantile(values, order[star, p], probability)
-                for t in range(n_steps):
-                    for w in range(walkers):
-                        ranked[t, w] = 1.0 if chain[star, p, t, w] <= cut else 0.0
-                ess = split_ess(ranked)
-                tail = min(tail, ess) if not (np.isnan(ess) or np.isnan(tail)) else np.nan
-            result.ess_tail[star, p] = tail
-            if _has_stray_walker(chain[star, p], result.autocorr_steps[star, p]):
+    scratch = _make_scratch(chain.shape[2], chain.shape[3])
+    value, flat = scratch.value, scratch.draws.ravel()
+    for star in range(chain.shape[0]):
+        for p in range(chain.shape[1]):
+            _put_in_order(chain[star, p].ravel(), order[star, p], value)
+            _rank_scores(value, order[star, p], scores, scratch.first, flat)
+            first_lag = _first_transformed_lag(result.autocorr_steps[star, p])
+            within, total = _within_and_total(scratch)
+            rhat = np.sqrt(total / within)
+            result.ess_bulk[star, p] = _effective_size(scratch, within, total, first_lag)
+            _fold(value, order[star, p], scratch.distance, scratch.folded, scratch.order)
+            _rank_scores(scratch.folded, scratch.order, scores, scratch.first, flat)
+            within, total = _within_and_total(scratch)
+            result.rhat[star, p] = max(rhat, np.sqrt(total / within))
+            low = _tail_size(chain[star, p], sorted_quantile(value, 0.05), scratch, first_lag)
+            high = _tail_size(chain[star, p], sorted_quantile(value, 0.95), scratch, first_lag)
+            result.ess_tail[star, p] = np.nan if np.isnan(low) or np.isnan(high) else min(low, high)
+            if _has_stray_walker(chain[star, p], result.autocorr_steps[star, p], scratch.column):
                 result.stray_walker[star] = True
 
 
 @kernel
-def sorted_quantile(values, order, probability):
-    """Return a quantile, linear between order statistics."""
-    position = probability * (values.size - 1)
+def _put_in_order(values, order, out):
+    """Write sorted values between two infinities."""
+    n = values.size
+    out[0] = out[n + 1] = np.inf
+    for i in range(n):
+        out[i + 1] = values[order[i]]
+
+
+@kernel
+def sorted_quantile(value, probability):
+    """Return a quantile of sorted values between two infinities, linear between order statistics."""
+    last = value.size - 3
+    position = probability * last
     low = int(position)
-    high = min(low + 1, values.size - 1)
     fraction = position - low
-    return values[order[low]] * (1.0 - fraction) + values[order[high]] * fraction
+    return value[low + 1] * (1.0 - fraction) + value[min(low + 1, last) + 1] * fraction
 
 
 @kernel
-def _rank_scores(values, order, scores, out):
-    """Write the normal score of each value's rank, ties sharing their mean rank."""
-    n = values.size
-    i = 0
-    while i < n:
-        j = i
-        while j + 1 < n and values[order[j + 1]] == values[order[i]]:
-            j += 1
-        score = scores[i + j + 2]
-        for k in range(i, j + 1):
-            out[order[k]] = score
-        i = j + 1
+def _rank_scores(value, order, scores, first, out):
+    """Write the normal score of each draw's rank, ties sharing their mean rank.
 
-
-@kernel
-def _fold(values, order, folded, folded_order):
-    """Write |value - median| and the order that sorts it, by merging the two sides of the sorted values."""
-    n = values.size
-    median = sorted_quantile(values, order, 0.5)
+    Parameters
+    ----------
+    value
+        (n + 2,), sorted values between two infinities; ``order`` (n,) says whose they are.
+    first
+        (n,) int64, scratch.
+    """
+    # Half of all draws tie with another: selections, as branches would be mispredicted.
+    n = order.size
+    start = 0
     for i in range(n):
-        folded[i] = abs(values[i] - median)
-    left = 0
-    while left < n and values[order[left]] <= median:
-        left += 1
-    right = left
-    left -= 1
-    for i in range(n):
-        if right >= n or (left >= 0 and folded[order[left]] <= folded[order[right]]):
-            folded_order[i] = order[left]
-            left -= 1
-        else:
-            folded_order[i] = order[right]
-            right += 1
+        start = start if value[i] == value[i + 1] else i
+        first[i] = start
+    last = n - 1
+    for i in range(n - 1, -1, -1):
+        last = last if value[i + 1] == value[i + 2] else i
+        out[order[i]] = scores[first[i] + last + 2]
 
 
 @kernel
-def _half_moments(draws, mean, variance):
-    """Write the mean and the variance (n - 1) of each half-chain."""
-    half = draws.shape[0] // 2
-    walkers = draws.shape[1]
+def _fold(value, order, distance, folded, folded_order):
+    """Write the sorted distances from the median and whose they are, by merging the two sides of the sorted values.
+
+    The near half is merged from the median outwards and the far half from both ends inwards, at the same time.
+    """
+    n = order.size
+    median = sorted_quantile(value, 0.5)
+    for i in range(n + 2):
+        distance[i] = abs(value[i] - median)
+    left = np.searchsorted(value[1 : n + 1], median, side="right")
+    right = left + 1
+    far_left, far_right = 1, n
+    folded[0] = folded[n + 1] = np.inf
+    for i in range(1, n - n // 2 + 1):
+        is_left = distance[left] <= distance[right]
+        near = left if is_left else right
+        folded[i] = distance[near]
+        folded_order[i - 1] = order[near - 1]
+        left = max(left - is_left, 0)
+        right = min(right + 1 - is_left, n + 1)
+        is_left = distance[far_left] > distance[far_right]
+        far = far_left if is_left else far_right
+        folded[n + 1 - i] = distance[far]
+        folded_order[n - i] = order[far - 1]
+        far_left += is_left
+        far_right -= 1 - is_left
+
+
+@kernel
+def _within_and_total(scratch):
+    """Centre the half-chains of the draws; return their mean variance and the variance estimate of all."""
+    draws, centred, mean, variance = scratch.draws, scratch.centred, scratch.mean, scratch.variance
+    half, chains = centred.shape
+    walkers = chains // 2
+    mean[:] = 0.0
+    variance[:] = 0.0
     for h in range(2):
-        for w in range(walkers):
-            mean[h, w] = 0.0
-            variance[h, w] = 0.0
-        for t in range(h * half, (h + 1) * half):
+        some, its_mean, its_variance = draws[h * half :], mean[h * walkers :], variance[h * walkers :]
+        for t in range(half):
             for w in range(walkers):
-                mean[h, w] += draws[t, w]
+                its_mean[w] += some[t, w]
         for w in range(walkers):
-            mean[h, w] /= half
-        for t in range(h * half, (h + 1) * half):
+            its_mean[w] /= half
+        for t in range(half):
+            row = centred[t, h * walkers :]
             for w in range(walkers):
-                variance[h, w] += (draws[t, w] - mean[h, w]) ** 2
-        for w in range(walkers):
-            variance[h, w] /= half - 1
-
-
-@kernel
-def _within_and_total(draws, mean, variance):
-    """Return the mean variance within half-chains and the variance estimate of all."""
-    half = draws.shape[0] // 2
-    chains = mean.size
-    _half_moments(draws, mean, variance)
+                row[w] = some[t, w] - its_mean[w]
+                its_variance[w] += row[w] * row[w]
+    for c in range(chains):
+        variance[c] /= half - 1
     within, centre, between = 0.0, 0.0, 0.0
-    for h in range(2):
-        for w in range(mean.shape[1]):
-            within += variance[h, w]
-            centre += mean[h, w]
+    for c in range(chains):
+        within += variance[c]
+        centre += mean[c]
     within /= chains
     centre /= chains
-    for h in range(2):
-        for w in range(mean.shape[1]):
-            between += (mean[h, w] - centre) ** 2
+    for c in range(chains):
+        between += (mean[c] - centre) ** 2
     between /= chains - 1
     return within, within * (half - 1) / half + between
 
 
 @kernel
-def split_rhat(draws):
-    """Return the split R-hat of draws (n, W)."""
-    mean = np.empty((2, draws.shape[1]))
-    variance = np.empty((2, draws.shape[1]))
-    within, total = _within_and_total(draws, mean, variance)
-    return np.sqrt(total / within)
+def _tail_size(draws, cut, scratch, first_lag):
+    """Return the effective size of how many draws (n, W) lie below a cut."""
+    for t in range(draws.shape[0]):
+        for w in range(draws.shape[1]):
+            scratch.draws[t, w] = 1.0 if draws[t, w] <= cut else 0.0
+    within, total = _within_and_total(scratch)
+    return _effective_size(scratch, within, total, first_lag)
 
 
 @kernel
-def _mean_autocovariance(draws, mean, lag, buffer):
-    """Return the autocovariance at a lag, over n, averaged over half-chains."""
-    half = draws.shape[0] // 2
-    walkers = draws.shape[1]
-    total = 0.0
-    for h in range(2):
-        buffer[:] = 0.0
-        for t in range(h * half, (h + 1) * half - lag):
-            for w in range(walkers):
-                buffer[w] += (draws[t, w] - mean[h, w]) * (draws[t + lag, w] - mean[h, w])
-        for w in range(walkers):
-            total += buffer[w]
-    return total / (half * 2 * walkers)
+def _first_transformed_lag(tau):
+    """Return the lag from which on Fourier transforms are used: the first where it is clear that many are needed."""
+    return 1 if SOKAL_WINDOW * tau > DIRECT_LAGS else DIRECT_LAGS
 
 
 @kernel
-def split_ess(draws):
-    """Return the split effective sample size of draws (n, W); NaN where nothing varies."""
-    half = draws.shape[0] // 2
-    mean = np.empty((2, draws.shape[1]))
-    variance = np.empty((2, draws.shape[1]))
-    buffer = np.empty(draws.shape[1])
-    n_draws = 2.0 * half * draws.shape[1]
-    within, total = _within_and_total(draws, mean, variance)
+def _mean_autocovariance(scratch, lag, first_lag):
+    """Return the autocovariance at a lag, over n, averaged over half-chains; lags are asked for in order, from 1."""
+    if lag == first_lag:
+        scratch.column[:] = 1.0
+        all_products(scratch.centred, scratch.column, scratch.products)
+    if lag < first_lag:
+        _products(scratch.centred, lag, scratch.column)
+        total = 0.0
+        for c in range(scratch.column.size):
+            total += scratch.column[c]
+    else:
+        total = scratch.products[lag]
+    return total / scratch.centred.size
+
+
+@kernel
+def _products(series, lag, out):
+    """Write the sum of the products of values a lag apart, for each column of a series (n, C)."""
+    out[:] = 0.0
+    for t in range(series.shape[0] - lag):
+        early, late = series[t], series[t + lag]
+        for c in range(out.size):
+            out[c] += early[c] * late[c]
+
+
+@kernel
+def _effective_size(scratch, within, total, first_lag):
+    """Return the split effective sample size of the centred half-chains; NaN where nothing varies."""
     if not total > 0.0:
         return np.nan
-    rho = np.zeros(half)
+    half = scratch.rho.size
+    n_draws = float(scratch.centred.size)
+    rho = scratch.rho
+    rho[:] = 0.0
     rho[0] = 1.0
-    rho[1] = 1.0 - (within - _mean_autocovariance(draws, mean, NEXT, buffer)) / total
+    rho[1] = 1.0 - (within - _mean_autocovariance(scratch, 1, first_lag)) / total
     even, odd = 1.0, rho[1]
     t = 1
     while t < half - 3 and even + odd > 0.0:
-        even = 1.0 - (within - _mean_autocovariance(draws, mean, t + 1, buffer)) / total
-        odd = 1.0 - (within - _mean_autocovariance(draws, mean, t + 2, buffer)) / total
+        even = 1.0 - (within - _mean_autocovariance(scratch, t + 1, first_lag)) / total
+        odd = 1.0 - (within - _mean_autocovariance(scratch, t + 2, first_lag)) / total
         if even + odd >= 0.0:
             rho[t + 1] = even
             rho[t + 2] = odd
@@ -270,24 +348,29 @@ def autocorrelation_time(draws):
     """Return the integrated autocorrelation time in steps of draws (n, W), as emcee defines it."""
     n_steps, walkers = draws.shape
     centred = np.empty((n_steps, walkers))
-    zero = np.zeros(walkers)
-    buffer = np.empty(walkers)
-    for w in range(walkers):
-        total = 0.0
-        for t in range(n_steps):
-            total += draws[t, w]
-        for t in range(n_steps):
-            centred[t, w] = draws[t, w] - total / n_steps
-            zero[w] += centred[t, w] * centred[t, w]
-    tau = 1.0
-    for lag in range(1, n_steps):
-        buffer[:] = 0.0
-        for t in range(n_steps - lag):
-            for w in range(walkers):
-                buffer[w] += centred[t, w] * centred[t + lag, w]
-        correlation = 0.0
+    column = np.zeros(walkers)
+    products = np.empty(n_steps)
+    for t in range(n_steps):
         for w in range(walkers):
-            correlation += buffer[w] / zero[w]
+            column[w] += draws[t, w]
+    for t in range(n_steps):
+        for w in range(walkers):
+            centred[t, w] = draws[t, w] - column[w] / n_steps
+    square = np.empty(walkers)
+    _products(centred, 0, square)
+    tau = 1.0
+    first_lag = n_steps
+    for lag in range(1, n_steps):
+        if first_lag == n_steps and lag >= _first_transformed_lag(tau):
+            all_products(centred, 1.0 / square, products)
+            first_lag = lag
+        correlation = 0.0
+        if lag < first_lag:
+            _products(centred, lag, column)
+            for w in range(walkers):
+                correlation += column[w] / square[w]
+        else:
+            correlation = products[lag]
         tau += 2.0 * correlation / walkers
         if lag >= SOKAL_WINDOW * tau or np.isnan(tau):
             break
@@ -295,22 +378,16 @@ def autocorrelation_time(draws):
 
 
 @kernel
-def _has_stray_walker(draws, tau):
+def _has_stray_walker(draws, tau, column):
     n_steps, walkers = draws.shape
-    centre = 0.0
-    square = 0.0
+    total, square = column[:walkers], column[walkers:]
+    column[:] = 0.0
     for t in range(n_steps):
         for w in range(walkers):
-            centre += draws[t, w]
-    centre /= n_steps * walkers
+            total[w] += draws[t, w]
+    centre = total.sum() / (n_steps * walkers)
     for t in range(n_steps):
         for w in range(walkers):
-            square += (draws[t, w] - centre) ** 2
-    error = np.sqrt(square / (n_steps * walkers) * max(tau, 1.0) / n_steps)
-    for w in range(walkers):
-        total = 0.0
-        for t in range(n_steps):
-            total += draws[t, w]
-        if abs(total / n_steps - centre) > WALKER_ERRORS * error:
-            return True
-    return False
+            square[w] += (draws[t, w] - centre) ** 2
+    error = np.sqrt(square.sum() / (n_steps * walkers) * max(tau, 1.0) / n_steps)
+    return (np.abs(total / n_steps - centre) > WALKER_ERRORS * error).any()

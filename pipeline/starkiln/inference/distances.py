@@ -17,6 +17,7 @@ from starkiln.inference.compile import kernel
 from starkiln.inference.streams import uniform
 
 NODES = 1024
+GUIDES = 1024  # a power of two, so that the guide of a mass is exact
 COARSE = 256
 DEPTH = 40.0  # the density is followed down to exp(-40) of its peak
 NONE, PARALLAX, GAUSSIAN = 0, 1, 2
@@ -166,10 +167,12 @@ def _crossing(outside, inside, level, kind, value, error, length_scale_pc):
 def _cumulative(best, left, right, kind, value, error, length_scale_pc, mass):
     """Write the normalised cumulative mass at NODES points, by the trapezium rule."""
     step = (right - left) / (NODES - 1)
+    for i in range(NODES):
+        mass[i] = exp(log_density_of_ln(left + step * i, kind, value, error, length_scale_pc) - best)
+    before = mass[0]
     mass[0] = 0.0
-    before = exp(log_density_of_ln(left, kind, value, error, length_scale_pc) - best)
     for i in range(1, NODES):
-        here = exp(log_density_of_ln(left + step * i, kind, value, error, length_scale_pc) - best)
+        here = mass[i]
         mass[i] = mass[i - 1] + 0.5 * (before + here)
         before = here
     total = mass[NODES - 1]
@@ -189,16 +192,20 @@ def _mass_at(s, left, right, mass):
 
 
 @kernel
-def _ln_at_mass(target, left, right, mass):
-    # np.searchsorted takes half a second to compile.
-    low, high = 0, NODES
-    while low < high:
-        middle = (low + high) // 2
-        if mass[middle] < target:
-            low = middle + 1
-        else:
-            high = middle
-    i = min(max(low - 1, 0), NODES - 2)
+def _put_guides(mass, guide):
+    """Write the last node of less mass than each multiple of 1 / GUIDES."""
+    i = 0
+    for k in range(GUIDES + 1):
+        while i < NODES - 2 and mass[i + 1] < k * (1.0 / GUIDES):
+            i += 1
+        guide[k] = i
+
+
+@kernel
+def _ln_at_mass(target, left, right, mass, guide):
+    i = guide[int(target * GUIDES)]
+    while i < NODES - 2 and mass[i + 1] < target:
+        i += 1
     width = mass[i + 1] - mass[i]
     fraction = (target - mass[i]) / width if width > 0.0 else 0.5
     return left + (right - left) * (i + min(max(fraction, 0.0), 1.0)) / (NODES - 1)
@@ -208,6 +215,7 @@ def _ln_at_mass(target, left, right, mass):
 def _draw(ln_omega, data, ln_bounds, ln_radius, streams, draws):
     n_stars, n_draws = ln_omega.shape
     mass = np.empty(NODES)
+    guide = np.empty(GUIDES + 1, np.int64)
     lower = np.empty(n_draws)
     weight = np.empty(n_draws)
     for star in range(n_stars):
@@ -220,6 +228,7 @@ def _draw(ln_omega, data, ln_bounds, ln_radius, streams, draws):
         value, error, scale = data.value[star], data.error[star], data.length_scale_pc[star]
         best, left, right = _window(kind, value, error, scale, ln_bounds[0], ln_bounds[1])
         _cumulative(best, left, right, kind, value, error, scale, mass)
+        _put_guides(mass, guide)
         total = 0.0
         square = 0.0
         least = 1.0
@@ -236,7 +245,7 @@ def _draw(ln_omega, data, ln_bounds, ln_radius, streams, draws):
             draws.kept_share[star] = 0.0
             for i in range(n_draws):
                 half = 0.5 * ln_omega[star, i]
-                s = _ln_at_mass(uniform(stream), left, right, mass)
+                s = _ln_at_mass(uniform(stream), left, right, mass, guide)
                 draws.ln_dist_pc[star, i] = min(max(s, ln_radius[0] - half), ln_radius[1] - half)
             continue
         draws.kept_share[star] = total * total / square / n_draws
@@ -245,7 +254,7 @@ def _draw(ln_omega, data, ln_bounds, ln_radius, streams, draws):
         for i in range(n_draws):
             k = draws.source[star, i]
             target = lower[k] + uniform(stream) * weight[k]
-            draws.ln_dist_pc[star, i] = _ln_at_mass(target, left, right, mass)
+            draws.ln_dist_pc[star, i] = _ln_at_mass(target, left, right, mass, guide)
 
 
 @kernel

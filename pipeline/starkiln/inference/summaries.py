@@ -12,10 +12,14 @@ PROBABILITIES = (0.025, 0.16, 0.5, 0.84, 0.975)
 
 def quantiles(draws: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return the quantiles (K, 5) at PROBABILITIES of draws (K, N), linear between order statistics."""
-    ordered = np.sort(draws, axis=-1)
-    position = np.array(PROBABILITIES) * (draws.shape[1] - 1)
+    return sorted_quantiles(np.sort(draws, axis=-1))
+
+
+def sorted_quantiles(ordered: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the `quantiles` (K, 5) of draws (K, N) that are sorted."""
+    position = np.array(PROBABILITIES) * (ordered.shape[1] - 1)
     low = position.astype(np.int64)
-    high = np.minimum(low + 1, draws.shape[1] - 1)
+    high = np.minimum(low + 1, ordered.shape[1] - 1)
     fraction = position - low
     return ordered[:, low] * (1.0 - fraction) + ordered[:, high] * fraction
 
@@ -66,13 +70,13 @@ def _mean(values, out):
         out[star] = total / values.shape[1]
 
 
-def has_gap(draws: NDArray[np.float64], interval68: NDArray[np.float64], share: float = 0.025) -> NDArray[np.bool_]:
-    """Return whether the sorted draws (K, N) leave a gap as wide as half their 68 % half-interval.
+def has_gap(ordered: NDArray[np.float64], share: float = 0.025) -> NDArray[np.bool_]:
+    """Return whether draws (K, N), sorted, leave a gap as wide as half their 68 % half-interval.
 
     Only gaps with at least ``share`` of the draws on both sides count. A single Gaussian peak of a thousand draws
     has no gap above a tenth of that.
     """
-    ordered = np.sort(draws, axis=-1)
-    skip = int(share * draws.shape[1])
-    gaps = np.diff(ordered[:, skip : draws.shape[1] - skip], axis=-1)
-    return np.asarray(gaps.max(axis=-1) > 0.25 * interval68)
+    skip = int(share * ordered.shape[1])
+    gaps = np.diff(ordered[:, skip : ordered.shape[1] - skip], axis=-1)
+    interval = sorted_quantiles(ordered)
+    return np.asarray(gaps.max(axis=-1) > 0.25 * (interval[:, 3] - interval[:, 1]))

@@ -69,8 +69,10 @@ def derive(
         model.ln_radius_bounds_pc,
         streams,
     )
-    photometric = np.take_along_axis(draws.chain, distances.source[:, None], axis=2)
-    ln_teff, ln_omega = (np.take_along_axis(values, distances.source, axis=1) for values in (ln_teff, ln_omega))
+    photometric = draws.chain
+    if (distances.source != np.arange(ln_teff.shape[1])).any():
+        photometric = np.take_along_axis(photometric, distances.source[:, None], axis=2)
+        ln_teff, ln_omega = (np.take_along_axis(values, distances.source, axis=1) for values in (ln_teff, ln_omega))
     av = photometric[:, 2] if model.prior.fit_av else np.broadcast_to(stars.av_mean[:, None], ln_teff.shape)
     ln_radius = distances.ln_dist_pc + 0.5 * ln_omega - LN_RSUN_PC
     return Derived(

@@ -60,10 +60,9 @@ def summarise(
     """
     columns: Columns = {}
     no_detection = _detections(stars) < 2
-    for name, draws, logarithmic in _reported(derived):
-        values = quantiles(draws)
-        if logarithmic:
-            values = exp_array(values)
+    plain = {name: quantiles(draws) for name, draws, _ in _reported(derived)}
+    for name, _, logarithmic in _reported(derived):
+        values = exp_array(plain[name]) if logarithmic else plain[name].copy()
         if name in NOT_WITHOUT_DETECTION:
             values[no_detection] = np.nan
         for place, suffix in enumerate(QUANTILE_NAMES):
@@ -79,6 +78,8 @@ def summarise(
     columns["n_bands"] = stars.usable.sum(axis=1)
     columns["n_limits"] = stars.limit.sum(axis=1)
     columns["flags"] = _flags(stars, fitted, derived, columns, model, settings)
+    for name, rows in _at_bounds(plain, derived.kept_share, model.prior, settings).items():
+        columns["flags"] |= _flag(name, rows)
     return columns
 
 
@@ -244,12 +245,15 @@ def _flags(
             "outside_calibration": _outside_calibration(stars, columns, model) & ~no_detection,
             "blackbody_chosen": np.full(len(stars), settings.model.photosphere == "auto" and model.departures is None),
             "ultraviolet_excess": _excess(stars, columns, model, is_infrared=False),
-            **_at_bounds(derived, model.prior, settings),
         }
     flags = np.zeros(len(stars), np.int32)
     for name, rows in raised.items():
-        flags |= np.where(rows, np.int32(BY_NAME[name].value), np.int32(0))
+        flags |= _flag(name, rows)
     return flags
+
+
+def _flag(name: str, rows: NDArray[np.bool_]) -> NDArray[np.int32]:
+    return np.where(rows, np.int32(BY_NAME[name].value), np.int32(0))
 
 
 def _outside_calibration(stars: Stars, columns: Columns, model: FitModel) -> NDArray[np.bool_]:
@@ -261,12 +265,6 @@ def _outside_calibration(stars: Stars, columns: Columns, model: FitModel) -> NDA
     return np.asarray((stars.usable & ~good).sum(axis=1) > 0.5 * stars.usable.sum(axis=1))
 
 
-def _distance_at_bound(derived: Derived, settings: Settings) -> NDArray[np.bool_]:
-    nearest, farthest = np.log(settings.model.distance.bounds_pc)
-    ln_dist = quantiles(derived.ln_dist)
-    return np.asarray((ln_dist[:, 0] < nearest + 0.05) | (ln_dist[:, 4] > farthest - 0.05))
-
-
 def _lost_draws(columns: Columns, derived: Derived, settings: Settings) -> NDArray[np.bool_]:
     """Return whether the bounds on R have left fewer effective draws than half of what was asked for."""
     too_few = columns["ess_bulk"] < LEAST_KEPT_SHARE * settings.sampling.effective_samples
@@ -275,21 +273,23 @@ def _lost_draws(columns: Columns, derived: Derived, settings: Settings) -> NDArr
 
 def _several_modes(fitted: Fitted) -> NDArray[np.bool_]:
     # The chain itself: joint draws may repeat, which looks like gaps.
-    ln_teff = np.ascontiguousarray(fitted.draws.chain[:, 0])
-    interval = quantiles(ln_teff)
-    return has_gap(ln_teff, interval[:, 3] - interval[:, 1])
+    return has_gap(np.sort(fitted.draws.chain[:, 0], axis=-1))
 
 
-def _at_bounds(derived: Derived, prior: Prior, settings: Settings) -> dict[str, NDArray[np.bool_]]:
-    ln_teff, av, ln_radius = quantiles(derived.ln_teff), quantiles(derived.av), quantiles(derived.ln_radius)
+def _at_bounds(
+    plain: dict[str, NDArray[np.float64]], kept_share: NDArray[np.float64], prior: Prior, settings: Settings
+) -> dict[str, NDArray[np.bool_]]:
+    """Return the flags of quantities whose quantiles, as :class:`Derived` has them, reach the bounds."""
+    ln_teff, av, ln_radius, ln_dist = (plain[name] for name in ("teff", "av", "radius", "dist"))
     ln_radius_min, ln_radius_max = np.log(settings.model.radius_rsun)
+    nearest, farthest = np.log(settings.model.distance.bounds_pc)
     return {
         "temperature_at_bound": (ln_teff[:, 0] < prior.ln_teff_min + 0.01) | (ln_teff[:, 4] > prior.ln_teff_max - 0.01),
         "extinction_at_bound": (av[:, 4] > 0.98 * prior.av_max) & prior.fit_av,
-        "distance_at_bound": _distance_at_bound(derived, settings),
+        "distance_at_bound": (ln_dist[:, 0] < nearest + 0.05) | (ln_dist[:, 4] > farthest - 0.05),
         "radius_at_bound": (ln_radius[:, 0] < ln_radius_min + 0.05)
         | (ln_radius[:, 4] > ln_radius_max - 0.05)
-        | (derived.kept_share == 0.0),
+        | (kept_share == 0.0),
     }
 
 
