@@ -60,7 +60,7 @@ def _ratios(many, model, settings) -> np.ndarray:
     points, sizes = np.empty((n, 3, 2)), np.empty((n, 3, 2))
     pooled = []
     for fitted in fit(many, model, settings):
-        rows = fitted.first + fitted.draws.stars
+        rows = fitted.draws.stars
         points[rows] = np.quantile(fitted.draws.chain, [0.5, 0.975], axis=-1).transpose(1, 2, 0)
         sizes[rows, :, 0] = fitted.draws.convergence.ess_bulk
         sizes[rows, :, 1] = fitted.draws.convergence.ess_tail

@@ -40,7 +40,7 @@ def offsets(n: int, seed: int = 11) -> tuple[np.ndarray, np.ndarray]:
     stars = stars.at(np.flatnonzero(seen)[:n])
     median, width = np.empty((n, 3)), np.empty((n, 3))
     for fitted in fit(stars, model, settings):
-        for place, star in enumerate(fitted.first + fitted.draws.stars):
+        for place, star in enumerate(fitted.draws.stars):
             chain = fitted.draws.chain[place]
             exact = integrate(stars, star, model, settings, chain, nodes=72)
             found = quantiles(chain)

@@ -38,7 +38,7 @@ def coverage(n: int, seed: int = 23) -> tuple[int, dict[str, tuple[float, float]
     inside68 = {name: np.zeros(n, bool) for name in QUANTITIES}
     inside95 = {name: np.zeros(n, bool) for name in QUANTITIES}
     for fitted in fit(stars, model, settings):
-        rows = fitted.first + fitted.draws.stars
+        rows = fitted.draws.stars
         derived = derive(stars.at(rows), fitted.draws, model, settings)
         for name in QUANTITIES:
             draws = derived.av if name == "av" else getattr(derived, f"ln_{name}")

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
 from typing import NamedTuple
 
@@ -22,6 +22,7 @@ from starkiln.inference.start import Modes, find_modes
 BURN_IN = 16  # steps: the walkers are drawn from the proposal
 LEARN_FROM = 4  # the step of the burn-in from which on the proposal learns
 INDEPENDENCE = 0.85  # of the steps; the others are differential evolution, for what the proposal has missed
+PATIENCE = 128  # steps that a star may take in its own block
 MIN_STEPS = 60
 MIN_TAUS = 50.0
 TAIL_SHARE = 0.4
@@ -80,6 +81,83 @@ def log_prob_function(block: Block, grid: Grid, prior: Prior) -> Callable[[NDArr
     return log_prob
 
 
+class Start(NamedTuple):
+    """A block of stars to be sampled, the peaks of their posteriors, and their streams (S, 4), advanced in place."""
+
+    block: Block
+    modes: Modes
+    streams: NDArray[np.uint64]
+
+
+def sample_blocks(
+    starts: Iterable[Start], grid: Grid, prior: Prior, walkers: int, stopping: Stopping, memory_bytes: float = 1e9
+) -> Iterator[tuple[Block, Draws]]:
+    """Sample every star of some blocks until it is done; yield stars as they finish, with their part of the block.
+
+    Stars number on from block to block. Those that take longer than PATIENCE steps go on together at the end.
+
+    Parameters
+    ----------
+    memory_bytes
+        When the chains would outgrow this, the stars left are sampled in two halves, one after the other.
+    """
+    patient = [length for length in stopping.lengths() if length <= PATIENCE]
+    waiting: list[_Run] = []
+    first = 0
+    for start in starts:
+        run = burn_in(start.block, grid, prior, start.streams, walkers, start.modes)
+        run.stars += first
+        first += run.n_stars
+        yield from _sample(run, patient, stopping, memory_bytes, waiting)
+    if waiting:
+        yield from _sample(_joined(waiting), stopping.lengths()[len(patient) :], stopping, memory_bytes, [])
+
+
+def _sample(
+    run: _Run, lengths: list[int], stopping: Stopping, memory_bytes: float, unfinished: list[_Run]
+) -> Iterator[tuple[Block, Draws]]:
+    """Sample to one length after another; who is not done then is added to the unfinished."""
+    halves = [(run, lengths)]
+    while halves:
+        run, lengths = halves.pop()
+        if not lengths:
+            unfinished.append(run)
+            continue
+        need = run.n_stars * chain_bytes(lengths[0], run.walkers, run.coords.shape[1])
+        if run.n_stars > 1 and need > memory_bytes:
+            middle = run.n_stars // 2
+            halves += [(run.taking(np.arange(middle, run.n_stars)), lengths), (run.taking(np.arange(middle)), lengths)]
+            continue
+        run.extend(lengths[0])
+        done, block, run = run.judge(stopping)
+        if done is not None:
+            yield block, done
+        if run.n_stars:
+            halves.append((run, lengths[1:]))
+
+
+def _joined(runs: list[_Run]) -> _Run:
+    """Return runs of chains of one length as one."""
+    fields = [np.concatenate(columns) for columns in zip(*(run.block for run in runs), strict=True)]
+    proposals = [np.concatenate(columns) for columns in zip(*(run.proposal for run in runs), strict=True)]
+    names = ("streams", "coords", "log_prob", "chain", "chain_log_prob", "accepted", "stars")
+    whole = {name: np.concatenate([getattr(run, name) for run in runs]) for name in names}
+    first = runs[0]
+    joined = _Run(
+        Block(*fields),
+        first.grid,
+        first.prior,
+        whole["streams"],
+        first.walkers,
+        Proposal(*proposals),
+        whole["coords"],
+        whole["log_prob"],
+    )
+    joined.chain, joined.chain_log_prob = whole["chain"], whole["chain_log_prob"]
+    joined.accepted, joined.stars = whole["accepted"], whole["stars"]
+    return joined
+
+
 def sample_block(
     block: Block,
     grid: Grid,
@@ -90,32 +168,10 @@ def sample_block(
     memory_bytes: float = 1e9,
     modes: Modes | None = None,
 ) -> Iterator[Draws]:
-    """Sample every star of a block until it is done; yield stars as they finish.
-
-    Parameters
-    ----------
-    streams
-        (S, 4) uint64, each star's own stream, advanced in place.
-    memory_bytes
-        When the chains would outgrow this, the stars left are sampled in two halves, one after the other.
-    modes
-        The peaks of the posteriors, if they have been found already.
-    """
-    run = burn_in(block, grid, prior, streams, walkers, modes or find_modes(block, grid, prior))
-    waiting = [(run, stopping.lengths())]
-    while waiting:
-        run, (length, *longer) = waiting.pop()
-        if run.n_stars > 1 and run.n_stars * chain_bytes(length, walkers, run.coords.shape[1]) > memory_bytes:
-            middle = run.n_stars // 2
-            halves = run.taking(np.arange(middle)), run.taking(np.arange(middle, run.n_stars))
-            waiting += [(half, [length, *longer]) for half in halves]
-            continue
-        run.extend(length)
-        done, run = run.judge(stopping)
-        if done is not None:
-            yield done
-        if run.n_stars:
-            waiting.append((run, longer))
+    """Sample every star of one block, whose peaks may be known already; yield stars as they finish."""
+    start = Start(block, modes or find_modes(block, grid, prior), streams)
+    for _, draws in sample_blocks([start], grid, prior, walkers, stopping, memory_bytes):
+        yield draws
 
 
 def burn_in(block: Block, grid: Grid, prior: Prior, streams: NDArray[np.uint64], walkers: int, modes: Modes) -> _Run:
@@ -224,22 +280,22 @@ class _Run:
         for step, _ in enumerate(self.steps(length - before), start=before):
             _record(self.coords, self.log_prob, step, self.chain, self.chain_log_prob)
 
-    def judge(self, stopping: Stopping) -> tuple[Draws | None, _Run]:
-        """Diagnose every star; return the finished ones, and the run of those that go on."""
+    def judge(self, stopping: Stopping) -> tuple[Draws | None, Block, _Run]:
+        """Diagnose every star; return the finished ones and their block, and the run of those that go on."""
         n_steps, chain = self.n_steps, self.chain
         # Autocorrelation is cheap to look at; the rest only where it has become short enough.
         last = n_steps >= stopping.lengths()[-1]
         taus = autocorrelation_times(chain)
         candidates = np.flatnonzero(last | (n_steps >= MIN_TAUS * taus).all(axis=1))
         if not len(candidates):
-            return None, self
+            return None, self.block, self
         flat = chain[candidates].reshape(len(candidates), chain.shape[1], -1)
         order = np.argsort(flat, axis=-1)
         convergence = diagnose(chain[candidates], order, taus[candidates])
         enough = _long_enough(convergence, n_steps, stopping)
         done = np.flatnonzero(enough | last)
         if not len(done):
-            return None, self
+            return None, self.block, self
         leaving = candidates[done]
         draws = Draws(
             stars=self.stars[leaving],
@@ -250,7 +306,7 @@ class _Run:
             convergence=convergence.take(done),
             converged=enough[done],
         )
-        return draws, self.taking(np.setdiff1d(np.arange(self.n_stars), leaving))
+        return draws, self.block.take(leaving), self.taking(np.setdiff1d(np.arange(self.n_stars), leaving))
 
     def taking(self, stars: NDArray[np.int64]) -> _Run:
         """Return the run of some of the stars, from where they are."""

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import HALF_LN_2PI, log_array
-from starkiln.inference.ensemble import Draws, Stopping, chain_bytes, sample_block
+from starkiln.inference.ensemble import Draws, Start, Stopping, chain_bytes, sample_blocks
 from starkiln.inference.posterior import LN_HEAT_K, Block
 from starkiln.inference.start import Modes, find_modes
 from starkiln.inference.streams import star_streams
@@ -28,13 +28,10 @@ class Fitted:
 
     Attributes
     ----------
-    first
-        Row of the block's first star; ``draws.stars`` counts from it.
     block
-        The data of the finished stars, in the order of ``draws``.
+        The data of the finished stars, in the order of ``draws``, whose ``stars`` are their places among all.
     """
 
-    first: int
     block: Block
     draws: Draws
 
@@ -46,18 +43,22 @@ def block_stars(settings: Settings) -> int:
 
 
 def fit(stars: Stars, model: FitModel, settings: Settings) -> Iterator[Fitted]:
-    """Sample every star, yielding those of a block that finish together."""
+    """Sample every star, yielding those that finish together."""
     stopping = Stopping(settings.sampling.effective_samples, settings.sampling.max_steps)
-    size = block_stars(settings)
     memory_bytes = MEMORY_SHARE * settings.compute.memory_per_worker_bytes
+    starts = _starts(stars, model, settings)
+    for block, draws in sample_blocks(
+        starts, model.grid, model.prior, settings.sampling.walkers, stopping, memory_bytes
+    ):
+        yield Fitted(block, draws)
+
+
+def _starts(stars: Stars, model: FitModel, settings: Settings) -> Iterator[Start]:
+    size = block_stars(settings)
     for first in range(0, len(stars), size):
         some = stars.take(slice(first, first + size))
         block, modes = start_block(some, model, settings)
-        streams = star_streams(some.ids, settings.run.seed, b"photometry")
-        for draws in sample_block(
-            block, model.grid, model.prior, streams, settings.sampling.walkers, stopping, memory_bytes, modes
-        ):
-            yield Fitted(first, block.take(draws.stars), draws)
+        yield Start(block, modes, star_streams(some.ids, settings.run.seed, b"photometry"))
 
 
 def start_block(stars: Stars, model: FitModel, settings: Settings) -> tuple[Block, Modes]:

@@ -82,7 +82,7 @@ def _fit_rows(
     chosen = stars.at(rows)
     audited = no_stars(len(model.passbands))
     for fitted in fit(chosen, model, settings):
-        places = fitted.first + fitted.draws.stars
+        places = fitted.draws.stars
         some = chosen.at(places)
         derived = derive(some, fitted.draws, model, settings, fitted.block.factor_scale)
         mode = mode_points(fitted, derived, model)
