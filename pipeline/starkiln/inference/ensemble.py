@@ -262,7 +262,9 @@ class _Run:
 
     def steps(self, n_steps: int) -> Iterator[None]:
         """Take steps of every star's ensemble, and let the caller look at each."""
-        move = BlockMove(self.streams, self.proposal, self.prior.fit_av, INDEPENDENCE, self.accepted)
+        move = BlockMove(
+            self.streams, self.proposal, self.prior.fit_av, INDEPENDENCE, self.accepted, self.walkers
+        )
         log_prob_of = log_prob_function(self.block, self.grid, self.prior)
         sampler = emcee.EnsembleSampler(*self.coords.shape, log_prob_of, moves=move, vectorize=True)
         state = emcee.State(self.coords, log_prob=self.log_prob)

@@ -15,7 +15,13 @@ from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import log
 from starkiln.inference.compile import kernel
-from starkiln.inference.proposal import Proposal, draw_independent, log_proposal_density, make_scratch
+from starkiln.inference.proposal import (
+    Proposal,
+    draw_independent,
+    log_density_there,
+    log_proposal_density,
+    make_scratch,
+)
 from starkiln.inference.streams import below, fill_uniform, uniform
 
 class BlockMove(Move):
@@ -33,6 +39,8 @@ class BlockMove(Move):
         The chance that a star's step uses the independence proposal.
     accepted
         (S,) int64: counts accepted proposals, in place.
+    walkers
+        Of each star.
 
     Notes
     -----
@@ -47,12 +55,14 @@ class BlockMove(Move):
         fit_av: bool,
         independence: float,
         accepted: NDArray[np.int64],
+        walkers: int,
     ) -> None:
         self.streams = streams
         self.proposal = proposal
         self.fit_av = fit_av
         self.independence = independence
         self.accepted = accepted
+        self.log_proposal = np.full(len(streams) * walkers, np.nan)
 
     def propose(self, model: Any, state: emcee.State) -> tuple[emcee.State, NDArray[np.bool_]]:
         """Advance every walker once; ``state`` is changed in place, as emcee's own moves do."""
@@ -60,19 +70,31 @@ class BlockMove(Move):
         accepted = np.zeros(n_walkers, dtype=np.bool_)
         trial = np.empty((n_walkers // 2, ndim))
         log_factor = np.empty(n_walkers // 2)
+        trial_log_proposal = np.empty(n_walkers // 2)
         for half in (0, 1):
             propose_half(
-                state.coords, half, self.streams, self.proposal, self.fit_av, self.independence, trial, log_factor
+                state.coords,
+                half,
+                self.streams,
+                self.proposal,
+                self.fit_av,
+                self.independence,
+                self.log_proposal,
+                trial,
+                trial_log_proposal,
+                log_factor,
             )
             # The bare function: the sampler's own wrapper converts each value through a Python list.
             log_prob = model.log_prob_fn(trial)
             accept_half(
                 state.coords,
                 state.log_prob,
+                self.log_proposal,
                 half,
                 self.streams,
                 trial,
                 log_prob,
+                trial_log_proposal,
                 log_factor,
                 accepted,
                 self.accepted,
@@ -81,14 +103,18 @@ class BlockMove(Move):
 
 
 @kernel
-def propose_half(coords, half, streams, proposal, fit_av, independence, trial, log_factor):
-    """Write the trial position and log proposal factor of half of every star's walkers."""
+def propose_half(
+    coords, half, streams, proposal, fit_av, independence, log_proposal, trial, trial_log_proposal, log_factor
+):
+    """Write the trial position and log proposal factor of half of every star's walkers.
+
+    The log density of the independence proposal is kept for every position: NaN where it is not known.
+    """
     n_stars = streams.shape[0]
     ndim = coords.shape[1]
     walkers = coords.shape[0] // n_stars
     lanes = walkers // 2
     scratch = make_scratch(proposal.centre.shape[2], lanes)
-    density = np.empty(lanes)
     for star in range(n_stars):
         stream = streams[star]
         mine = star * walkers + half * lanes
@@ -96,12 +122,15 @@ def propose_half(coords, half, streams, proposal, fit_av, independence, trial, l
         rows = slice(star * lanes, (star + 1) * lanes)
         if uniform(stream) < independence:
             draw_independent(proposal, star, fit_av, stream, scratch, trial[rows])
-            log_proposal_density(proposal, star, fit_av, trial[rows], scratch, density)
-            log_proposal_density(proposal, star, fit_av, coords[mine : mine + lanes], scratch, log_factor[rows])
+            log_density_there(proposal, star, fit_av, trial[rows], scratch, trial_log_proposal[rows])
+            known = log_proposal[mine : mine + lanes]
+            if np.isnan(known).any():
+                log_proposal_density(proposal, star, fit_av, coords[mine : mine + lanes], scratch, known)
             for i in range(lanes):
-                log_factor[star * lanes + i] -= density[i]
+                log_factor[star * lanes + i] = known[i] - trial_log_proposal[star * lanes + i]
         else:
             log_factor[rows] = 0.0
+            trial_log_proposal[rows] = np.nan
             scale = 2.38 / np.sqrt(2.0 * ndim) if uniform(stream) < 0.5 else 1.0
             for i in range(lanes):
                 a = below(stream, lanes)
@@ -115,7 +144,19 @@ def propose_half(coords, half, streams, proposal, fit_av, independence, trial, l
 
 
 @kernel
-def accept_half(coords, log_prob, half, streams, trial, trial_log_prob, log_factor, accepted, counts):
+def accept_half(
+    coords,
+    log_prob,
+    log_proposal,
+    half,
+    streams,
+    trial,
+    trial_log_prob,
+    trial_log_proposal,
+    log_factor,
+    accepted,
+    counts,
+):
     """Accept or refuse the trials of half of every star's walkers, in place."""
     n_stars = streams.shape[0]
     ndim = coords.shape[1]
@@ -133,5 +174,6 @@ def accept_half(coords, log_prob, half, streams, trial, trial_log_prob, log_fact
                 for k in range(ndim):
                     coords[walker, k] = trial[row, k]
                 log_prob[walker] = trial_log_prob[row]
+                log_proposal[walker] = trial_log_proposal[row]
                 accepted[walker] = True
                 counts[star] += 1

@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import exp, log, put
-from starkiln.inference.compile import kernel
+from starkiln.inference.compile import inlined, kernel
 from starkiln.inference.start import cholesky
 from starkiln.inference.streams import fill_normal, fill_uniform
 
@@ -94,15 +94,27 @@ def log_normalisation(n_others: int) -> float:
 
 
 class Scratch(NamedTuple):
-    """Buffers for one star's proposals, L lanes each: uniforms of heat, A_V, normals and the t's scale."""
+    """Buffers for L positions of one star: uniforms of heat, A_V, the t's scale, which t and the normals; where they are.
+
+    Attributes
+    ----------
+    knot, spot
+        (L,): the knot below, and the share of the way to the next.
+    location, middle, scale
+        (L,): of A_V's cut logistic there.
+    x, y
+        (M, L): the others standardised by the first t and by the second.
+    """
 
     uniforms: NDArray[np.float64]
     normals: NDArray[np.float64]
-    spot: NDArray[np.float64]  # where between two knots
-    knot: NDArray[np.int64]
+    knot: NDArray[np.uint64]
+    spot: NDArray[np.float64]
+    location: NDArray[np.float64]
+    middle: NDArray[np.float64]
+    scale: NDArray[np.float64]
     x: NDArray[np.float64]
     y: NDArray[np.float64]
-    weight: NDArray[np.float64]
 
 
 @kernel
@@ -112,11 +124,13 @@ def make_scratch(n_others, lanes):
     return Scratch(
         np.empty((FIRST_NORMAL + even, lanes)),
         np.empty((even, lanes)),
+        np.empty(lanes, dtype=np.uint64),
         np.empty(lanes),
-        np.empty(lanes, dtype=np.int64),
+        np.empty(lanes),
+        np.empty(lanes),
+        np.empty(lanes),
         np.empty((n_others, lanes)),
         np.empty((n_others, lanes)),
-        np.empty(lanes),
     )
 
 
@@ -130,71 +144,7 @@ def last_at_most(values, n, value):
             low = middle
         else:
             high = middle
-    return low
-
-
-@kernel
-def between(values, tangents, k, s, width):
-    """Return a cubic's value between knots k and k + 1, at the share s of their distance."""
-    rise = values[k + 1] - values[k]
-    first, second = width * tangents[k] - rise, width * tangents[k + 1] - rise
-    return values[k] + s * (rise + (1.0 - s) * ((1.0 - s) * first - s * second))
-
-
-@kernel
-def draw_independent(proposal, star, fit_av, stream, scratch, out):
-    """Write L draws (L, ndim) of a star's proposal.
-
-    The t is a normal times sqrt(8 / chi2), whose chi-square is -2 ln of a product of four uniforms.
-    """
-    lanes = out.shape[0]
-    n_others = scratch.x.shape[0]
-    even = scratch.normals.shape[0]
-    uniforms, normals, spot, knot = scratch.uniforms, scratch.normals, scratch.spot, scratch.knot
-    n = proposal.n_knots[star]
-    heat, mass, log_density = proposal.heat[star], proposal.mass[star], proposal.log_density[star]
-    av, centre, slope = proposal.av[star], proposal.centre[star], proposal.slope[star]
-    tangent, factor = proposal.tangent[star], proposal.factor[star]
-    learnt_mean, learnt_factor = proposal.learnt_mean[star], proposal.learnt_factor[star]
-    fill_uniform(stream, uniforms)
-    fill_normal(uniforms[FIRST_NORMAL:], normals)
-    for i in range(lanes):
-        k = last_at_most(mass, n, uniforms[0, i])
-        knot[i] = k
-        share = (uniforms[0, i] - mass[k]) / (mass[k + 1] - mass[k])
-        rise = log_density[k + 1] - log_density[k]
-        s = log(1.0 + share * (exp(rise) - 1.0)) / rise if abs(rise) > 1e-5 else share
-        spot[i] = min(max(s, 0.0), 1.0)
-        out[i, 0] = heat[k] + spot[i] * (heat[k + 1] - heat[k])
-    if fit_av:
-        for i in range(lanes):
-            k, s = knot[i], spot[i]
-            location = between(av[:, 0], tangent[:, 0], k, s, heat[k + 1] - heat[k])
-            scale = av[k, 2] + s * (av[k + 1, 2] - av[k, 2])
-            survival = uniforms[1, i] / (1.0 + exp(-location / scale))
-            out[i, 2] = max(location + scale * log((1.0 - survival) / survival), 0.0)
-    for i in range(lanes):
-        product = (uniforms[2, i] * uniforms[3, i]) * (uniforms[4, i] * uniforms[5, i])
-        spread = np.sqrt(TAIL / (-2.0 * log(product)))
-        for m in range(even):
-            normals[m, i] *= spread
-        if uniforms[6, i] < 0.5:
-            for m in range(n_others - 1, -1, -1):
-                value = learnt_mean[m]
-                for j in range(m + 1):
-                    value += learnt_factor[m, j] * normals[j, i]
-                normals[m, i] = value
-    for m in range(n_others):
-        axis = other_axis(m, fit_av)
-        for i in range(lanes):
-            k, s = knot[i], spot[i]
-            value = between(centre[:, m], tangent[:, 2 + m], k, s, heat[k + 1] - heat[k])
-            if fit_av:
-                offset = out[i, 2] - between(av[:, 1], tangent[:, 1], k, s, heat[k + 1] - heat[k])
-                value += (slope[k, m] + s * (slope[k + 1, m] - slope[k, m])) * offset
-            for j in range(m + 1):
-                value += (factor[k, m, j] + s * (factor[k + 1, m, j] - factor[k, m, j])) * normals[j, i]
-            out[i, axis] = value
+    return np.uint64(low)
 
 
 @kernel
@@ -204,88 +154,180 @@ def other_axis(m, fit_av):
 
 
 @kernel
-def log_proposal_density(proposal, star, fit_av, coords, scratch, out):
-    """Write the log density (L,) of a star's proposal at positions (L, ndim), less `log_normalisation`."""
-    lanes = coords.shape[0]
-    n_others = scratch.x.shape[0]
-    spot, knot, x = scratch.spot, scratch.knot, scratch.x
-    heat, log_density = proposal.heat[star], proposal.log_density[star]
-    av, tangent, factor = proposal.av[star], proposal.tangent[star], proposal.factor[star]
-    find_knots(proposal, star, coords, scratch)
+def draw_independent(proposal, star, fit_av, stream, scratch, out):
+    """Write L draws (L, ndim) of a star's proposal, and leave in ``scratch`` where they are.
+
+    The t is a normal times sqrt(8 / chi2), whose chi-square is -2 ln of a product of four uniforms.
+    """
+    uniforms, normals, knot, spot = scratch.uniforms, scratch.normals, scratch.knot, scratch.spot
+    heat, mass, log_density = proposal.heat[star], proposal.mass[star], proposal.log_density[star]
+    fill_uniform(stream, uniforms)
+    fill_normal(uniforms[FIRST_NORMAL:], normals)
+    lanes = out.shape[0]
     for i in range(lanes):
-        k, s = knot[i], spot[i]
-        out[i] = log_density[k] + s * (log_density[k + 1] - log_density[k])
-    standardise(proposal, star, fit_av, coords, scratch)
+        knot[i] = last_at_most(mass, proposal.n_knots[star], uniforms[0, i])
+    one = np.uint64(1)
     for i in range(lanes):
-        k, s = knot[i], spot[i]
-        volume = 1.0
-        for m in range(n_others):
-            volume *= factor[k, m, m] + s * (factor[k + 1, m, m] - factor[k, m, m])
-        weight = 1.0
-        if fit_av:
-            location = between(av[:, 0], tangent[:, 0], k, s, heat[k + 1] - heat[k])
-            scale = av[k, 2] + s * (av[k + 1, 2] - av[k, 2])
-            inverse = 1.0 / scale
-            tail = exp((location - coords[i, 2]) * inverse)
-            weight = tail * (1.0 + exp(-location * inverse)) * inverse / ((1.0 + tail) * (1.0 + tail))
-        scratch.weight[i] = weight / volume
-    learnt_mean, learnt_factor = proposal.learnt_mean[star], proposal.learnt_factor[star]
-    learnt_volume = 1.0
-    for m in range(n_others):
-        learnt_volume *= learnt_factor[m, m]
-    y = scratch.y
-    for i in range(lanes):
-        first, second = 0.0, 0.0
-        for m in range(n_others):
-            first += x[m, i] * x[m, i]
-            value = x[m, i] - learnt_mean[m]
-            for j in range(m):
-                value -= learnt_factor[m, j] * y[j, i]
-            y[m, i] = value / learnt_factor[m, m]
-            second += y[m, i] * y[m, i]
-        density = 0.5 * (_t_density(first, n_others) + _t_density(second, n_others) / learnt_volume)
-        out[i] += log(scratch.weight[i] * density)
+        k = knot[i]
+        share = (uniforms[0, i] - mass[k]) / (mass[k + one] - mass[k])
+        rise = log_density[k + one] - log_density[k]
+        bent = log(max(1.0 + share * (exp(rise) - 1.0), 1e-300)) / rise
+        s = min(max(bent if abs(rise) > 1e-5 else share, 0.0), 1.0)
+        spot[i] = s
+        out[i, 0] = heat[k] + s * (heat[k + one] - heat[k])
+    if fit_av:
+        _locate_av(proposal, star, scratch)
+        location, scale = scratch.location, scratch.scale
+        for i in range(lanes):
+            survival = uniforms[1, i] / (1.0 + exp(-location[i] / scale[i]))
+            out[i, 2] = max(location[i] + scale[i] * log((1.0 - survival) / survival), 0.0)
+    _draw_others(proposal, star, fit_av, scratch, out)
 
 
 @kernel
-def _t_density(distance2, n_others):
-    """Return (1 + distance2 / 8) to the power -(8 + n_others) / 2."""
-    inverse = 1.0 / (1.0 + distance2 / TAIL)
-    root = np.sqrt(inverse)
-    power = inverse * inverse
-    power *= power
-    for _ in range(n_others):
-        power *= root
-    return power
+def _locate_av(proposal, star, scratch):
+    """Write location, mean and scale of A_V's cut logistic between the knots."""
+    heat, av, tangent = proposal.heat[star], proposal.av[star], proposal.tangent[star]
+    one = np.uint64(1)
+    for i in range(scratch.spot.size):
+        k, s = scratch.knot[i], scratch.spot[i]
+        width = heat[k + one] - heat[k]
+        scratch.location[i] = _between(av[k, 0], av[k + one, 0], tangent[k, 0], tangent[k + one, 0], s, width)
+        scratch.middle[i] = _between(av[k, 1], av[k + one, 1], tangent[k, 1], tangent[k + one, 1], s, width)
+        scratch.scale[i] = av[k, 2] + s * (av[k + one, 2] - av[k, 2])
+
+
+@inlined
+def _between(here, there, tangent_here, tangent_there, s, width):
+    """Return a cubic's value at the share s of the width between two knots."""
+    rise = there - here
+    return here + s * (rise + (1.0 - s) * ((1.0 - s) * (width * tangent_here - rise) - s * (width * tangent_there - rise)))
+
+
+@kernel
+def _draw_others(proposal, star, fit_av, scratch, out):
+    uniforms, normals, x = scratch.uniforms, scratch.normals, scratch.x
+    mean, learnt = proposal.learnt_mean[star], proposal.learnt_factor[star]
+    lanes = out.shape[0]
+    for i in range(lanes):
+        product = (uniforms[2, i] * uniforms[3, i]) * (uniforms[4, i] * uniforms[5, i])
+        scratch.y[0, i] = np.sqrt(TAIL / (-2.0 * log(product)))
+    for m in range(x.shape[0] - 1, -1, -1):
+        for i in range(lanes):
+            first = normals[m, i]
+            second = 0.0
+            for j in range(m + 1):
+                second += learnt[m, j] * normals[j, i]
+            spread = scratch.y[0, i]
+            x[m, i] = spread * first if uniforms[6, i] < 0.5 else mean[m] + spread * second
+    factor = proposal.factor[star]
+    one = np.uint64(1)
+    for m in range(x.shape[0]):
+        axis = other_axis(m, fit_av)
+        _centre(proposal, star, fit_av, m, scratch, out, normals[m])
+        for i in range(lanes):
+            k, s = scratch.knot[i], scratch.spot[i]
+            value = normals[m, i]
+            for j in range(m + 1):
+                value += (factor[k, m, j] + s * (factor[k + one, m, j] - factor[k, m, j])) * x[j, i]
+            out[i, axis] = value
+
+
+@kernel
+def _centre(proposal, star, fit_av, m, scratch, coords, out):
+    """Write the place of the m-th of the other coordinates at the positions' heat and A_V."""
+    heat, tangent = proposal.heat[star], proposal.tangent[star]
+    centre, slope = proposal.centre[star], proposal.slope[star]
+    one = np.uint64(1)
+    for i in range(out.size):
+        k, s = scratch.knot[i], scratch.spot[i]
+        width = heat[k + one] - heat[k]
+        out[i] = _between(centre[k, m], centre[k + one, m], tangent[k, 2 + m], tangent[k + one, 2 + m], s, width)
+    if fit_av:
+        for i in range(out.size):
+            k, s = scratch.knot[i], scratch.spot[i]
+            out[i] += (slope[k, m] + s * (slope[k + one, m] - slope[k, m])) * (coords[i, 2] - scratch.middle[i])
+
+
+@kernel
+def log_proposal_density(proposal, star, fit_av, coords, scratch, out):
+    """Write the log density (L,) of a star's proposal at positions (L, ndim), less `log_normalisation`."""
+    find_knots(proposal, star, coords, scratch)
+    if fit_av:
+        _locate_av(proposal, star, scratch)
+    standardise(proposal, star, fit_av, coords, scratch)
+    log_density_there(proposal, star, fit_av, coords, scratch, out)
 
 
 @kernel
 def find_knots(proposal, star, coords, scratch):
     """Write between which knots each position lies, and where."""
     heat, n = proposal.heat[star], proposal.n_knots[star]
+    one = np.uint64(1)
     for i in range(coords.shape[0]):
-        k = last_at_most(heat, n, coords[i, 0])
-        scratch.knot[i] = k
-        scratch.spot[i] = min(max((coords[i, 0] - heat[k]) / (heat[k + 1] - heat[k]), 0.0), 1.0)
+        scratch.knot[i] = last_at_most(heat, n, coords[i, 0])
+    for i in range(coords.shape[0]):
+        k = scratch.knot[i]
+        scratch.spot[i] = min(max((coords[i, 0] - heat[k]) / (heat[k + one] - heat[k]), 0.0), 1.0)
 
 
 @kernel
 def standardise(proposal, star, fit_av, coords, scratch):
-    """Write the others' standardised coordinates to ``scratch.x``, with ``scratch.knot`` and ``spot`` known."""
-    spot, knot, x = scratch.spot, scratch.knot, scratch.x
-    heat, av, tangent = proposal.heat[star], proposal.av[star], proposal.tangent[star]
-    centre, slope, factor = proposal.centre[star], proposal.slope[star], proposal.factor[star]
+    """Write the others' standardised coordinates to ``scratch.x``, with all else in ``scratch`` known."""
+    x, factor = scratch.x, proposal.factor[star]
+    one = np.uint64(1)
     for m in range(x.shape[0]):
         axis = other_axis(m, fit_av)
+        _centre(proposal, star, fit_av, m, scratch, coords, scratch.y[m])
         for i in range(x.shape[1]):
-            k, s = knot[i], spot[i]
-            value = coords[i, axis] - between(centre[:, m], tangent[:, 2 + m], k, s, heat[k + 1] - heat[k])
-            if fit_av:
-                offset = coords[i, 2] - between(av[:, 1], tangent[:, 1], k, s, heat[k + 1] - heat[k])
-                value -= (slope[k, m] + s * (slope[k + 1, m] - slope[k, m])) * offset
+            k, s = scratch.knot[i], scratch.spot[i]
+            value = coords[i, axis] - scratch.y[m, i]
             for j in range(m):
-                value -= (factor[k, m, j] + s * (factor[k + 1, m, j] - factor[k, m, j])) * x[j, i]
-            x[m, i] = value / (factor[k, m, m] + s * (factor[k + 1, m, m] - factor[k, m, m]))
+                value -= (factor[k, m, j] + s * (factor[k + one, m, j] - factor[k, m, j])) * x[j, i]
+            x[m, i] = value / (factor[k, m, m] + s * (factor[k + one, m, m] - factor[k, m, m]))
+
+
+@kernel
+def log_density_there(proposal, star, fit_av, coords, scratch, out):
+    """Write the log density as `log_proposal_density` does, with ``scratch`` known."""
+    x, y, knot, spot = scratch.x, scratch.y, scratch.knot, scratch.spot
+    mean, learnt = proposal.learnt_mean[star], proposal.learnt_factor[star]
+    log_density, factor = proposal.log_density[star], proposal.factor[star]
+    n_others, lanes = x.shape
+    volume = 1.0
+    for m in range(n_others):
+        volume *= learnt[m, m]
+        for i in range(lanes):
+            value = x[m, i] - mean[m]
+            for j in range(m):
+                value -= learnt[m, j] * y[j, i]
+            y[m, i] = value / learnt[m, m]
+    one = np.uint64(1)
+    for i in range(lanes):
+        k, s = knot[i], spot[i]
+        first, second, density = 0.0, 0.0, 1.0
+        for m in range(n_others):
+            first += x[m, i] * x[m, i]
+            second += y[m, i] * y[m, i]
+            density *= factor[k, m, m] + s * (factor[k + one, m, m] - factor[k, m, m])
+        density = 0.5 * (_t_density(first, n_others) + _t_density(second, n_others) / volume) / density
+        if fit_av:
+            inverse = 1.0 / scratch.scale[i]
+            tail = exp((scratch.location[i] - coords[i, 2]) * inverse)
+            cut = 1.0 + exp(-scratch.location[i] * inverse)
+            density *= tail * cut * inverse / ((1.0 + tail) * (1.0 + tail))
+        out[i] = log_density[k] + s * (log_density[k + one] - log_density[k]) + log(max(density, 1e-300))
+
+
+@inlined
+def _t_density(distance2, n_others):
+    """Return (1 + distance2 / 8) to the power -(8 + n_others) / 2."""
+    inverse = 1.0 / (1.0 + distance2 / TAIL)
+    root = np.sqrt(inverse)
+    power = (inverse * inverse) * (inverse * inverse)
+    for _ in range(n_others):
+        power *= root
+    return power
 
 
 @kernel
@@ -302,6 +344,8 @@ def learn_others(window, fit_av, proposal):
             for w in range(walkers):
                 put(window[t, star * walkers + w], coords[t * walkers + w])
         find_knots(proposal, star, coords, scratch)
+        if fit_av:
+            _locate_av(proposal, star, scratch)
         standardise(proposal, star, fit_av, coords, scratch)
         for m in range(n_others):
             total = 0.0

@@ -67,9 +67,11 @@ def start_block(stars: Stars, model: FitModel, settings: Settings) -> tuple[Bloc
     modes = find_modes(block, model.grid, model.prior)
     if model.departures is not None:
         scale = factor_scale(stars, modes)
-        if (scale > 1.0).any():
+        giants = np.flatnonzero(scale > 1.0)
+        if len(giants):
             block = block._replace(factor_scale=scale)
-            modes = find_modes(block, model.grid, model.prior)
+            for mine, theirs in zip(modes, find_modes(block.take(giants), model.grid, model.prior), strict=True):
+                mine[giants] = theirs
     return block, modes
 
 
