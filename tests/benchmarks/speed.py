@@ -28,8 +28,8 @@ from typing import Any
 
 sys.path.insert(0, str(Path(__file__).parents[1]))
 
-from speed import costs, end_to_end, floor, memory, samplers, scaling, startup, workers
-from speed.common import Suite
+from benchmarks.speed import costs, end_to_end, floor, memory, samplers, scaling, startup, workers
+from benchmarks.speed.common import Suite
 
 SECTIONS = {
     "samplers": samplers.measure,
@@ -49,8 +49,10 @@ def options() -> argparse.Namespace:
     parser.add_argument("--stars", type=int, default=128, help="stars of a measurement")
     parser.add_argument("--out", type=Path, default=Path("runs/speed"), help="where the results go")
     parser.add_argument("--only", nargs="+", choices=SECTIONS, default=list(SECTIONS), metavar="NAME")
-    parser.add_argument("--sizes", nargs="*", type=int, default=[1_000, 10_000], metavar="ROWS", help="runs to plot")
-    parser.add_argument("--run", nargs="*", type=Path, default=[], metavar="RUN_DIR", help="earlier runs to plot")
+    parser.add_argument("--sizes", nargs="*", type=int, default=[1_000, 5_000], metavar="ROWS", help="runs to plot")
+    parser.add_argument(
+        "--run", nargs="*", type=Path, default=[], metavar="RUN_DIR", help="earlier runs of that survey"
+    )
     return parser.parse_args()
 
 

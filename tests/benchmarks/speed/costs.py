@@ -8,9 +8,9 @@ from __future__ import annotations
 import time
 from typing import Any
 
+from benchmarks.speed.cases import simulated
+from benchmarks.speed.common import Row, Suite, one_core, print_rows
 from simulated import THIRTEEN_BANDS
-from speed.cases import simulated
-from speed.common import Row, Suite, one_core, print_rows
 from starkiln.stages.process import process_part
 from starkiln.stages.warm_up import warm_up
 

@@ -19,9 +19,9 @@ from typing import Any
 import numpy as np
 import pyarrow.parquet as pq
 
-from speed.cases import Case, make_case
-from speed.common import Row, Suite, one_core, print_rows
-from speed.samplers import KERNEL_LOOP, OURS, PLAIN_LOOP, contenders, rows_of
+from benchmarks.speed.cases import Case, make_case
+from benchmarks.speed.common import Row, Suite, one_core, print_rows
+from benchmarks.speed.samplers import KERNEL_LOOP, OURS, PLAIN_LOOP, contenders, rows_of
 from starkiln.engine.job import Job, fitting_stages
 from starkiln.engine.records import Guard, Unit
 from starkiln.tables.source import open_source

@@ -8,9 +8,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from speed.cases import CASES, SEED, Case, make_case
-from speed.common import Row, Suite, one_core, print_rows
-from speed.samplers import WALKERS, block_ensemble
+from benchmarks.speed.cases import CASES, SEED, Case, make_case
+from benchmarks.speed.common import Row, Suite, one_core, print_rows
+from benchmarks.speed.samplers import WALKERS, block_ensemble
 from starkiln.inference.ensemble import Stopping, log_prob_function, sample_block
 from starkiln.inference.posterior import HEAT_K
 from starkiln.inference.streams import star_streams

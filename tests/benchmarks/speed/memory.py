@@ -1,6 +1,6 @@
 """Peak memory of one worker against the rows of a part and the number of bands, each in a process of its own.
 
-    python tests/benchmarks/speed/memory.py ROWS BANDS FOLDER
+    PYTHONPATH=tests python -m benchmarks.speed.memory ROWS BANDS FOLDER
 
 does one part with short chains, and prints its peak memory as JSON.
 """
@@ -8,19 +8,19 @@ does one part with short chains, and prints its peak memory as JSON.
 from __future__ import annotations
 
 import json
+import os
 import resource
 import subprocess
 import sys
 from pathlib import Path
 from typing import Any
 
-if __name__ == "__main__":
-    sys.path[:0] = [str(Path(__file__).parents[2]), str(Path(__file__).parents[1])]
+from benchmarks.speed.cases import simulated
+from benchmarks.speed.common import Row, Suite, print_rows
+from benchmarks.speed.costs import bands_of
+from benchmarks.speed.end_to_end import fit_part, make_job
 
-from speed.cases import simulated
-from speed.common import Row, Suite, print_rows
-from speed.costs import bands_of
-
+TESTS = Path(__file__).parents[2]
 ROWS = (500, 2_500, 10_000)
 BANDS = (3, 10, 20)
 SHORT = {"max_steps": 64}
@@ -28,8 +28,6 @@ SHORT = {"max_steps": 64}
 
 def one_part(rows: int, bands: int, folder: Path) -> int:
     """Fit a part of rows and return the peak memory of this process in bytes."""
-    from speed.end_to_end import fit_part, make_job
-
     case = simulated(rows, folder, "smooth", bands_of(bands), sampling=SHORT)
     fit_part(make_job(case, folder / "part"), folder)
     return 1024 * resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
@@ -38,9 +36,12 @@ def one_part(rows: int, bands: int, folder: Path) -> int:
 def peak(suite: Suite, rows: int, bands: int) -> Row:
     """Return the peak memory of a process that does one part."""
     folder = suite.room(f"memory-{rows}-{bands}")
-    command = [sys.executable, __file__, str(rows), str(bands), str(folder)]
-    said = subprocess.run(command, capture_output=True, text=True, check=True).stdout
-    return {"rows": rows, "bands": bands, "peak_mb": json.loads(said)["bytes"] / 1e6}
+    command = [sys.executable, "-m", __spec__.name, str(rows), str(bands), str(folder)]
+    paths = os.pathsep.join(filter(None, [str(TESTS), os.environ.get("PYTHONPATH")]))
+    said = subprocess.run(
+        command, stdout=subprocess.PIPE, text=True, check=True, env=os.environ | {"PYTHONPATH": paths}
+    )
+    return {"rows": rows, "bands": bands, "peak_mb": json.loads(said.stdout)["bytes"] / 1e6}
 
 
 def measure(suite: Suite) -> dict[str, Any]:

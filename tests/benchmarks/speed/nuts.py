@@ -9,9 +9,9 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from speed.common import Clock
-from speed.plain import StarData, bounds, check_jax, free, jax_free_log_density, refuse_unknown
-from speed.plain import natural as natural_of
+from benchmarks.speed.common import Clock
+from benchmarks.speed.plain import StarData, bounds, check_jax, free, jax_free_log_density, refuse_unknown
+from benchmarks.speed.plain import natural as natural_of
 from starkiln.inference.posterior import Block, Grid, Prior
 
 NAME = "blackjax NUTS"

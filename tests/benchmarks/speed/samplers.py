@@ -22,10 +22,10 @@ import emcee
 import numpy as np
 from numpy.typing import NDArray
 
-from speed import nuts
-from speed.cases import CASES, SEED, Case, make_case
-from speed.common import Clock, Row, Suite, one_core, print_rows
-from speed.plain import PlainPosterior, check_plain, natural
+from benchmarks.speed import nuts
+from benchmarks.speed.cases import CASES, SEED, Case, make_case
+from benchmarks.speed.common import Clock, Row, Suite, one_core, print_rows
+from benchmarks.speed.plain import PlainPosterior, check_plain, natural
 from starkiln.inference.ensemble import Stopping, log_prob_function, sample_block
 from starkiln.inference.posterior import Block, n_parameters
 from starkiln.inference.start import find_modes

@@ -6,15 +6,18 @@ from datetime import datetime
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
-from speed.cases import make_case, tamarin_settings, write_tamarin
-from speed.common import Row, Suite, fit_survey, print_rows, run_facts
-from speed.end_to_end import stock_loops
+from benchmarks.speed.cases import make_case, tamarin_settings, write_tamarin
+from benchmarks.speed.common import Row, Suite, fit_survey, print_rows, run_facts
+from benchmarks.speed.end_to_end import stock_loops
+from benchmarks.speed.samplers import KERNEL_LOOP, PLAIN_LOOP
 
 STARS_SHOWN = (1e3, 1e9)
 FEW, MANY = 2, 1_000
-LOOP_COLOURS = ("#8a8a8a", "#b08d57")
+OUR_COLOUR, LOOP_COLOURS = "#1f3b5c", ("#8a8a8a", "#b08d57")
+LOOP_LABELS = {
+    KERNEL_LOOP: "stock emcee on our kernel, at the same ESS",
+    PLAIN_LOOP: "stock emcee on NumPy, at the same ESS",
+}
 
 
 def measured(suite: Suite, size: int) -> Row:
@@ -63,24 +66,34 @@ def draw(scaling: dict[str, Any], path: Path) -> None:
     import matplotlib.pyplot as plt
 
     figure, axes = plt.subplots(figsize=(7.6, 4.8), layout="constrained")
-    stars = np.array(STARS_SHOWN)
-    largest = max(scaling["rows"], key=lambda row: row["stars"])
-    ours = largest["stars"] / largest["core_s"]
+    low, high = STARS_SHOWN
     for (name, rates), colour in zip(scaling["loops"].items(), LOOP_COLOURS, strict=False):
-        label = f"{name}, a star at a time, at the same ESS"
-        axes.plot(stars, stars / rates["same_ess"], color=colour, lw=1.2, ls="--", label=label)
-    axes.plot(stars, stars / ours, color="#1f3b5c", lw=1.2, label=f"starkiln at {ours:.0f} stars per core-second")
-    points = [(row["stars"], row["core_s"]) for row in scaling["rows"]]
-    axes.plot(*zip(*points, strict=True), "o", color="#1f3b5c", ms=5, label="starkiln run, measured")
-    axes.set(xscale="log", yscale="log", xlim=STARS_SHOWN, xlabel="stars", ylabel="core-seconds")
+        rate = rates["same_ess"]
+        label = f"{LOOP_LABELS.get(name, name)}: {rate:.2g} stars per core-second"
+        axes.plot([low, high], [low / rate, high / rate], color=colour, lw=1.2, ls="--", label=label)
+    points = sorted((row["stars"], row["core_s"]) for row in scaling["rows"])
+    most, cost_s = points[-1]
+    axes.plot(*zip(*points, strict=True), "o-", color=OUR_COLOUR, ms=5, lw=1.6, label="starkiln run, measured")
+    label = f"at its rate with {most:,} stars: {most / cost_s:.3g} stars per core-second"
+    axes.plot([most, high], [cost_s, cost_s * high / most], color=OUR_COLOUR, lw=1.0, ls=":", label=label)
+    axes.set(xscale="log", yscale="log", xlim=(0.8 * min(low, points[0][0]), high), ylabel="core-seconds")
+    axes.set_xlabel("stars of ten bands, A$_V$ and z$_1$ fitted")
     axes.grid(color="#e4e4e4", lw=0.6)
     axes.set_axisbelow(True)
+    axes.minorticks_off()
     axes.spines["top"].set_visible(False)
-    for place, cores in ((1.0, FEW), (1.15, MANY)):
-        hours = axes.secondary_yaxis(
-            place, functions=(lambda s, c=cores: s / (3600.0 * c), lambda h, c=cores: 3600.0 * c * h)
-        )
-        hours.set_ylabel(f"hours on {cores:,} cores")
+    for place, cores in ((1.0, FEW), (1.16, MANY)):
+        _add_hours(axes, place, cores)
     axes.legend(frameon=False, fontsize=8, loc="upper left")
     figure.savefig(path, dpi=160)
     plt.close(figure)
+
+
+def _add_hours(axes: Any, place: float, cores: int) -> None:
+    from matplotlib.ticker import LogLocator
+
+    of_hour = 3600.0 * cores
+    hours = axes.secondary_yaxis(place, functions=(lambda core_s: core_s / of_hour, lambda hour: hour * of_hour))
+    hours.yaxis.set_major_locator(LogLocator(numticks=20))
+    hours.minorticks_off()
+    hours.set_ylabel(f"hours on {cores:,} cores")

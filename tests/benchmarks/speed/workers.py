@@ -4,8 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
-from speed.cases import tamarin_settings, write_tamarin
-from speed.common import Row, Suite, fit_survey, print_rows
+from benchmarks.speed.cases import tamarin_settings, write_tamarin
+from benchmarks.speed.common import Row, Suite, fit_survey, print_rows
 
 ROWS_PER_PART = 250
 
