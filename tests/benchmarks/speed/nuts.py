@@ -91,10 +91,9 @@ def _off_the_bounds(theta: NDArray[np.float64], prior: Prior) -> NDArray[np.floa
 
 
 class Frame(NamedTuple):
-    """Coordinates of S stars in which a posterior is nearly round: the logit of A_V, and the others less their slope.
+    """Coordinates of S stars in which a posterior is nearly round: those of A_V, and the others less their slope in it.
 
-    In unconstrained coordinates the ridge of temperature against dust is bent, since it is straight in A_V itself.
-    Taking it out by a slope in A_V leaves NUTS steps some ten times as long.
+    The ridge of temperature against dust is straight in A_V itself, which is mirrored at none in the free coordinates.
 
     Attributes
     ----------
@@ -104,7 +103,7 @@ class Frame(NamedTuple):
         (S, ndim - 1), the same, and (S, ndim - 1, ndim - 1): mean of the others at the mean A_V, their change with
         A_V, and the Cholesky factor of what is left.
     av
-        (S, 3): mean A_V, mean and scale of its logit.
+        (S, 3): mean A_V, mean and scale of its coordinate.
     """
 
     begin: Any
@@ -116,29 +115,28 @@ class Frame(NamedTuple):
     @classmethod
     def of(cls, unbound: NDArray[np.float64], prior: Prior) -> Frame:
         """Return the frame of walkers (S, n, ndim) in unconstrained coordinates."""
-        logit, others = unbound[..., 2], np.delete(unbound, 2, axis=-1)
-        av = prior.av_max / (1.0 + np.exp(-logit))
+        dust, others = unbound[..., 2], np.delete(unbound, 2, axis=-1)
+        av = prior.av_max * np.abs(np.tanh(0.5 * dust))
         mean, centre = av.mean(axis=1), others.mean(axis=1)
         offset = av - mean[:, None]
         slope = (offset[..., None] * others).sum(axis=1) / (offset**2).sum(axis=1)[:, None]
         left = others - centre[:, None] - offset[..., None] * slope[:, None]
         factor = np.stack([np.linalg.cholesky(np.cov(star.T)) for star in left])
         white = np.stack([np.linalg.solve(f, star.T).T for f, star in zip(factor, left, strict=True)])
-        middle, scale = logit.mean(axis=1), logit.std(axis=1)
-        white = np.insert(white, 2, (logit - middle[:, None]) / scale[:, None], axis=-1)
+        middle, scale = dust.mean(axis=1), dust.std(axis=1)
+        white = np.insert(white, 2, (dust - middle[:, None]) / scale[:, None], axis=-1)
         return cls(white[:, :CHAINS], centre, slope, factor, np.stack([mean, middle, scale], axis=1))
 
 
 def unbent(white: Any, frame: Frame, prior: Prior) -> Any:
     """Return the unconstrained coordinates of a position in the frame of a star, for JAX; the Jacobian is constant."""
-    import jax
     import jax.numpy as jnp
 
     mean, middle, scale = frame.av
-    logit = middle + scale * white[2]
-    av = prior.av_max * jax.nn.sigmoid(logit)
+    dust = middle + scale * white[2]
+    av = prior.av_max * jnp.abs(jnp.tanh(0.5 * dust))
     others = frame.centre + frame.slope * (av - mean) + frame.factor @ jnp.delete(white, 2)
-    return jnp.concatenate([others[:2], logit[None], others[2:]])
+    return jnp.concatenate([others[:2], dust[None], others[2:]])
 
 
 def _steps(grid: Grid, prior: Prior) -> tuple[Any, Any]:

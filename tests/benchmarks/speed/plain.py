@@ -167,9 +167,14 @@ def bounds(prior: Prior) -> tuple[FloatArray, FloatArray]:
 
 
 def free(theta: FloatArray, prior: Prior) -> FloatArray:
-    """Return unconstrained coordinates: logits of where the first three stand between their bounds, and z."""
+    """Return unconstrained coordinates: logits of where ln T and ln Omega stand between their bounds, A_V's, and z.
+
+    Posteriors pile up at an A_V of none, where a logit would draw them out into a tail. A_V is instead the highest one
+    times ``|tanh(v / 2)|``: as good as straight in v, and mirrored at zero without a step of the density.
+    """
     low, high = bounds(prior)
     share = (theta[..., :3] - low) / (high - low)
+    share[..., 2] = 0.5 * (1.0 + share[..., 2])
     return np.concatenate([np.log(share) - np.log1p(-share), theta[..., 3:]], axis=-1)
 
 
@@ -182,9 +187,10 @@ def jax_free_log_density(grid: Grid, prior: Prior) -> Callable[[Any, StarData], 
     low, high = (jnp.asarray(edge) for edge in bounds(prior))
 
     def of_free(point: Any, star: StarData) -> tuple[Any, Any, Any]:
-        inside = low + (high - low) * jax.nn.sigmoid(point[:3])
-        theta = jnp.concatenate([inside, point[3:]])
-        steps = jnp.log(high - low) + jax.nn.log_sigmoid(point[:3]) + jax.nn.log_sigmoid(-point[:3])
+        share = jax.nn.sigmoid(point[:3]).at[2].set(jnp.abs(jnp.tanh(0.5 * point[2])))
+        theta = jnp.concatenate([low + (high - low) * share, point[3:]])
+        width = (high - low) * jnp.array([1.0, 1.0, 2.0])
+        steps = jnp.log(width) + jax.nn.log_sigmoid(point[:3]) + jax.nn.log_sigmoid(-point[:3])
         return log_density(theta, star) + jnp.sum(steps), theta, jnp.sum(steps)
 
     return of_free
