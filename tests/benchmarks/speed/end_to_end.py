@@ -202,7 +202,7 @@ def measure(suite: Suite) -> dict[str, Any]:
     rows = []
     for name in ("blackbody", "tamarin"):
         folder = suite.room(f"end-to-end-{name}")
-        case = make_case(name, 4 * suite.stars, folder)
+        case = make_case(name, suite.stars, folder)
         with one_core():
             row = shares(case, folder)
         row["loops"] = stock_loops(suite, case)

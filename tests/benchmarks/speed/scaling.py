@@ -35,16 +35,21 @@ def measured(suite: Suite, size: int) -> Row:
 
 
 def earlier(run_dir: Path) -> Row:
-    """Return what an earlier run cost by its run.json; core-seconds are its workers' wall seconds, idle ones too."""
+    """Return what an earlier run cost by its run.json.
+
+    Core-seconds are wall seconds: those that its workers were busy, of all parts, and of its last start all but the
+    fitting.
+    """
     facts = run_facts(run_dir)
     wall_s = (datetime.fromisoformat(facts["end"]) - datetime.fromisoformat(facts["start"])).total_seconds()
-    workers, work_s = max(facts["workers"], 1), facts["seconds"]["wall"].get("work", 0.0)
+    seconds = facts["seconds"]
+    busy_s = sum(seconds["summed_over_workers"].values())
     return {
         "run": str(facts["name"]),
         "stars": facts["counts"]["catalogue"],
-        "core_s": wall_s + (workers - 1) * work_s,
+        "core_s": busy_s + wall_s - seconds["wall"].get("work", 0.0),
         "wall_s": wall_s,
-        "workers": workers,
+        "workers": max(facts["workers"], 1),
     }
 
 
