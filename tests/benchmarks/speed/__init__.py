@@ -1,0 +1,1 @@
+"""The parts of the benchmark suite of speed; ../speed.py is its entry."""
