@@ -214,7 +214,7 @@ def _first_walkers(
 def _draw_walkers(proposal, fit_av, streams, coords):
     n_stars = streams.shape[0]
     walkers = coords.shape[0] // n_stars
-    scratch = make_scratch(proposal.centre.shape[2], walkers)
+    scratch = make_scratch(proposal.centre.shape[1], walkers)
     for star in range(n_stars):
         draw_independent(proposal, star, fit_av, streams[star], scratch, coords[star * walkers : (star + 1) * walkers])
 

@@ -53,7 +53,7 @@ def importance_draws(
     log_density = np.empty((n_stars, n_draws))
     _draw(run.proposal, prior.fit_av, run.streams, coords, log_density)
     log_prob = log_prob_function(block, grid, prior)(coords.reshape(-1, ndim)).reshape(n_stars, n_draws)
-    log_density += log_normalisation(run.proposal.centre.shape[2])
+    log_density += log_normalisation(run.proposal.centre.shape[1])
     log_weight = log_prob - log_density - HALF_LN_2PI * len(grid.loading)
     return WeightedDraws(coords, log_weight)
 
@@ -61,7 +61,7 @@ def importance_draws(
 @kernel
 def _draw(proposal, fit_av, streams, coords, log_density):
     n_stars, n_draws, ndim = coords.shape
-    scratch = make_scratch(proposal.centre.shape[2], n_draws)
+    scratch = make_scratch(proposal.centre.shape[1], n_draws)
     for star in range(n_stars):
         draw_independent(proposal, star, fit_av, streams[star], scratch, coords[star])
         log_proposal_density(proposal, star, fit_av, coords[star], scratch, log_density[star])

@@ -46,7 +46,7 @@ def fit_proposal(block: Block, grid: Grid, prior: Prior, modes: Modes) -> Propos
 
 @kernel
 def _fit_all(block, grid, prior, modes, proposal):
-    others = proposal.centre.shape[2]
+    others = proposal.centre.shape[1]
     knots = Knots(
         np.empty(MAX_KNOTS),
         np.empty(MAX_KNOTS),
@@ -302,9 +302,9 @@ def _lay_out(knots, n, prior, proposal, star):
     n = count + 1
     proposal.n_knots[star] = n
     for m in range(2):
-        _tangents(heat, proposal.av[star, :, m], n, proposal.tangent[star, :, m])
-    for m in range(proposal.centre.shape[2]):
-        _tangents(heat, proposal.centre[star, :, m], n, proposal.tangent[star, :, 2 + m])
+        _tangents(heat, proposal.av[star, m], n, proposal.tangent[star, m])
+    for m in range(proposal.centre.shape[1]):
+        _tangents(heat, proposal.centre[star, m], n, proposal.tangent[star, 2 + m])
     normalise(heat, log_density, mass, n)
 
 
@@ -324,11 +324,13 @@ def _ascending(values, n):
 def _copy_knot(knots, source, best, proposal, star, target):
     proposal.heat[star, target] = knots.heat[source]
     proposal.log_density[star, target] = max(knots.log_marginal[source] - best, -DEPTH - BEYOND)
-    put(knots.av[source], proposal.av[star, target])
-    put(knots.centre[source], proposal.centre[star, target])
-    put(knots.slope[source], proposal.slope[star, target])
+    for m in range(3):
+        proposal.av[star, m, target] = knots.av[source, m]
     for m in range(knots.factor.shape[1]):
-        put(knots.factor[source, m], proposal.factor[star, target, m])
+        proposal.centre[star, m, target] = knots.centre[source, m]
+        proposal.slope[star, m, target] = knots.slope[source, m]
+        for j in range(m + 1):
+            proposal.factor[star, m, j, target] = knots.factor[source, m, j]
 
 
 @kernel

@@ -114,7 +114,7 @@ def propose_half(
     ndim = coords.shape[1]
     walkers = coords.shape[0] // n_stars
     lanes = walkers // 2
-    scratch = make_scratch(proposal.centre.shape[2], lanes)
+    scratch = make_scratch(proposal.centre.shape[1], lanes)
     for star in range(n_stars):
         stream = streams[star]
         mine = star * walkers + half * lanes

@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import exp, log, put
-from starkiln.inference.compile import inlined, kernel
+from starkiln.inference.compile import kernel
 from starkiln.inference.start import cholesky
 from starkiln.inference.streams import fill_normal, fill_uniform
 
@@ -39,14 +39,14 @@ class Proposal(NamedTuple):
     mass
         (S, K): cumulative, from 0 to 1.
     av
-        (S, K, 3): location, mean and scale of A_V's cut logistic in magnitudes.
+        (S, 3, K): location, mean and scale of A_V's cut logistic in magnitudes.
     centre, slope
-        (S, K, M): means of the other coordinates at the mean A_V, and their change with A_V: glow first, then the rest.
+        (S, M, K): means of the other coordinates at the mean A_V, and their change with A_V: glow first, then the rest.
     tangent
-        (S, K, 2 + M): derivatives with heat of A_V's location and mean and of the centres, which follow cubics between
+        (S, 2 + M, K): derivatives with heat of A_V's location and mean and of the centres, which follow cubics between
         knots, as the ridge of a posterior bends; all else is linear.
     factor
-        (S, K, M, M): lower Cholesky factors of their scatter.
+        (S, M, M, K): lower Cholesky factors of their scatter.
     learnt_mean, learnt_factor
         (S, M) and (S, M, M): the second t's place and Cholesky factor, in units of the first's scatter.
     """
@@ -72,17 +72,19 @@ class Proposal(NamedTuple):
 def empty_proposal(n_stars: int, n_knots: int, ndim: int, fit_av: bool) -> Proposal:
     """Return the arrays of a proposal, to be filled."""
     others = ndim - 1 - fit_av
-    shape = (n_stars, n_knots)
+    def zeros(*shape: int) -> NDArray[np.float64]:
+        return np.zeros((n_stars, *shape, n_knots))
+
     return Proposal(
         np.zeros(n_stars, np.int64),
-        np.zeros(shape),
-        np.zeros(shape),
-        np.zeros(shape),
-        np.zeros((*shape, 3)),
-        np.zeros((*shape, others)),
-        np.zeros((*shape, others)),
-        np.zeros((*shape, 2 + others)),
-        np.zeros((*shape, others, others)),
+        zeros(),
+        zeros(),
+        zeros(),
+        zeros(3),
+        zeros(others),
+        zeros(others),
+        zeros(2 + others),
+        zeros(others, others),
         np.zeros((n_stars, others)),
         np.broadcast_to(np.eye(others), (n_stars, others, others)).copy(),
     )
@@ -96,25 +98,31 @@ def log_normalisation(n_others: int) -> float:
 class Scratch(NamedTuple):
     """Buffers for L positions of one star: uniforms of heat, A_V, the t's scale, which t and the normals; where they are.
 
+    Loops run over positions within loops over coordinates, few arrays at a time, so that they fill vector lanes.
+
     Attributes
     ----------
-    knot, spot
-        (L,): the knot below, and the share of the way to the next.
+    knot, spot, width
+        (L,): the knot below, the share of the way to the next, and how far that is.
     location, middle, scale
         (L,): of A_V's cut logistic there.
     x, y
         (M, L): the others standardised by the first t and by the second.
+    rooms
+        (3, L), for whatever is needed.
     """
 
     uniforms: NDArray[np.float64]
     normals: NDArray[np.float64]
     knot: NDArray[np.uint64]
     spot: NDArray[np.float64]
+    width: NDArray[np.float64]
     location: NDArray[np.float64]
     middle: NDArray[np.float64]
     scale: NDArray[np.float64]
     x: NDArray[np.float64]
     y: NDArray[np.float64]
+    rooms: NDArray[np.float64]
 
 
 @kernel
@@ -129,22 +137,11 @@ def make_scratch(n_others, lanes):
         np.empty(lanes),
         np.empty(lanes),
         np.empty(lanes),
+        np.empty(lanes),
         np.empty((n_others, lanes)),
         np.empty((n_others, lanes)),
+        np.empty((3, lanes)),
     )
-
-
-@kernel
-def last_at_most(values, n, value):
-    """Return the last of the first n - 1 ascending values that is not above a value."""
-    low, high = 0, n - 1
-    while high - low > 1:
-        middle = (low + high) >> 1
-        if values[middle] <= value:
-            low = middle
-        else:
-            high = middle
-    return np.uint64(low)
 
 
 @kernel
@@ -154,180 +151,236 @@ def other_axis(m, fit_av):
 
 
 @kernel
-def draw_independent(proposal, star, fit_av, stream, scratch, out):
-    """Write L draws (L, ndim) of a star's proposal, and leave in ``scratch`` where they are.
+def find_last_at_most(values, n, wanted, out):
+    """Write for each value wanted the last of the first n - 1 ascending values that is not above it."""
+    top = np.uint64(n - 2)
+    out[:] = np.uint64(0)
+    step = np.uint64(1)
+    while step < top:
+        step *= np.uint64(2)
+    while step > 0:
+        for i in range(out.size):
+            place = min(out[i] + step, top)
+            out[i] = place if values[place] <= wanted[i] else out[i]
+        step >>= np.uint64(1)
 
-    The t is a normal times sqrt(8 / chi2), whose chi-square is -2 ln of a product of four uniforms.
-    """
-    uniforms, normals, knot, spot = scratch.uniforms, scratch.normals, scratch.knot, scratch.spot
-    heat, mass, log_density = proposal.heat[star], proposal.mass[star], proposal.log_density[star]
-    fill_uniform(stream, uniforms)
-    fill_normal(uniforms[FIRST_NORMAL:], normals)
-    lanes = out.shape[0]
-    for i in range(lanes):
-        knot[i] = last_at_most(mass, proposal.n_knots[star], uniforms[0, i])
+
+@kernel
+def _linear(values, knot, spot, out):
+    """Write what is linear between knots (K,)."""
     one = np.uint64(1)
-    for i in range(lanes):
+    for i in range(out.size):
         k = knot[i]
-        share = (uniforms[0, i] - mass[k]) / (mass[k + one] - mass[k])
-        rise = log_density[k + one] - log_density[k]
-        bent = log(max(1.0 + share * (exp(rise) - 1.0), 1e-300)) / rise
-        s = min(max(bent if abs(rise) > 1e-5 else share, 0.0), 1.0)
-        spot[i] = s
-        out[i, 0] = heat[k] + s * (heat[k + one] - heat[k])
+        out[i] = values[k] + spot[i] * (values[k + one] - values[k])
+
+
+@kernel
+def _cubic(values, tangents, scratch, out):
+    """Write what is cubic between knots (K,)."""
+    knot, spot, width, bend = scratch.knot, scratch.spot, scratch.width, scratch.rooms[2]
+    one = np.uint64(1)
+    for i in range(out.size):
+        k, s = knot[i], spot[i]
+        bend[i] = ((1.0 - s) * tangents[k] - s * tangents[k + one]) * width[i]
+    for i in range(out.size):
+        k, s = knot[i], spot[i]
+        rise = values[k + one] - values[k]
+        out[i] = values[k] + s * (rise + (1.0 - s) * (bend[i] - (1.0 - 2.0 * s) * rise))
+
+
+@kernel
+def draw_independent(proposal, star, fit_av, stream, scratch, out):
+    """Write L draws (L, ndim) of a star's proposal, and leave in ``scratch`` where they are."""
+    fill_uniform(stream, scratch.uniforms)
+    fill_normal(scratch.uniforms[FIRST_NORMAL:], scratch.normals)
+    _draw_heat(proposal, star, scratch, out)
     if fit_av:
         _locate_av(proposal, star, scratch)
-        location, scale = scratch.location, scratch.scale
-        for i in range(lanes):
-            survival = uniforms[1, i] / (1.0 + exp(-location[i] / scale[i]))
+        uniform, location, scale = scratch.uniforms[1], scratch.location, scratch.scale
+        for i in range(uniform.size):
+            survival = uniform[i] / (1.0 + exp(-location[i] / scale[i]))
             out[i, 2] = max(location[i] + scale[i] * log((1.0 - survival) / survival), 0.0)
-    _draw_others(proposal, star, fit_av, scratch, out)
+    _draw_standard(proposal, star, scratch)
+    _place_others(proposal, star, fit_av, scratch, out)
+
+
+@kernel
+def _draw_heat(proposal, star, scratch, out):
+    mass, log_density, heat = proposal.mass[star], proposal.log_density[star], proposal.heat[star]
+    uniform, knot, spot, width = scratch.uniforms[0], scratch.knot, scratch.spot, scratch.width
+    rise = scratch.rooms[0]
+    one = np.uint64(1)
+    find_last_at_most(mass, proposal.n_knots[star], uniform, knot)
+    for i in range(uniform.size):
+        k = knot[i]
+        spot[i] = (uniform[i] - mass[k]) / (mass[k + one] - mass[k])
+    for i in range(uniform.size):
+        k = knot[i]
+        rise[i] = log_density[k + one] - log_density[k]
+    for i in range(uniform.size):
+        bent = log(max(1.0 + spot[i] * (exp(rise[i]) - 1.0), 1e-300)) / rise[i]
+        spot[i] = min(max(bent if abs(rise[i]) > 1e-5 else spot[i], 0.0), 1.0)
+    for i in range(uniform.size):
+        k = knot[i]
+        width[i] = heat[k + one] - heat[k]
+        out[i, 0] = heat[k] + spot[i] * width[i]
 
 
 @kernel
 def _locate_av(proposal, star, scratch):
-    """Write location, mean and scale of A_V's cut logistic between the knots."""
-    heat, av, tangent = proposal.heat[star], proposal.av[star], proposal.tangent[star]
-    one = np.uint64(1)
-    for i in range(scratch.spot.size):
-        k, s = scratch.knot[i], scratch.spot[i]
-        width = heat[k + one] - heat[k]
-        scratch.location[i] = _between(av[k, 0], av[k + one, 0], tangent[k, 0], tangent[k + one, 0], s, width)
-        scratch.middle[i] = _between(av[k, 1], av[k + one, 1], tangent[k, 1], tangent[k + one, 1], s, width)
-        scratch.scale[i] = av[k, 2] + s * (av[k + one, 2] - av[k, 2])
-
-
-@inlined
-def _between(here, there, tangent_here, tangent_there, s, width):
-    """Return a cubic's value at the share s of the width between two knots."""
-    rise = there - here
-    return here + s * (rise + (1.0 - s) * ((1.0 - s) * (width * tangent_here - rise) - s * (width * tangent_there - rise)))
+    """Write location, mean and scale of A_V's cut logistic."""
+    av, tangent = proposal.av[star], proposal.tangent[star]
+    _cubic(av[0], tangent[0], scratch, scratch.location)
+    _cubic(av[1], tangent[1], scratch, scratch.middle)
+    _linear(av[2], scratch.knot, scratch.spot, scratch.scale)
 
 
 @kernel
-def _draw_others(proposal, star, fit_av, scratch, out):
+def _draw_standard(proposal, star, scratch):
+    """Write the others' standardised coordinates, half of them by the second t.
+
+    A t is a normal times sqrt(8 / chi2), whose chi-square is -2 ln of a product of four uniforms.
+    """
     uniforms, normals, x = scratch.uniforms, scratch.normals, scratch.x
     mean, learnt = proposal.learnt_mean[star], proposal.learnt_factor[star]
-    lanes = out.shape[0]
-    for i in range(lanes):
-        product = (uniforms[2, i] * uniforms[3, i]) * (uniforms[4, i] * uniforms[5, i])
-        scratch.y[0, i] = np.sqrt(TAIL / (-2.0 * log(product)))
-    for m in range(x.shape[0] - 1, -1, -1):
-        for i in range(lanes):
-            first = normals[m, i]
-            second = 0.0
-            for j in range(m + 1):
-                second += learnt[m, j] * normals[j, i]
-            spread = scratch.y[0, i]
-            x[m, i] = spread * first if uniforms[6, i] < 0.5 else mean[m] + spread * second
-    factor = proposal.factor[star]
-    one = np.uint64(1)
+    spread, value = scratch.rooms[0], scratch.rooms[1]
+    for i in range(spread.size):
+        spread[i] = (uniforms[2, i] * uniforms[3, i]) * (uniforms[4, i] * uniforms[5, i])
+    for i in range(spread.size):
+        spread[i] = np.sqrt(TAIL / (-2.0 * log(spread[i])))
+    for m in range(x.shape[0]):
+        value[:] = 0.0
+        for j in range(m + 1):
+            for i in range(spread.size):
+                value[i] += learnt[m, j] * normals[j, i]
+        for i in range(spread.size):
+            x[m, i] = spread[i] * normals[m, i] if uniforms[6, i] < 0.5 else mean[m] + spread[i] * value[i]
+
+
+@kernel
+def _place_others(proposal, star, fit_av, scratch, out):
+    """Turn standardised coordinates into positions."""
+    x, factor, room = scratch.x, proposal.factor[star], scratch.rooms[1]
+    value = scratch.rooms[0]
     for m in range(x.shape[0]):
         axis = other_axis(m, fit_av)
-        _centre(proposal, star, fit_av, m, scratch, out, normals[m])
-        for i in range(lanes):
-            k, s = scratch.knot[i], scratch.spot[i]
-            value = normals[m, i]
-            for j in range(m + 1):
-                value += (factor[k, m, j] + s * (factor[k + one, m, j] - factor[k, m, j])) * x[j, i]
-            out[i, axis] = value
+        _centre(proposal, star, fit_av, m, scratch, out, value)
+        for j in range(m + 1):
+            _linear(factor[m, j], scratch.knot, scratch.spot, room)
+            for i in range(value.size):
+                value[i] += room[i] * x[j, i]
+        for i in range(value.size):
+            out[i, axis] = value[i]
 
 
 @kernel
 def _centre(proposal, star, fit_av, m, scratch, coords, out):
     """Write the place of the m-th of the other coordinates at the positions' heat and A_V."""
-    heat, tangent = proposal.heat[star], proposal.tangent[star]
-    centre, slope = proposal.centre[star], proposal.slope[star]
-    one = np.uint64(1)
-    for i in range(out.size):
-        k, s = scratch.knot[i], scratch.spot[i]
-        width = heat[k + one] - heat[k]
-        out[i] = _between(centre[k, m], centre[k + one, m], tangent[k, 2 + m], tangent[k + one, 2 + m], s, width)
+    _cubic(proposal.centre[star, m], proposal.tangent[star, 2 + m], scratch, out)
     if fit_av:
+        slope, middle = scratch.rooms[1], scratch.middle
+        _linear(proposal.slope[star, m], scratch.knot, scratch.spot, slope)
         for i in range(out.size):
-            k, s = scratch.knot[i], scratch.spot[i]
-            out[i] += (slope[k, m] + s * (slope[k + one, m] - slope[k, m])) * (coords[i, 2] - scratch.middle[i])
+            out[i] += slope[i] * (coords[i, 2] - middle[i])
 
 
 @kernel
 def log_proposal_density(proposal, star, fit_av, coords, scratch, out):
     """Write the log density (L,) of a star's proposal at positions (L, ndim), less `log_normalisation`."""
-    find_knots(proposal, star, coords, scratch)
-    if fit_av:
-        _locate_av(proposal, star, scratch)
-    standardise(proposal, star, fit_av, coords, scratch)
+    locate(proposal, star, fit_av, coords, scratch)
     log_density_there(proposal, star, fit_av, coords, scratch, out)
 
 
 @kernel
-def find_knots(proposal, star, coords, scratch):
-    """Write between which knots each position lies, and where."""
-    heat, n = proposal.heat[star], proposal.n_knots[star]
+def locate(proposal, star, fit_av, coords, scratch):
+    """Write where positions are to ``scratch``, and the others' standardised coordinates to its ``x``."""
+    heat, knot, spot, width = proposal.heat[star], scratch.knot, scratch.spot, scratch.width
     one = np.uint64(1)
-    for i in range(coords.shape[0]):
-        scratch.knot[i] = last_at_most(heat, n, coords[i, 0])
-    for i in range(coords.shape[0]):
-        k = scratch.knot[i]
-        scratch.spot[i] = min(max((coords[i, 0] - heat[k]) / (heat[k + one] - heat[k]), 0.0), 1.0)
-
-
-@kernel
-def standardise(proposal, star, fit_av, coords, scratch):
-    """Write the others' standardised coordinates to ``scratch.x``, with all else in ``scratch`` known."""
-    x, factor = scratch.x, proposal.factor[star]
-    one = np.uint64(1)
+    for i in range(spot.size):
+        spot[i] = coords[i, 0]
+    find_last_at_most(heat, proposal.n_knots[star], spot, knot)
+    for i in range(spot.size):
+        k = knot[i]
+        width[i] = heat[k + one] - heat[k]
+        spot[i] = min(max((spot[i] - heat[k]) / width[i], 0.0), 1.0)
+    if fit_av:
+        _locate_av(proposal, star, scratch)
+    x, factor, room = scratch.x, proposal.factor[star], scratch.rooms[1]
+    value = scratch.rooms[0]
     for m in range(x.shape[0]):
         axis = other_axis(m, fit_av)
-        _centre(proposal, star, fit_av, m, scratch, coords, scratch.y[m])
-        for i in range(x.shape[1]):
-            k, s = scratch.knot[i], scratch.spot[i]
-            value = coords[i, axis] - scratch.y[m, i]
-            for j in range(m):
-                value -= (factor[k, m, j] + s * (factor[k + one, m, j] - factor[k, m, j])) * x[j, i]
-            x[m, i] = value / (factor[k, m, m] + s * (factor[k + one, m, m] - factor[k, m, m]))
+        _centre(proposal, star, fit_av, m, scratch, coords, value)
+        for i in range(spot.size):
+            value[i] = coords[i, axis] - value[i]
+        for j in range(m):
+            _linear(factor[m, j], knot, spot, room)
+            for i in range(spot.size):
+                value[i] -= room[i] * x[j, i]
+        _linear(factor[m, m], knot, spot, room)
+        for i in range(spot.size):
+            x[m, i] = value[i] / room[i]
 
 
 @kernel
 def log_density_there(proposal, star, fit_av, coords, scratch, out):
-    """Write the log density as `log_proposal_density` does, with ``scratch`` known."""
-    x, y, knot, spot = scratch.x, scratch.y, scratch.knot, scratch.spot
+    """Write the log density as `log_proposal_density` does, where ``scratch`` knows the positions."""
+    density, volume = scratch.rooms[0], scratch.rooms[1]
+    _t_mixture(proposal, star, scratch, density)
+    for m in range(scratch.x.shape[0]):
+        _linear(proposal.factor[star, m, m], scratch.knot, scratch.spot, volume)
+        for i in range(density.size):
+            density[i] /= volume[i]
+    if fit_av:
+        location, scale = scratch.location, scratch.scale
+        for i in range(density.size):
+            tail = exp((location[i] - coords[i, 2]) / scale[i])
+            density[i] *= tail / (scale[i] * (1.0 + tail) * (1.0 + tail))
+        for i in range(density.size):
+            density[i] *= 1.0 + exp(-location[i] / scale[i])
+    _linear(proposal.log_density[star], scratch.knot, scratch.spot, out)
+    for i in range(density.size):
+        out[i] += log(max(density[i], 1e-300))
+
+
+@kernel
+def _t_mixture(proposal, star, scratch, out):
+    """Write the density of the mixture of the two t at standardised coordinates, less its normalisation."""
+    x, y, distance2, power = scratch.x, scratch.y, scratch.rooms[1], scratch.rooms[2]
     mean, learnt = proposal.learnt_mean[star], proposal.learnt_factor[star]
-    log_density, factor = proposal.log_density[star], proposal.factor[star]
-    n_others, lanes = x.shape
     volume = 1.0
-    for m in range(n_others):
+    distance2[:] = 0.0
+    for m in range(x.shape[0]):
+        for i in range(out.size):
+            distance2[i] += x[m, i] * x[m, i]
+    _t_density(distance2, x.shape[0], power)
+    for i in range(out.size):
+        out[i] = 0.5 * power[i]
+    distance2[:] = 0.0
+    for m in range(x.shape[0]):
         volume *= learnt[m, m]
-        for i in range(lanes):
-            value = x[m, i] - mean[m]
-            for j in range(m):
-                value -= learnt[m, j] * y[j, i]
-            y[m, i] = value / learnt[m, m]
-    one = np.uint64(1)
-    for i in range(lanes):
-        k, s = knot[i], spot[i]
-        first, second, density = 0.0, 0.0, 1.0
-        for m in range(n_others):
-            first += x[m, i] * x[m, i]
-            second += y[m, i] * y[m, i]
-            density *= factor[k, m, m] + s * (factor[k + one, m, m] - factor[k, m, m])
-        density = 0.5 * (_t_density(first, n_others) + _t_density(second, n_others) / volume) / density
-        if fit_av:
-            inverse = 1.0 / scratch.scale[i]
-            tail = exp((scratch.location[i] - coords[i, 2]) * inverse)
-            cut = 1.0 + exp(-scratch.location[i] * inverse)
-            density *= tail * cut * inverse / ((1.0 + tail) * (1.0 + tail))
-        out[i] = log_density[k] + s * (log_density[k + one] - log_density[k]) + log(max(density, 1e-300))
+        for i in range(out.size):
+            y[m, i] = x[m, i] - mean[m]
+        for j in range(m):
+            for i in range(out.size):
+                y[m, i] -= learnt[m, j] * y[j, i]
+        for i in range(out.size):
+            y[m, i] /= learnt[m, m]
+            distance2[i] += y[m, i] * y[m, i]
+    _t_density(distance2, x.shape[0], power)
+    for i in range(out.size):
+        out[i] += 0.5 / volume * power[i]
 
 
-@inlined
-def _t_density(distance2, n_others):
-    """Return (1 + distance2 / 8) to the power -(8 + n_others) / 2."""
-    inverse = 1.0 / (1.0 + distance2 / TAIL)
-    root = np.sqrt(inverse)
-    power = (inverse * inverse) * (inverse * inverse)
+@kernel
+def _t_density(distance2, n_others, out):
+    """Write (1 + d / 8) to the power -(8 + n_others) / 2 of squared distances d, which are used up."""
+    for i in range(out.size):
+        inverse = 1.0 / (1.0 + distance2[i] / TAIL)
+        out[i] = (inverse * inverse) * (inverse * inverse)
+        distance2[i] = np.sqrt(inverse)
     for _ in range(n_others):
-        power *= root
-    return power
+        for i in range(out.size):
+            out[i] *= distance2[i]
 
 
 @kernel
@@ -343,10 +396,7 @@ def learn_others(window, fit_av, proposal):
         for t in range(n_steps):
             for w in range(walkers):
                 put(window[t, star * walkers + w], coords[t * walkers + w])
-        find_knots(proposal, star, coords, scratch)
-        if fit_av:
-            _locate_av(proposal, star, scratch)
-        standardise(proposal, star, fit_av, coords, scratch)
+        locate(proposal, star, fit_av, coords, scratch)
         for m in range(n_others):
             total = 0.0
             for i in range(len(coords)):
