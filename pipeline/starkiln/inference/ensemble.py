@@ -37,8 +37,9 @@ class Stopping:
     max_steps: int = 4000
 
     def lengths(self) -> list[int]:
-        """Return the chain lengths at which stars are looked at: even, each up to a quarter longer."""
-        lengths = [quarter << k for k in range(40) for quarter in (64, 80, 96, 112) if quarter << k < self.max_steps]
+        """Return the chain lengths at which stars are looked at: even, each up to half as long again."""
+        lengths = [64, 80, 96, 112, 128, *(length << k for k in range(40) for length in (160, 224))]
+        lengths = [length for length in lengths if length < self.max_steps]
         return [*sorted(set(lengths)), self.max_steps - self.max_steps % 2]
 
 

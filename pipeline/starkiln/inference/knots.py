@@ -8,9 +8,19 @@ import numpy as np
 
 from starkiln.inference.arithmetic import exp, log, put
 from starkiln.inference.compile import kernel
-from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, log_posterior, n_parameters
+from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, n_parameters
 from starkiln.inference.proposal import FARTHEST_AV, Proposal, empty_proposal
-from starkiln.inference.start import Modes, cholesky, clamp, inverse_positive, one_star, slopes, solve_positive
+from starkiln.inference.start import (
+    Modes,
+    cholesky,
+    clamp,
+    damped,
+    inverse_positive,
+    make_slopes,
+    one_star,
+    slopes,
+    solve_positive,
+)
 
 MAX_KNOTS = 64
 WALK = 24  # knots on each side of a peak
@@ -65,7 +75,7 @@ def _fit_all(block, grid, prior, modes, proposal):
 def _walk_all(one, grid, prior, modes, star, knots):
     """Walk both ways from every peak that no walk has passed; return the number of knots."""
     ndim = modes.coords.shape[2]
-    gradient, curvature = np.empty(ndim), np.empty((ndim, ndim))
+    here, there = make_slopes(ndim, grid.loading.shape[0]), make_slopes(ndim, grid.loading.shape[0])
     n = 0
     best = -np.inf
     low, high = np.inf, -np.inf
@@ -74,25 +84,26 @@ def _walk_all(one, grid, prior, modes, star, knots):
         low_peak = modes.log_density[star, mode] < modes.log_density[star, 0] - DEPTH
         if low_peak or low < peak[0] < high or n >= MAX_KNOTS - 2:
             continue
-        value, _ = _climb_beside(one, grid, prior, peak, gradient, curvature)
+        value, _, here, there = _climb_beside(one, grid, prior, peak, here, there)
         first = n
-        knots.log_marginal[n] = _condition(peak, gradient, curvature, value, prior, knots, n)
+        knots.log_marginal[n] = _condition(peak, here, value, prior, knots, n)
         best = max(best, knots.log_marginal[n])
         n += 1
         for direction in (-1.0, 1.0):
-            n, best = _walk(one, grid, prior, peak, modes.covariance[star, mode], direction, knots, first, n, best)
+            n, best = _walk(
+                one, grid, prior, peak, modes.covariance[star, mode], direction, here, there, knots, first, n, best
+            )
         for k in range(first, n):
             low, high = min(low, knots.heat[k]), max(high, knots.heat[k])
     return n
 
 
 @kernel
-def _walk(one, grid, prior, peak, covariance, direction, knots, first, n, best):
+def _walk(one, grid, prior, peak, covariance, direction, here, there, knots, first, n, best):
     """Walk from a peak until the marginal is low, a bound, or a knot of an earlier walk."""
     ndim = peak.size
     heat_low = exp(LN_HEAT_K - prior.ln_teff_max) * (1.0 + 1e-9)
     heat_high = exp(LN_HEAT_K - prior.ln_teff_min) * (1.0 - 1e-9)
-    gradient, curvature = np.empty(ndim), np.empty((ndim, ndim))
     point, trial, tangent = peak.copy(), np.empty(ndim), np.empty(ndim)
     for k in range(ndim):
         tangent[k] = covariance[0, k] / covariance[0, 0]
@@ -107,8 +118,8 @@ def _walk(one, grid, prior, peak, covariance, direction, knots, first, n, best):
         trial[0] = heat
         for k in range(1, ndim):
             trial[k] = point[k] + tangent[k] * (heat - point[0])
-        value, gain = _climb_beside(one, grid, prior, trial, gradient, curvature)
-        marginal = _condition(trial, gradient, curvature, value, prior, knots, n)
+        value, gain, here, there = _climb_beside(one, grid, prior, trial, here, there)
+        marginal = _condition(trial, here, value, prior, knots, n)
         change = abs(before - marginal)
         if (change > STEEP or gain > BENT) and tries < 4:
             step *= 0.5
@@ -140,32 +151,25 @@ def _passes_earlier(knots, first, start, end):
 
 
 @kernel
-def _climb_beside(one, grid, prior, point, gradient, curvature):
-    """Climb at fixed heat; move ``point``, and return its log density and by how much it rose.
-
-    Gradient and curvature are left as they are there.
-    """
+def _climb_beside(one, grid, prior, point, here, there):
+    """Climb at fixed heat; move ``point``, and return its log density, by how much it rose, and its slopes first."""
     ndim = point.size
-    trial = np.empty((1, ndim))
-    value = np.empty(1)
+    trial = np.empty(ndim)
     clamp(prior, point)
-    put(point, trial[0])
-    log_posterior(trial, one, grid, prior, value)
-    start = best = value[0]
+    start = best = slopes(one, grid, prior, point, here)
     damping = 1e-4
-    slopes(one, grid, prior, point, gradient, curvature)
     for _ in range(8):
-        step = _step_beside(gradient, curvature, point, prior, damping)
-        put(point, trial[0])
+        step = _step_beside(here, point, prior, damping)
+        trial[0] = point[0]
         for k in range(1, ndim):
-            trial[0, k] += step[k]
-        clamp(prior, trial[0])
-        log_posterior(trial, one, grid, prior, value)
-        if value[0] > best:
-            gain = value[0] - best
-            best = value[0]
-            put(trial[0], point)
-            slopes(one, grid, prior, point, gradient, curvature)
+            trial[k] = point[k] + step[k]
+        clamp(prior, trial)
+        value = slopes(one, grid, prior, trial, there)
+        if value > best:
+            gain = value - best
+            best = value
+            put(trial, point)
+            here, there = there, here
             damping *= 0.1
             if gain < 0.02:
                 break
@@ -173,35 +177,36 @@ def _climb_beside(one, grid, prior, point, gradient, curvature):
             damping = max(100.0 * damping, 1e-2)
             if damping > 1e3:
                 break
-    return best, best - start
+    return best, best - start, here, there
 
 
 @kernel
-def _step_beside(gradient, curvature, point, prior, damping):
+def _step_beside(here, point, prior, damping):
     """Return a damped Newton step without heat; A_V stops at zero and the others go on along it."""
-    ndim = point.size
-    damped = curvature.copy()
-    damped[0, :] = 0.0
-    damped[:, 0] = 0.0
-    damped[0, 0] = 1.0
-    for k in range(1, ndim):
-        damped[k, k] *= 1.0 + damping
-    force = gradient.copy()
-    force[0] = 0.0
-    step = solve_positive(damped, force)
+    matrix = damped(here.curvature, damping)
+    force = here.gradient.copy()
+    _hold(matrix, force, 0, 0.0)
+    step = solve_positive(matrix, force)
     if prior.fit_av and point[2] + step[2] < 0.0:
-        for k in range(1, ndim):
-            force[k] += damped[k, 2] * point[2]
-        damped[2, :] = 0.0
-        damped[:, 2] = 0.0
-        damped[2, 2] = 1.0
-        force[2] = -point[2]
-        step = solve_positive(damped, force)
+        _hold(matrix, force, 2, -point[2])
+        step = solve_positive(matrix, force)
     return step
 
 
 @kernel
-def _condition(point, gradient, curvature, value, prior, knots, n):
+def _hold(matrix, force, k, step):
+    """Change a system of equations so that the k-th step is given."""
+    for m in range(force.size):
+        if m != k:
+            force[m] -= matrix[m, k] * step
+            matrix[m, k] = 0.0
+            matrix[k, m] = 0.0
+    matrix[k, k] = 1.0
+    force[k] = step
+
+
+@kernel
+def _condition(point, here, value, prior, knots, n):
     """Write what everything but heat is like at a knot, and return the log marginal of heat.
 
     With g and A the gradient and the curvature at a point, all else is normal about its place plus C g, C = 1 / A, and
@@ -210,9 +215,9 @@ def _condition(point, gradient, curvature, value, prior, knots, n):
     ndim = point.size
     inner, force = np.empty((ndim - 1, ndim - 1)), np.empty(ndim - 1)
     for k in range(1, ndim):
-        force[k - 1] = gradient[k]
+        force[k - 1] = here.gradient[k]
         for m in range(1, ndim):
-            inner[k - 1, m - 1] = curvature[k, m]
+            inner[k - 1, m - 1] = here.curvature[k, m]
     shift = solve_positive(inner, force)
     root = cholesky(inner)
     marginal = value

@@ -13,10 +13,10 @@ from starkiln.inference.posterior import (
     LN_HEAT_K,
     Block,
     Grid,
+    Lanes,
     Prior,
     add_band,
     band_model,
-    log_posterior,
     make_lanes,
     n_parameters,
     read_coords,
@@ -76,10 +76,15 @@ def climb(block: Block, grid: Grid, prior: Prior, coords: NDArray[np.float64]) -
 
 @kernel
 def _climb_all(block, grid, prior, coords):
-    ndim = coords.shape[1]
-    curvature = np.empty((ndim, ndim))
+    here, there = _two_slopes(coords.shape[1], grid)
     for star in range(coords.shape[0]):
-        _climb(one_star(block, star), grid, prior, coords[star], curvature)
+        _climb(one_star(block, star), grid, prior, coords[star], here, there)
+
+
+@kernel
+def _two_slopes(ndim, grid):
+    n_factors = grid.loading.shape[0]
+    return make_slopes(ndim, n_factors), make_slopes(ndim, n_factors)
 
 
 @kernel
@@ -103,7 +108,7 @@ def _climb_peaks(one, grid, prior, ln_teff_nodes, profile, best_av, best_ln_omeg
     """Climb from the highest peaks of a profile, and keep where that leads."""
     ndim = modes.coords.shape[2]
     point = np.empty(ndim)
-    curvature = np.empty((ndim, ndim))
+    here, there = _two_slopes(ndim, grid)
     for _ in range(MAX_MODES + 1):
         peak = _highest_peak(profile)
         if peak < 0:
@@ -115,10 +120,10 @@ def _climb_peaks(one, grid, prior, ln_teff_nodes, profile, best_av, best_ln_omeg
             point[2] = best_av[peak]
         if prior.fit_jitter:
             point[ndim - 1] = max(FIRST_LN_JITTER, prior.ln_jitter_min)
-        value = _climb(one, grid, prior, point, curvature)
+        value, here, there = _climb(one, grid, prior, point, here, there)
         profile[peak] = np.nan
         if value > -np.inf:
-            _keep(modes, star, point, value, curvature)
+            _keep(modes, star, point, value, here.curvature)
 
 
 @kernel
@@ -268,31 +273,26 @@ def _highest_peak(profile):
 
 
 @kernel
-def _climb(one, grid, prior, point, curvature):
-    """Levenberg-Marquardt with the mixture as reweighting; moves ``point`` and returns its log density."""
+def _climb(one, grid, prior, point, here, there):
+    """Levenberg-Marquardt with the mixture as reweighting; moves ``point`` and returns its log density.
+
+    What it finds out about the point is left in the first of the two slopes that are returned with it.
+    """
     ndim = point.size
-    gradient = np.empty(ndim)
-    trial = np.empty((1, ndim))
-    value = np.empty(1)
-    put(point, trial[0])
-    log_posterior(trial, one, grid, prior, value)
-    best = value[0]
+    trial = np.empty(ndim)
+    best = slopes(one, grid, prior, point, here)
     damping = 1e-3
-    slopes(one, grid, prior, point, gradient, curvature)
     for _ in range(40):
-        damped = curvature.copy()
+        step = solve_positive(damped(here.curvature, damping), here.gradient)
         for k in range(ndim):
-            damped[k, k] *= 1.0 + damping
-        step = solve_positive(damped, gradient)
-        for k in range(ndim):
-            trial[0, k] = point[k] + step[k]
-        clamp(prior, trial[0])
-        log_posterior(trial, one, grid, prior, value)
-        if value[0] > best or (best == -np.inf and value[0] > -np.inf):
-            gain = value[0] - best
-            best = value[0]
-            put(trial[0], point)
-            slopes(one, grid, prior, point, gradient, curvature)
+            trial[k] = point[k] + step[k]
+        clamp(prior, trial)
+        value = slopes(one, grid, prior, trial, there)
+        if value > best or (best == -np.inf and value > -np.inf):
+            gain = value - best
+            best = value
+            put(trial, point)
+            here, there = there, here
             damping = max(damping * 0.2, 1e-9)
             if gain < 1e-4:
                 break
@@ -300,7 +300,16 @@ def _climb(one, grid, prior, point, curvature):
             damping *= 8.0
             if damping > 1e8:
                 break
-    return best
+    return best, here, there
+
+
+@kernel
+def damped(curvature, damping):
+    """Return a copy of a curvature with its diagonal made larger."""
+    out = curvature.copy()
+    for k in range(len(out)):
+        out[k, k] *= 1.0 + damping
+    return out
 
 
 @kernel
@@ -317,42 +326,70 @@ def clamp(prior, point):
         point[last] = min(max(point[last], prior.ln_jitter_min + 1e-9), -1e-9)
 
 
+class Slopes(NamedTuple):
+    """What the posterior is like at a point: its gradient and its Gauss-Newton curvature; and room to find out."""
+
+    gradient: NDArray[np.float64]
+    curvature: NDArray[np.float64]
+    jacobian: NDArray[np.float64]
+    same: NDArray[np.float64]
+    ln_teff: NDArray[np.float64]
+    ln_omega: NDArray[np.float64]
+    av: NDArray[np.float64]
+    lanes: Lanes
+
+
 @kernel
-def slopes(one, grid, prior, point, gradient, curvature):
-    """Write the gradient of the log density and its Gauss-Newton curvature, by differences of ln flux."""
+def make_slopes(ndim, n_factors):
+    """Return the buffers for the slopes at a point."""
+    n = 3 + n_factors
+    return Slopes(
+        np.empty(ndim),
+        np.empty((ndim, ndim)),
+        np.empty(ndim),
+        np.empty((n, ndim)),
+        np.empty(n),
+        np.empty(n),
+        np.empty(n),
+        make_lanes(n, n_factors),
+    )
+
+
+@kernel
+def slopes(one, grid, prior, point, out):
+    """Find gradient and curvature of the log density within the bounds, by differences of ln flux; return its value."""
+    gradient, curvature, jacobian, lanes = out.gradient, out.curvature, out.jacobian, out.lanes
+    ln_teff, av = out.ln_teff, out.av
     ndim = point.size
     n_factors = grid.loading.shape[0]
     first_z = 3 if prior.fit_av else 2
     # Lane 0 is the point; lane 1 a step in ln T, lane 2 in A_V, the others in the factors.
-    n = 3 + n_factors
-    lanes = make_lanes(n, n_factors)
-    ln_teff = np.empty(n)
-    ln_omega_all = np.empty(n)
-    av = np.empty(n)
     step_t, step_a = 1e-4, 1e-3
-    same = np.empty((n, ndim))
-    for i in range(n):
-        put(point, same[i])
-    read_coords(same, one.av_fixed[0], prior, ln_teff, ln_omega_all, av, lanes)
-    ln_omega = ln_omega_all[0]
+    for i in range(ln_teff.size):
+        put(point, out.same[i])
+    read_coords(out.same, one.av_fixed[0], prior, ln_teff, out.ln_omega, av, lanes)
+    ln_omega = out.ln_omega[0]
+    total = one.log_norm[0] + ln_teff[0]
     ln_teff[1] += step_t
     av[2] += step_a
     for k in range(n_factors):
         lanes.z[k, 3 + k] += 1.0
     spline_weights(ln_teff, av, grid, lanes)
     flux = lanes.flux
-    jacobian = np.zeros(ndim)
+    jacobian[:] = 0.0
     gradient[:] = 0.0
     curvature[:] = 0.0
     heat_range = exp(LN_HEAT_K - prior.ln_teff_min)
     gradient[0] = -1.0 / point[0]
     curvature[0, 0] = 1.0 / (heat_range * heat_range)
     curvature[1, 1] = 1e-3
+    offset = av[0] - one.av_mean[0]
+    total -= 0.5 * offset * offset * one.av_inverse_variance[0] + av[0] * one.av_rate[0]
     if prior.fit_av:
-        offset = point[2] - one.av_mean[0]
         gradient[2] = -offset * one.av_inverse_variance[0] - one.av_rate[0]
         curvature[2, 2] = one.av_inverse_variance[0] + 1e-4 / prior.av_max**2
     for k in range(n_factors):
+        total -= 0.5 * point[first_z + k] * point[first_z + k]
         gradient[first_z + k] = -point[first_z + k]
         curvature[first_z + k, first_z + k] = 1.0
     if prior.fit_jitter:
@@ -374,14 +411,20 @@ def slopes(one, grid, prior, point, gradient, curvature):
             x = (one.scaled_flux[0, j] - model) / sigma
             hazard = np.exp(-0.5 * x * x - HALF_LN_2PI - log_normal_cdf(x)) / sigma
             force = -hazard * model
+            total += log_normal_cdf(x)
             weight = max(hazard * (hazard + x / sigma), 0.0)
         else:
             residual = one.scaled_flux[0, j] - model
             weight = inverse_variance
+            q = residual * residual * inverse_variance
             if f > 0.0:
-                q = residual * residual * inverse_variance
                 core = (1.0 - f) * exp(-0.5 * q * (1.0 - wide))
-                weight *= (core + f * wide / prior.outlier_width) / (core + f / prior.outlier_width)
+                bracket = core + f / prior.outlier_width
+                weight *= (core + f * wide / prior.outlier_width) / bracket
+                total += log(bracket) - 0.5 * q * wide
+            else:
+                total -= 0.5 * q
+            total += 0.5 * log(inverse_variance)
             # The second part is the variance's, which grows with the model.
             growth = lanes.spread2[0] * model * model * inverse_variance
             force = weight * residual * model + growth * (weight * residual * residual - 1.0)
@@ -393,6 +436,7 @@ def slopes(one, grid, prior, point, gradient, curvature):
             gradient[k] += force * jacobian[k]
             for m in range(ndim):
                 curvature[k, m] += weight * model * model * jacobian[k] * jacobian[m]
+    return total
 
 
 @kernel
