@@ -19,6 +19,7 @@ from starkiln.inference.compile import kernel
 from starkiln.inference.fourier import all_products
 
 WALKER_ERRORS = 6.0
+WALKER_SPREADS = 1.0
 SOKAL_WINDOW = 5.0
 DIRECT_LAGS = 40  # are summed one by one in the time that Fourier transforms take for all lags
 
@@ -31,7 +32,7 @@ class Convergence(NamedTuple):
     ess_bulk, ess_tail, rhat, autocorr_steps
         (S, P); NaN where a chain did not move.
     stray_walker
-        (S,) bool: a walker's mean lies WALKER_ERRORS standard errors from the others'.
+        (S,) bool: a walker's mean lies WALKER_ERRORS standard errors and WALKER_SPREADS standard deviations from all.
     """
 
     ess_bulk: NDArray[np.float64]
@@ -389,5 +390,6 @@ def _has_stray_walker(draws, tau, column):
     for t in range(n_steps):
         for w in range(walkers):
             square[w] += (draws[t, w] - centre) ** 2
-    error = np.sqrt(square.sum() / (n_steps * walkers) * max(tau, 1.0) / n_steps)
-    return (np.abs(total / n_steps - centre) > WALKER_ERRORS * error).any()
+    spread = np.sqrt(square.sum() / (n_steps * walkers))
+    limit = spread * max(WALKER_ERRORS * np.sqrt(max(tau, 1.0) / n_steps), WALKER_SPREADS)
+    return (np.abs(total / n_steps - centre) > limit).any()

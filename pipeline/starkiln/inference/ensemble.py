@@ -292,9 +292,9 @@ class _Run:
         candidates = np.flatnonzero(last | (n_steps >= MIN_TAUS * taus).all(axis=1))
         if not len(candidates):
             return None, self.block, self
-        flat = chain[candidates].reshape(len(candidates), chain.shape[1], -1)
-        order = np.argsort(flat, axis=-1)
-        convergence = diagnose(chain[candidates], order, taus[candidates])
+        some = chain if len(candidates) == self.n_stars else chain[candidates]
+        flat = some.reshape(len(candidates), chain.shape[1], -1)
+        convergence = diagnose(some, np.argsort(flat, axis=-1), taus[candidates])
         enough = _long_enough(convergence, n_steps, stopping)
         done = np.flatnonzero(enough | last)
         if not len(done):

@@ -6,14 +6,14 @@ its own walkers and its own stream of random numbers, so a star's chain does not
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, NamedTuple
 
 import emcee
 import numpy as np
 from emcee.moves import Move
 from numpy.typing import NDArray
 
-from starkiln.inference.arithmetic import log
+from starkiln.inference.arithmetic import log, put
 from starkiln.inference.compile import kernel
 from starkiln.inference.proposal import (
     Proposal,
@@ -23,6 +23,9 @@ from starkiln.inference.proposal import (
     make_scratch,
 )
 from starkiln.inference.streams import below, fill_uniform, uniform
+
+WHOLE = 0.5  # share of the steps by differential evolution that are as long as a difference
+
 
 class BlockMove(Move):
     """Differential evolution mixed with an independence proposal, for many stars side by side.
@@ -45,7 +48,7 @@ class BlockMove(Move):
     Notes
     -----
     Differential evolution follows ter Braak (2006, Statistics and Computing 16, 239), with the scale
-    2.38 / sqrt(2 ndim) and, one time in ten, 1.
+    2.38 / sqrt(2 ndim) and, for leaps between peaks, half of the time 1.
     """
 
     def __init__(
@@ -68,79 +71,98 @@ class BlockMove(Move):
         """Advance every walker once; ``state`` is changed in place, as emcee's own moves do."""
         n_walkers, ndim = state.coords.shape
         accepted = np.zeros(n_walkers, dtype=np.bool_)
-        trial = np.empty((n_walkers // 2, ndim))
-        log_factor = np.empty(n_walkers // 2)
-        trial_log_proposal = np.empty(n_walkers // 2)
+        trials = Trials(
+            np.empty(len(self.streams), np.bool_),
+            np.empty((2, n_walkers // 2, ndim)),
+            np.empty((2, n_walkers // 2)),
+        )
+        draw_ahead(
+            state.coords, self.streams, self.proposal, self.fit_av, self.independence, self.log_proposal, trials
+        )
         for half in (0, 1):
-            propose_half(
-                state.coords,
-                half,
-                self.streams,
-                self.proposal,
-                self.fit_av,
-                self.independence,
-                self.log_proposal,
-                trial,
-                trial_log_proposal,
-                log_factor,
-            )
+            if not trials.is_independent.all():
+                evolve_half(state.coords, half, self.streams, trials)
             # The bare function: the sampler's own wrapper converts each value through a Python list.
-            log_prob = model.log_prob_fn(trial)
+            log_prob = model.log_prob_fn(trials.coords[half])
             accept_half(
                 state.coords,
                 state.log_prob,
                 self.log_proposal,
                 half,
                 self.streams,
-                trial,
+                trials,
                 log_prob,
-                trial_log_proposal,
-                log_factor,
                 accepted,
                 self.accepted,
             )
         return state, accepted
 
 
-@kernel
-def propose_half(
-    coords, half, streams, proposal, fit_av, independence, log_proposal, trial, trial_log_proposal, log_factor
-):
-    """Write the trial position and log proposal factor of half of every star's walkers.
+class Trials(NamedTuple):
+    """A step's trials of S stars: which stars use the independence proposal, and those positions, half by half.
 
-    The log density of the independence proposal is kept for every position: NaN where it is not known.
+    Attributes
+    ----------
+    is_independent
+        (S,) bool.
+    coords
+        (2, S * L, ndim), L being half of a star's walkers.
+    log_proposal
+        (2, S * L): log density of the independence proposal, NaN where it is not known.
     """
+
+    is_independent: NDArray[np.bool_]
+    coords: NDArray[np.float64]
+    log_proposal: NDArray[np.float64]
+
+
+@kernel
+def draw_ahead(coords, streams, proposal, fit_av, independence, log_proposal, trials):
+    """Choose each star's move, and draw the trials of both halves where they are independent of where walkers are."""
     n_stars = streams.shape[0]
     ndim = coords.shape[1]
     walkers = coords.shape[0] // n_stars
     lanes = walkers // 2
-    scratch = make_scratch(proposal.centre.shape[1], lanes)
+    scratch = make_scratch(proposal.centre.shape[1], walkers)
+    drawn, density = np.empty((walkers, ndim)), np.empty(walkers)
     for star in range(n_stars):
+        is_independent = uniform(streams[star]) < independence
+        trials.is_independent[star] = is_independent
+        if is_independent:
+            draw_independent(proposal, star, fit_av, streams[star], scratch, drawn)
+            log_density_there(proposal, star, fit_av, drawn, scratch, density)
+            for half in range(2):
+                for i in range(lanes):
+                    put(drawn[half * lanes + i], trials.coords[half, star * lanes + i])
+                    trials.log_proposal[half, star * lanes + i] = density[half * lanes + i]
+            mine = slice(star * walkers, (star + 1) * walkers)
+            if np.isnan(log_proposal[mine]).any():
+                log_proposal_density(proposal, star, fit_av, coords[mine], scratch, log_proposal[mine])
+
+
+@kernel
+def evolve_half(coords, half, streams, trials):
+    """Write the trials of half of the walkers of every star that moves by differential evolution."""
+    n_stars = streams.shape[0]
+    ndim = coords.shape[1]
+    walkers = coords.shape[0] // n_stars
+    lanes = walkers // 2
+    for star in range(n_stars):
+        if trials.is_independent[star]:
+            continue
         stream = streams[star]
         mine = star * walkers + half * lanes
         partners = star * walkers + (1 - half) * lanes
-        rows = slice(star * lanes, (star + 1) * lanes)
-        if uniform(stream) < independence:
-            draw_independent(proposal, star, fit_av, stream, scratch, trial[rows])
-            log_density_there(proposal, star, fit_av, trial[rows], scratch, trial_log_proposal[rows])
-            known = log_proposal[mine : mine + lanes]
-            if np.isnan(known).any():
-                log_proposal_density(proposal, star, fit_av, coords[mine : mine + lanes], scratch, known)
-            for i in range(lanes):
-                log_factor[star * lanes + i] = known[i] - trial_log_proposal[star * lanes + i]
-        else:
-            log_factor[rows] = 0.0
-            trial_log_proposal[rows] = np.nan
-            scale = 2.38 / np.sqrt(2.0 * ndim) if uniform(stream) < 0.5 else 1.0
-            for i in range(lanes):
-                a = below(stream, lanes)
-                b = below(stream, lanes - 1)
-                b += b >= a
-                reach = scale * (1.0 + 0.02 * (uniform(stream) - 0.5))
-                for k in range(ndim):
-                    trial[star * lanes + i, k] = coords[mine + i, k] + reach * (
-                        coords[partners + a, k] - coords[partners + b, k]
-                    )
+        scale = 2.38 / np.sqrt(2.0 * ndim) if uniform(stream) < 1.0 - WHOLE else 1.0
+        for i in range(lanes):
+            a = below(stream, lanes)
+            b = below(stream, lanes - 1)
+            b += b >= a
+            reach = scale * (1.0 + 0.02 * (uniform(stream) - 0.5))
+            for k in range(ndim):
+                difference = coords[partners + a, k] - coords[partners + b, k]
+                trials.coords[half, star * lanes + i, k] = coords[mine + i, k] + reach * difference
+            trials.log_proposal[half, star * lanes + i] = np.nan
 
 
 @kernel
@@ -150,10 +172,8 @@ def accept_half(
     log_proposal,
     half,
     streams,
-    trial,
+    trials,
     trial_log_prob,
-    trial_log_proposal,
-    log_factor,
     accepted,
     counts,
 ):
@@ -170,10 +190,13 @@ def accept_half(
         for i in range(lanes):
             row = star * lanes + i
             walker = star * walkers + half * lanes + i
-            if threshold[0, i] < trial_log_prob[row] - log_prob[walker] + log_factor[row]:
+            log_ratio = trial_log_prob[row] - log_prob[walker]
+            if trials.is_independent[star]:
+                log_ratio += log_proposal[walker] - trials.log_proposal[half, row]
+            if threshold[0, i] < log_ratio:
                 for k in range(ndim):
-                    coords[walker, k] = trial[row, k]
+                    coords[walker, k] = trials.coords[half, row, k]
                 log_prob[walker] = trial_log_prob[row]
-                log_proposal[walker] = trial_log_proposal[row]
+                log_proposal[walker] = trials.log_proposal[half, row]
                 accepted[walker] = True
                 counts[star] += 1
