@@ -22,6 +22,7 @@ from starkiln.inference.streams import fill_normal, fill_uniform
 
 TAIL = 8.0  # degrees of freedom: heavier tails than a posterior's at fixed temperature and dust
 FIRST_NORMAL = 7  # the uniforms before it: heat, A_V, four for the t's scale, and which t
+FIRST_REACH = 4.0  # of the second t before it has learnt: it looks for peaks beside the first
 FARTHEST_AV = -15.0  # of the logistic's location in its scales: beyond, it is an exponential
 
 
@@ -86,7 +87,7 @@ def empty_proposal(n_stars: int, n_knots: int, ndim: int, fit_av: bool) -> Propo
         zeros(2 + others),
         zeros(others, others),
         np.zeros((n_stars, others)),
-        np.broadcast_to(np.eye(others), (n_stars, others, others)).copy(),
+        np.broadcast_to(FIRST_REACH * np.eye(others), (n_stars, others, others)).copy(),
     )
 
 

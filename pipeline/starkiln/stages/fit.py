@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import HALF_LN_2PI, log_array
-from starkiln.inference.ensemble import Draws, Start, Stopping, chain_bytes, sample_blocks
+from starkiln.inference.ensemble import PATIENCE, Draws, Start, Stopping, chain_bytes, sample_blocks
 from starkiln.inference.posterior import LN_HEAT_K, Block
 from starkiln.inference.start import Modes, find_modes
 from starkiln.inference.streams import star_streams
@@ -18,8 +18,7 @@ from starkiln.stages.model import LN_RSUN_PC, FitModel
 from starkiln.stages.stars import Stars
 
 MEMORY_SHARE = 0.3  # of a worker's memory that a block's chains may take
-TYPICAL_STEPS = 256
-LARGEST_BLOCK = 256
+LARGEST_BLOCK = 512
 
 
 @dataclass(frozen=True)
@@ -38,7 +37,7 @@ class Fitted:
 
 def block_stars(settings: Settings) -> int:
     """Return how many stars to sample together, by the memory of a worker."""
-    one = chain_bytes(TYPICAL_STEPS, settings.sampling.walkers, 4)
+    one = chain_bytes(PATIENCE, settings.sampling.walkers, 4)
     return int(np.clip(MEMORY_SHARE * settings.compute.memory_per_worker_bytes / one, 1, LARGEST_BLOCK))
 
 
