@@ -35,6 +35,8 @@ AV_STRETCH = 1.05
 STRETCH = 1.05  # of the others' scatter
 LOGISTIC_SCALE = 1.81  # of a normal: pi / sqrt(3), its scale for unit variance
 
+HEAT, DUST = np.int64(0), np.int64(2)  # axes of a walker; plain numbers would be compiled for one by one
+
 
 class Knots(NamedTuple):
     """What a walk leaves: as in `Proposal`, for one star, and the log marginal in heat."""
@@ -76,7 +78,7 @@ def _walk_all(one, grid, prior, modes, star, knots):
     """Walk both ways from every peak that no walk has passed; return the number of knots."""
     ndim = modes.coords.shape[2]
     here, there = make_slopes(ndim, grid.loading.shape[0]), make_slopes(ndim, grid.loading.shape[0])
-    n = 0
+    n = np.int64(0)
     best = -np.inf
     low, high = np.inf, -np.inf
     for mode in range(max(modes.n_modes[star], 1)):
@@ -185,10 +187,10 @@ def _step_beside(here, point, prior, damping):
     """Return a damped Newton step without heat; A_V stops at zero and the others go on along it."""
     matrix = damped(here.curvature, damping)
     force = here.gradient.copy()
-    _hold(matrix, force, 0, 0.0)
+    _hold(matrix, force, HEAT, 0.0)
     step = solve_positive(matrix, force)
     if prior.fit_av and point[2] + step[2] < 0.0:
-        _hold(matrix, force, 2, -point[2])
+        _hold(matrix, force, DUST, -point[DUST])
         step = solve_positive(matrix, force)
     return step
 
@@ -294,12 +296,12 @@ def _lay_out(knots, n, prior, proposal, star):
     for k in range(n):
         best = max(best, knots.log_marginal[k])
     heat, log_density, mass = proposal.heat[star], proposal.log_density[star], proposal.mass[star]
-    count = 1
+    count = np.int64(1)
     for source in order:
         if count == 1 or knots.heat[source] > heat[count - 1] * (1.0 + SAME):
             _copy_knot(knots, source, best, proposal, star, count)
             count += 1
-    _copy_knot(knots, order[0], best, proposal, star, 0)
+    _copy_knot(knots, order[0], best, proposal, star, np.int64(0))
     _copy_knot(knots, order[n - 1], best, proposal, star, count)
     heat[0], heat[count] = heat_low * (1.0 - SAME), heat_high * (1.0 + SAME)
     log_density[0] = min(log_density[0] - BEYOND, -DEPTH)
