@@ -17,7 +17,7 @@ from starkiln.settings import Settings
 from starkiln.settings.models import PhotometryColumns
 from starkiln.stages.bands import build_bands
 
-METHOD_VERSION = 4
+METHOD_VERSION = 5
 """Goes up with every change of the method that changes a number of the catalogue."""
 
 LN_JITTER_MIN = float(np.log(1e-3))
