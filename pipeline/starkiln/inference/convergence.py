@@ -19,7 +19,7 @@ from starkiln.inference.compile import kernel
 from starkiln.inference.fourier import all_products
 
 WALKER_ERRORS = 6.0
-WALKER_SPREADS = 1.0
+WALKER_SPREADS = 0.5
 SOKAL_WINDOW = 5.0
 DIRECT_LAGS = 40  # are summed one by one in the time that Fourier transforms take for all lags
 

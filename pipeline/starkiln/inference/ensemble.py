@@ -19,11 +19,13 @@ from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, log_post
 from starkiln.inference.proposal import Proposal, draw_independent, learn_others, make_scratch
 from starkiln.inference.start import Modes, find_modes
 
-BURN_IN = 16  # steps: the walkers are drawn from the proposal
-LEARN_FROM = 4  # the step of the burn-in from which on the proposal learns
+LEARNING = (4, 12)  # steps of the burn-in from which the proposal learns; walkers have been drawn from it
+TRYING = 6  # steps after these, which show how good the proposal is
 INDEPENDENCE = 0.85  # of the steps; the others are differential evolution, for what the proposal has missed
+LESS_INDEPENDENCE = 0.5  # where fewer than POOR_ACCEPTANCE of the last steps of the burn-in were accepted
+POOR_ACCEPTANCE = 0.45
 PATIENCE = 128  # steps that a star may take in its own block
-MIN_STEPS = 60
+WAITING_SHARE = 0.2  # of the memory, for the chains of those who go on together
 MIN_TAUS = 50.0
 TAIL_SHARE = 0.4
 RHAT_LIMIT = 1.10
@@ -38,18 +40,19 @@ class Stopping:
 
     def lengths(self) -> list[int]:
         """Return the chain lengths at which stars are looked at: even, each up to half as long again."""
-        lengths = [64, 80, 96, 112, 128, *(length << k for k in range(40) for length in (160, 224))]
-        lengths = [length for length in lengths if length < self.max_steps]
-        return [*sorted(set(lengths)), self.max_steps - self.max_steps % 2]
+        lengths = [*range(64, PATIENCE + 1, 16), *(length << k for k in range(40) for length in (160, 224))]
+        last = self.max_steps - self.max_steps % 2
+        lengths = [length for length in lengths if length < last]
+        return [*sorted(lengths), last]
 
 
 class Draws(NamedTuple):
-    """The finished chains of some stars of a block, all of one length.
+    """The finished chains of some stars, all of one length.
 
     Attributes
     ----------
     stars
-        (K,) int64, their places in the block.
+        (K,) int64, their places among all stars of the blocks.
     chain
         (K, P, N): ln T, ln Omega and, where it is fitted, A_V; N = n_steps * walkers draws.
     log_prob
@@ -95,7 +98,8 @@ def sample_blocks(
 ) -> Iterator[tuple[Block, Draws]]:
     """Sample every star of some blocks until it is done; yield stars as they finish, with their part of the block.
 
-    Stars number on from block to block. Those that take longer than PATIENCE steps go on together at the end.
+    Stars number on from block to block. Those that take longer than PATIENCE steps go on together at the end, or when
+    they are many.
 
     Parameters
     ----------
@@ -103,6 +107,7 @@ def sample_blocks(
         When the chains would outgrow this, the stars left are sampled in two halves, one after the other.
     """
     patient = [length for length in stopping.lengths() if length <= PATIENCE]
+    longer = stopping.lengths()[len(patient) :]
     waiting: list[_Run] = []
     first = 0
     for start in starts:
@@ -110,8 +115,10 @@ def sample_blocks(
         run.stars += first
         first += run.n_stars
         yield from _sample(run, patient, stopping, memory_bytes, waiting)
+        if sum(run.chain.nbytes for run in waiting) > WAITING_SHARE * memory_bytes:
+            yield from _sample(_joined(waiting), longer, stopping, memory_bytes, [])
     if waiting:
-        yield from _sample(_joined(waiting), stopping.lengths()[len(patient) :], stopping, memory_bytes, [])
+        yield from _sample(_joined(waiting), longer, stopping, memory_bytes, [])
 
 
 def _sample(
@@ -138,10 +145,10 @@ def _sample(
 
 
 def _joined(runs: list[_Run]) -> _Run:
-    """Return runs of chains of one length as one."""
+    """Return runs of chains of one length as one; the list is emptied, as their chains are copied."""
     fields = [np.concatenate(columns) for columns in zip(*(run.block for run in runs), strict=True)]
     proposals = [np.concatenate(columns) for columns in zip(*(run.proposal for run in runs), strict=True)]
-    names = ("streams", "coords", "log_prob", "chain", "chain_log_prob", "accepted", "stars")
+    names = ("streams", "coords", "log_prob", "chain", "chain_log_prob", "accepted", "independence", "stars")
     whole = {name: np.concatenate([getattr(run, name) for run in runs]) for name in names}
     first = runs[0]
     joined = _Run(
@@ -154,8 +161,9 @@ def _joined(runs: list[_Run]) -> _Run:
         whole["coords"],
         whole["log_prob"],
     )
-    joined.chain, joined.chain_log_prob = whole["chain"], whole["chain_log_prob"]
-    joined.accepted, joined.stars = whole["accepted"], whole["stars"]
+    for name in ("chain", "chain_log_prob", "accepted", "independence", "stars"):
+        setattr(joined, name, whole[name])
+    runs.clear()
     return joined
 
 
@@ -178,11 +186,17 @@ def sample_block(
 def burn_in(block: Block, grid: Grid, prior: Prior, streams: NDArray[np.uint64], walkers: int, modes: Modes) -> _Run:
     """Return the run of a block after the burn-in."""
     run = _Run(block, grid, prior, streams, walkers, *_first_walkers(block, grid, prior, modes, streams, walkers))
-    window = np.empty((BURN_IN - LEARN_FROM, *run.coords.shape))
-    for step, _ in enumerate(run.steps(BURN_IN)):
-        if step >= LEARN_FROM:
-            window[step - LEARN_FROM] = run.coords
+    first, last = LEARNING
+    window = np.empty((last - first, *run.coords.shape))
+    for step, _ in enumerate(run.steps(last)):
+        if step >= first:
+            window[step - first] = run.coords
     learn_others(window, prior.fit_av, run.proposal)
+    run.accepted[:] = 0
+    for _ in run.steps(TRYING):
+        pass
+    is_poor = run.accepted < POOR_ACCEPTANCE * TRYING * walkers
+    run.independence = np.where(is_poor, LESS_INDEPENDENCE, INDEPENDENCE)
     run.accepted[:] = 0
     return run
 
@@ -195,7 +209,7 @@ def chain_bytes(n_steps: int, walkers: int, ndim: int) -> int:
 def _first_walkers(
     block: Block, grid: Grid, prior: Prior, modes: Modes, streams: NDArray[np.uint64], walkers: int
 ) -> tuple[Proposal, NDArray[np.float64], NDArray[np.float64]]:
-    """Draw each star's first walkers from its Laplace fit, and again where one falls outside the bounds."""
+    """Draw each star's first walkers from its proposal, and pull in those that fall outside the bounds."""
     n_stars, _, ndim = modes.coords.shape
     proposal = fit_proposal(block, grid, prior, modes)
     coords = np.empty((n_stars * walkers, ndim))
@@ -252,6 +266,7 @@ class _Run:
         self.chain = np.empty((self.n_stars, coords.shape[1], 0, walkers))
         self.chain_log_prob = np.empty((self.n_stars, 0, walkers))
         self.accepted = np.zeros(self.n_stars, np.int64)
+        self.independence = np.full(self.n_stars, INDEPENDENCE)
 
     @property
     def n_stars(self) -> int:
@@ -263,14 +278,12 @@ class _Run:
 
     def steps(self, n_steps: int) -> Iterator[None]:
         """Take steps of every star's ensemble, and let the caller look at each."""
-        move = BlockMove(
-            self.streams, self.proposal, self.prior.fit_av, INDEPENDENCE, self.accepted, self.walkers
-        )
+        move = BlockMove(self.streams, self.proposal, self.prior.fit_av, self.independence, self.accepted, self.walkers)
         log_prob_of = log_prob_function(self.block, self.grid, self.prior)
         sampler = emcee.EnsembleSampler(*self.coords.shape, log_prob_of, moves=move, vectorize=True)
         state = emcee.State(self.coords, log_prob=self.log_prob)
-        for state in sampler.sample(state, iterations=n_steps, store=False, skip_initial_state_check=True):
-            self.coords, self.log_prob = state.coords, state.log_prob
+        for reached in sampler.sample(state, iterations=n_steps, store=False, skip_initial_state_check=True):
+            self.coords, self.log_prob = reached.coords, reached.log_prob
             yield
 
     def extend(self, length: int) -> None:
@@ -325,7 +338,7 @@ class _Run:
             self.log_prob[walkers],
         )
         run.chain, run.chain_log_prob = self.chain[stars], self.chain_log_prob[stars]
-        run.accepted, run.stars = self.accepted[stars], self.stars[stars]
+        run.accepted, run.independence, run.stars = self.accepted[stars], self.independence[stars], self.stars[stars]
         return run
 
 
@@ -335,7 +348,6 @@ def _long_enough(convergence: Convergence, n_steps: int, stopping: Stopping) -> 
         (convergence.ess_bulk >= target).all(axis=1)
         & (convergence.ess_tail >= TAIL_SHARE * target).all(axis=1)
         & (n_steps >= MIN_TAUS * convergence.autocorr_steps).all(axis=1)
-        & (n_steps >= MIN_STEPS)
         & (convergence.rhat <= RHAT_LIMIT).all(axis=1)
         & ~convergence.stray_walker
     )

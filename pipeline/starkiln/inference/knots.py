@@ -1,4 +1,4 @@
-"""Each star's posterior along temperature: a walk from its peaks, with a Laplace fit of everything else at every knot."""
+"""Each star's posterior along temperature: a walk from its peaks, a Laplace fit of everything else at every knot."""
 
 from __future__ import annotations
 
@@ -6,11 +6,12 @@ from typing import NamedTuple
 
 import numpy as np
 
-from starkiln.inference.arithmetic import exp, log, put
+from starkiln.inference.arithmetic import HALF_LN_2PI, exp, log, put
 from starkiln.inference.compile import kernel
 from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, n_parameters
 from starkiln.inference.proposal import FARTHEST_AV, Proposal, empty_proposal
 from starkiln.inference.start import (
+    MAX_MODES,
     Modes,
     cholesky,
     clamp,
@@ -31,8 +32,7 @@ SAME = 1e-6  # relative difference of heat below which two knots are one
 LONGEST = 0.15  # step, of the heat itself
 BENT = 2.0  # a climb from the straight way to a knot that shows the way to be bent
 STEEP, FLAT = 3.0, 0.5  # changes of the log marginal between knots that are too large, or smaller than need be
-AV_STRETCH = 1.05
-STRETCH = 1.05  # of the others' scatter
+STRETCH = 1.05  # of all scatter: a proposal should be the wider one
 LOGISTIC_SCALE = 1.81  # of a normal: pi / sqrt(3), its scale for unit variance
 
 HEAT, DUST = np.int64(0), np.int64(2)  # axes of a walker; plain numbers would be compiled for one by one
@@ -80,11 +80,11 @@ def _walk_all(one, grid, prior, modes, star, knots):
     here, there = make_slopes(ndim, grid.loading.shape[0]), make_slopes(ndim, grid.loading.shape[0])
     n = np.int64(0)
     best = -np.inf
-    low, high = np.inf, -np.inf
+    low, high = np.full(MAX_MODES, np.inf), np.full(MAX_MODES, -np.inf)
     for mode in range(max(modes.n_modes[star], 1)):
         peak = modes.coords[star, mode].copy()
         low_peak = modes.log_density[star, mode] < modes.log_density[star, 0] - DEPTH
-        if low_peak or low < peak[0] < high or n >= MAX_KNOTS - 2:
+        if low_peak or n >= MAX_KNOTS - 2 or _is_passed(peak[0], low, high):
             continue
         value, _, here, there = _climb_beside(one, grid, prior, peak, here, there)
         first = n
@@ -96,8 +96,16 @@ def _walk_all(one, grid, prior, modes, star, knots):
                 one, grid, prior, peak, modes.covariance[star, mode], direction, here, there, knots, first, n, best
             )
         for k in range(first, n):
-            low, high = min(low, knots.heat[k]), max(high, knots.heat[k])
+            low[mode], high[mode] = min(low[mode], knots.heat[k]), max(high[mode], knots.heat[k])
     return n
+
+
+@kernel
+def _is_passed(heat, low, high):
+    for k in range(low.size):  # noqa: SIM110 - kernels know no any() of a generator
+        if low[k] < heat < high[k]:
+            return True
+    return False
 
 
 @kernel
@@ -146,7 +154,7 @@ def _walk(one, grid, prior, peak, covariance, direction, here, there, knots, fir
 
 @kernel
 def _passes_earlier(knots, first, start, end):
-    for k in range(first):
+    for k in range(first):  # noqa: SIM110 - kernels know no any() of a generator
         if (knots.heat[k] - start) * (knots.heat[k] - end) < 0.0:
             return True
     return False
@@ -189,7 +197,7 @@ def _step_beside(here, point, prior, damping):
     force = here.gradient.copy()
     _hold(matrix, force, HEAT, 0.0)
     step = solve_positive(matrix, force)
-    if prior.fit_av and point[2] + step[2] < 0.0:
+    if prior.fit_av and point[DUST] + step[DUST] < 0.0:
         _hold(matrix, force, DUST, -point[DUST])
         step = solve_positive(matrix, force)
     return step
@@ -248,11 +256,11 @@ def _cut_at_zero(peak, sigma, logistic):
     tail = exp(-0.5 * u * u) / np.sqrt(2.0 * np.pi) / ((1.0 - 1.0 / np.pi) * u + root / np.pi)
     if t > 0.0:
         mean = sigma * 2.0 / (root + u)
-        log_mass = -0.5 * u * u - 0.5 * np.log(2.0 * np.pi) - log((1.0 - 1.0 / np.pi) * u + root / np.pi)
+        log_mass = -0.5 * u * u - HALF_LN_2PI - log((1.0 - 1.0 / np.pi) * u + root / np.pi)
     else:
         mean = peak + sigma * exp(-0.5 * u * u) / np.sqrt(2.0 * np.pi) / (1.0 - tail)
         log_mass = log(1.0 - tail)
-    ratio = min(max(-LOGISTIC_SCALE / AV_STRETCH * t, FARTHEST_AV), 100.0)
+    ratio = min(max(-LOGISTIC_SCALE / STRETCH * t, FARTHEST_AV), 100.0)
     scale = mean / (log(1.0 + exp(ratio)) * (1.0 + exp(-ratio)))
     logistic[0], logistic[1], logistic[2] = ratio * scale, mean, scale
     return log_mass

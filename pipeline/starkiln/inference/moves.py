@@ -39,7 +39,7 @@ class BlockMove(Move):
     fit_av
         Whether the third coordinate is A_V.
     independence
-        The chance that a star's step uses the independence proposal.
+        (S,), the chance that a star's step uses the independence proposal.
     accepted
         (S,) int64: counts accepted proposals, in place.
     walkers
@@ -56,14 +56,14 @@ class BlockMove(Move):
         streams: NDArray[np.uint64],
         proposal: Proposal,
         fit_av: bool,
-        independence: float,
+        independence: NDArray[np.float64],
         accepted: NDArray[np.int64],
         walkers: int,
     ) -> None:
         self.streams = streams
         self.proposal = proposal
         self.fit_av = fit_av
-        self.independence = independence
+        self.independence = np.ascontiguousarray(np.broadcast_to(independence, len(streams)))
         self.accepted = accepted
         self.log_proposal = np.full(len(streams) * walkers, np.nan)
 
@@ -76,9 +76,7 @@ class BlockMove(Move):
             np.empty((2, n_walkers // 2, ndim)),
             np.empty((2, n_walkers // 2)),
         )
-        draw_ahead(
-            state.coords, self.streams, self.proposal, self.fit_av, self.independence, self.log_proposal, trials
-        )
+        draw_ahead(state.coords, self.streams, self.proposal, self.fit_av, self.independence, self.log_proposal, trials)
         for half in (0, 1):
             if not trials.is_independent.all():
                 evolve_half(state.coords, half, self.streams, trials)
@@ -126,7 +124,7 @@ def draw_ahead(coords, streams, proposal, fit_av, independence, log_proposal, tr
     scratch = make_scratch(proposal.centre.shape[1], walkers)
     drawn, density = np.empty((walkers, ndim)), np.empty(walkers)
     for star in range(n_stars):
-        is_independent = uniform(streams[star]) < independence
+        is_independent = uniform(streams[star]) < independence[star]
         trials.is_independent[star] = is_independent
         if is_independent:
             draw_independent(proposal, star, fit_av, streams[star], scratch, drawn)

@@ -23,7 +23,7 @@ from starkiln.inference.streams import fill_normal, fill_uniform
 TAIL = 8.0  # degrees of freedom: heavier tails than a posterior's at fixed temperature and dust
 FIRST_NORMAL = 7  # the uniforms before it: heat, A_V, four for the t's scale, and which t
 FIRST_REACH = 4.0  # of the second t before it has learnt: it looks for peaks beside the first
-FARTHEST_AV = -15.0  # of the logistic's location in its scales: beyond, it is an exponential
+FARTHEST_AV = -15.0  # of the logistic's location in its scales, at a knot: beyond, it is an exponential
 
 
 class Proposal(NamedTuple):
@@ -73,6 +73,7 @@ class Proposal(NamedTuple):
 def empty_proposal(n_stars: int, n_knots: int, ndim: int, fit_av: bool) -> Proposal:
     """Return the arrays of a proposal, to be filled."""
     others = ndim - 1 - fit_av
+
     def zeros(*shape: int) -> NDArray[np.float64]:
         return np.zeros((n_stars, *shape, n_knots))
 
@@ -234,6 +235,9 @@ def _locate_av(proposal, star, scratch):
     _cubic(av[0], tangent[0], scratch, scratch.location)
     _cubic(av[1], tangent[1], scratch, scratch.middle)
     _linear(av[2], scratch.knot, scratch.spot, scratch.scale)
+    for i in range(scratch.scale.size):
+        # A cubic may overshoot; further down every draw would be exactly zero.
+        scratch.location[i] = max(scratch.location[i], -50.0 * scratch.scale[i])
 
 
 @kernel
