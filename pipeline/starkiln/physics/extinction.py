@@ -101,7 +101,8 @@ def _range_within(law: str) -> tuple[float, float]:
 def _known(law: str) -> str:
     if law not in _SOURCES:
         raise SettingsError(
-            f"model.extinction.law = {law!r} is not known{nearest(law, _SOURCES)}; choose one of {', '.join(_SOURCES)}"
+            f"model.extinction.law = {law!r} is not known{nearest(law, _SOURCES)}; "
+            f"choose one of {', '.join(_SOURCES)}"
         )
     return law
 

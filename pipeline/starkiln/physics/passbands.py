@@ -259,7 +259,9 @@ def _read_table(path: Path) -> Table:
         raise SettingsError(f"{path}: cannot be read as {form}: {reason}") from error
 
 
-def _curve_columns(table: Table, path: Path, wavelength_name: str, throughput_name: str) -> tuple[Column, Column]:
+def _curve_columns(
+    table: Table, path: Path, wavelength_name: str, throughput_name: str
+) -> tuple[Column, Column]:
     names = list(table.colnames)
     if {wavelength_name, throughput_name} <= set(names):
         return table[wavelength_name], table[throughput_name]
@@ -271,7 +273,8 @@ def _curve_columns(table: Table, path: Path, wavelength_name: str, throughput_na
     with_unit = [name for name in names if _is_length(table[name])]
     if len(with_unit) != 1:
         raise SettingsError(
-            f"{path}: exactly one of the columns {', '.join(names)} must carry a unit of wavelength, such as nm or um"
+            f"{path}: exactly one of the columns {', '.join(names)} must carry a unit of wavelength, "
+            "such as nm or um"
         )
     (other,) = set(names) - set(with_unit)
     return table[with_unit[0]], table[other]
@@ -288,7 +291,9 @@ def _wavelengths_um(column: Column, path: Path) -> FloatArray:
 
     if not _is_length(column):
         given = "no unit" if column.unit is None else f"the unit {column.unit}"
-        raise SettingsError(f"{path}, column {column.name!r}: has {given}; give a wavelength's, such as nm or um")
+        raise SettingsError(
+            f"{path}, column {column.name!r}: has {given}; give a wavelength's, such as nm or um"
+        )
     return _numbers(column, path) * float(units.Unit(column.unit).to(units.um))
 
 
@@ -304,7 +309,9 @@ def _check_curve(
     wavelength_um: FloatArray, throughput: FloatArray, path: Path, wavelength_name: str, throughput_name: str
 ) -> None:
     if len(wavelength_um) < _MIN_POINTS:
-        raise SettingsError(f"{path}: {len(wavelength_um)} points are too few; a curve has {_MIN_POINTS} or more")
+        raise SettingsError(
+            f"{path}: {len(wavelength_um)} points are too few; a curve has {_MIN_POINTS} or more"
+        )
     for name, values in ((wavelength_name, wavelength_um), (throughput_name, throughput)):
         _refuse_rows(~np.isfinite(values), path, name, "is missing or not finite")
     _refuse_rows(wavelength_um <= 0.0, path, wavelength_name, "is not above zero")

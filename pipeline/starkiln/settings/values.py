@@ -18,7 +18,8 @@ FluxKind = Literal["f_nu", "f_lambda", "mag"]
 _F_NU = u.Jy
 _F_LAMBDA = u.W / u.m**3
 _FLUX_REMEDY = (
-    'give a flux density per frequency ("nJy", "erg / (s cm2 Hz)") or per wavelength ("W / (m2 um)"), or "mag"'
+    'give a flux density per frequency ("nJy", "erg / (s cm2 Hz)") '
+    'or per wavelength ("W / (m2 um)"), or "mag"'
 )
 _MEMORY = re.compile(r"(\d{1,9}(?:\.\d{1,9})?) ?([kMGT]?)(i?)B")
 _OPERATORS = ("=", "==", "!=", "<", ">", "<=", ">=", "in", "not in")

@@ -83,7 +83,9 @@ _SINGLE = (
         "phys.magAbs.bol;stat.median",
         "Absolute bolometric magnitude on the IAU 2015 scale, posterior median",
     ),
-    Column("corr_teff_radius", pa.float32(), None, "stat.correlation", _CORRELATION.format("teff", "ln(radius)")),
+    Column(
+        "corr_teff_radius", pa.float32(), None, "stat.correlation", _CORRELATION.format("teff", "ln(radius)")
+    ),
     Column("corr_teff_lum", pa.float32(), None, "stat.correlation", _CORRELATION.format("teff", "ln(lum)")),
     Column(
         "corr_teff_av",
@@ -92,7 +94,9 @@ _SINGLE = (
         "stat.correlation",
         _CORRELATION.format("teff", "av (av itself, not its logarithm)"),
     ),
-    Column("corr_radius_lum", pa.float32(), None, "stat.correlation", _CORRELATION.format("radius", "ln(lum)")),
+    Column(
+        "corr_radius_lum", pa.float32(), None, "stat.correlation", _CORRELATION.format("radius", "ln(lum)")
+    ),
     Column("photosphere", pa.string(), None, "meta.code.class", "Photosphere model that was fitted"),
     Column(
         "ln_evidence_ratio",
@@ -160,9 +164,13 @@ _SAMPLING = (
         "Rank-normalised split R-hat, the largest over the parameters",
     ),
     Column("n_steps", pa.int32(), None, "meta.number", "Steps each walker took after the burn-in"),
-    Column("accept_frac", pa.float32(), None, "stat.value", "Fraction of proposals accepted after the burn-in"),
+    Column(
+        "accept_frac", pa.float32(), None, "stat.value", "Fraction of proposals accepted after the burn-in"
+    ),
     Column("flags", pa.int32(), None, "meta.code.qual", "Quality flags, one bit each"),
-    Column("row_hash", pa.int64(), None, "meta.checksum", "Hash of the input values this row was fitted from"),
+    Column(
+        "row_hash", pa.int64(), None, "meta.checksum", "Hash of the input values this row was fitted from"
+    ),
 )
 
 
@@ -209,7 +217,9 @@ def fitted_columns(settings: Settings) -> list[Column]:
     return [*_quantile_columns(), *_SINGLE, *_band_columns(settings), *_SAMPLING]
 
 
-def catalogue_columns(settings: Settings, id_field: pa.Field, carry_fields: Sequence[pa.Field]) -> list[Column]:
+def catalogue_columns(
+    settings: Settings, id_field: pa.Field, carry_fields: Sequence[pa.Field]
+) -> list[Column]:
     """Return every catalogue column in order: the id, the carried ones, the fitted ones.
 
     Raises
@@ -251,11 +261,15 @@ def catalogue_schema(settings: Settings, id_field: pa.Field, carry_fields: Seque
 
 
 REJECTED = (
-    Column("input_file", pa.string(), None, "meta.dataset", "Input file, relative to the folder of the tables"),
+    Column(
+        "input_file", pa.string(), None, "meta.dataset", "Input file, relative to the folder of the tables"
+    ),
     Column("input_row", pa.int64(), None, "meta.record", "Row in the input file, counted from 0"),
     Column("reason", pa.string(), None, "meta.code.error", "Why the row was not fitted"),
     Column("detail", pa.string(), None, "meta.note", "The columns and values behind the reason"),
-    Column("kind", pa.string(), None, "meta.code.class", "data: the row itself; fault: the row made the fit fail"),
+    Column(
+        "kind", pa.string(), None, "meta.code.class", "data: the row itself; fault: the row made the fit fail"
+    ),
 )
 
 
@@ -295,7 +309,9 @@ def index_schema() -> pa.Schema:
         [
             Column("id_hash", pa.int64(), None, "meta.checksum", "Hash of the id").field(),
             Column("row_hash", pa.int64(), None, "meta.checksum", "Hash of the input values").field(),
-            Column("file", pa.string(), None, "meta.dataset", "File of the result, relative to the generation").field(),
+            Column(
+                "file", pa.string(), None, "meta.dataset", "File of the result, relative to the generation"
+            ).field(),
             Column("row", pa.int64(), None, "meta.record", "Row in that file, counted from 0").field(),
         ]
     )

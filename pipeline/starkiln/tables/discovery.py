@@ -71,8 +71,16 @@ def partition_values(root: Path, paths: Sequence[Path]) -> list[dict[str, Partit
 
     The values of a key are integers if every one is, else strings.
     """
-    texts = [dict(part.split("=", 1) for part in path.relative_to(root).parts[:-1] if "=" in part) for path in paths]
-    strings = {key for found in texts for key, text in found.items() if text != _NULL_PARTITION and not _is_int64(text)}
+    texts = [
+        dict(part.split("=", 1) for part in path.relative_to(root).parts[:-1] if "=" in part)
+        for path in paths
+    ]
+    strings = {
+        key
+        for found in texts
+        for key, text in found.items()
+        if text != _NULL_PARTITION and not _is_int64(text)
+    }
     return [{key: _value(text, key in strings) for key, text in found.items()} for found in texts]
 
 

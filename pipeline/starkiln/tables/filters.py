@@ -49,7 +49,10 @@ class RowFilter:
         where = settings.input.where or []
         alternatives = [where] if where and isinstance(where[0][0], str) else where
         self._alternatives = [
-            [(column, operator, _literal(column, value, operator, schema)) for column, operator, value in conditions]
+            [
+                (column, operator, _literal(column, value, operator, schema))
+                for column, operator, value in conditions
+            ]
             for conditions in alternatives
         ]
         self._id = settings.input.id
@@ -85,7 +88,9 @@ class RowFilter:
                 for conditions in self._alternatives
             ]
             if all(alternatives):
-                bounds.append(reduce(pc.or_kleene, (reduce(pc.and_kleene, map(_expression, a)) for a in alternatives)))
+                bounds.append(
+                    reduce(pc.or_kleene, (reduce(pc.and_kleene, map(_expression, a)) for a in alternatives))
+                )
         if self._only is not None and len(self._only):
             span = pc.min_max(self._only)
             column = pc.field(self._id)
@@ -118,12 +123,18 @@ def _scalar(column: str, value: Any, kind: pa.DataType) -> pa.Scalar:
     """Return a value in the type of a column: 0.1 means float32(0.1) to a float32 column."""
     if pa.types.is_integer(kind) and isinstance(value, float) and value.is_integer():
         value = int(value)
-    if not isinstance(value, _python_types(kind)) or (isinstance(value, bool) and not pa.types.is_boolean(kind)):
-        raise InputError(f"input.where: column {column!r} holds {kind}, which cannot be compared with {value!r}")
+    if not isinstance(value, _python_types(kind)) or (
+        isinstance(value, bool) and not pa.types.is_boolean(kind)
+    ):
+        raise InputError(
+            f"input.where: column {column!r} holds {kind}, which cannot be compared with {value!r}"
+        )
     try:
         return pa.scalar(value, kind)
     except (pa.ArrowException, ValueError, TypeError, OverflowError):
-        raise InputError(f"input.where: {value!r} is not a value that column {column!r} ({kind}) can hold") from None
+        raise InputError(
+            f"input.where: {value!r} is not a value that column {column!r} ({kind}) can hold"
+        ) from None
 
 
 def _python_types(kind: pa.DataType) -> tuple[type, ...]:
@@ -163,7 +174,9 @@ def _read_ids(path: Path, modified_ns: int, column: str, id_type: pa.DataType) -
         raise InputError(f"input.only: {path} is no whole Parquet file ({str(problem)[:120]})") from None
     kind = handed_out_type(ids.type)
     if pa.types.is_string(kind) != pa.types.is_string(id_type) or not is_id(kind):
-        raise InputError(f"input.only: column {column!r} of {path} holds {ids.type}, but the ids are {id_type}")
+        raise InputError(
+            f"input.only: column {column!r} of {path} holds {ids.type}, but the ids are {id_type}"
+        )
     try:
         return ids.cast(kind).cast(id_type).combine_chunks().drop_null().unique()
     except pa.ArrowInvalid as problem:

@@ -159,7 +159,9 @@ def _read_footer(path: Path) -> _Footer | str:
         if not _begins_as_parquet(path):
             return "is no Parquet file: starkiln.write_parquet(Table.read(...), ...) makes one of FITS, VOTable or CSV"
         return f"is no whole Parquet file ({_first_line(problem)}): write it again"
-    return _Footer(schema, tuple(metadata.row_group(group).num_rows for group in range(metadata.num_row_groups)))
+    return _Footer(
+        schema, tuple(metadata.row_group(group).num_rows for group in range(metadata.num_row_groups))
+    )
 
 
 def _begins_as_parquet(path: Path) -> bool:
@@ -238,8 +240,12 @@ class _Columns:
     def _agree(self, found: pa.Field, name: str) -> None:
         agreed = self._agreed.get(found.name)
         if agreed is None or pa.types.is_null(agreed.type):
-            metadata = {key: text for key, text in (found.metadata or {}).items() if not key.startswith(b"PARQUET:")}
-            self._agreed[found.name] = pa.field(found.name, handed_out_type(found.type), metadata=metadata or None)
+            metadata = {
+                key: text for key, text in (found.metadata or {}).items() if not key.startswith(b"PARQUET:")
+            }
+            self._agreed[found.name] = pa.field(
+                found.name, handed_out_type(found.type), metadata=metadata or None
+            )
             self._from[found.name] = name
         elif field_unit(found) and not field_unit(agreed):
             self._agreed[found.name] = _with_unit(agreed, str(field_unit(found)))
@@ -385,7 +391,9 @@ def _unpruned(source: Source, file_index: int, stored: pa.Schema, rows: RowFilte
     fragment = ds.ParquetFileFormat().make_fragment(
         str(origin.path),
         LocalFileSystem(),
-        partition_expression=_partition_expression(origin, source.schema, set(rows.columns()) - set(stored.names)),
+        partition_expression=_partition_expression(
+            origin, source.schema, set(rows.columns()) - set(stored.names)
+        ),
     )
     return {group.id for group in fragment.subset(expression, schema=pa.schema(fields)).row_groups}
 
