@@ -22,6 +22,7 @@ WALKER_ERRORS = 6.0
 WALKER_SPREADS = 0.5
 SOKAL_WINDOW = 5.0
 DIRECT_LAGS = 40  # are summed one by one in the time that Fourier transforms take for all lags
+_NO_LAG, _NEXT_STEP = np.int64(0), np.int64(1)  # plain numbers would be compiled for beside other lags
 
 
 class Convergence(NamedTuple):
@@ -56,16 +57,21 @@ def _normal_scores(n: int) -> NDArray[np.float64]:
 
 def autocorrelation_times(chain: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return the walkers' integrated autocorrelation time in steps, (S, P), of chains (S, P, n, W)."""
-    out = np.empty(chain.shape[:2])
-    _autocorrelation_times(chain, out)
-    return out
+    n_stars, n_parameters = chain.shape[:2]
+    result = _empty_result(np.empty((n_stars, n_parameters)))
+    _diagnose(_flat(chain), chain.shape[3], np.empty((n_stars, n_parameters, 0), np.int64), np.empty(0), result)
+    return result.autocorr_steps
 
 
-@kernel
-def _autocorrelation_times(chain, out):
-    for star in range(out.shape[0]):
-        for p in range(out.shape[1]):
-            out[star, p] = autocorrelation_time(chain[star, p])
+def _empty_result(autocorr_steps: NDArray[np.float64]) -> Convergence:
+    shape = autocorr_steps.shape
+    stray_walker = np.zeros(shape[0], dtype=np.bool_)
+    return Convergence(np.empty(shape), np.empty(shape), np.empty(shape), autocorr_steps, stray_walker)
+
+
+def _flat(chain: NDArray[np.float64]) -> NDArray[np.float64]:
+    n_stars, n_parameters, n_steps, walkers = chain.shape
+    return chain.reshape(n_stars, n_parameters, n_steps * walkers)
 
 
 def diagnose(chain: NDArray[np.float64], order: NDArray[np.int64], autocorr_steps: NDArray[np.float64]) -> Convergence:
@@ -80,12 +86,8 @@ def diagnose(chain: NDArray[np.float64], order: NDArray[np.int64], autocorr_step
     autocorr_steps
         (S, P), as `autocorrelation_times` gives it.
     """
-    n_stars, n_parameters, n_steps, walkers = chain.shape
-    shape = (n_stars, n_parameters)
-    result = Convergence(
-        np.empty(shape), np.empty(shape), np.empty(shape), autocorr_steps, np.zeros(n_stars, dtype=np.bool_)
-    )
-    _diagnose(chain, order, _normal_scores(n_steps * walkers), result)
+    result = _empty_result(autocorr_steps)
+    _diagnose(_flat(chain), chain.shape[3], order, _normal_scores(order.shape[2]), result)
     return result
 
 
@@ -95,7 +97,7 @@ class _Scratch(NamedTuple):
     Attributes
     ----------
     draws
-        (n, W), what is diagnosed: normal scores, or whether a draw lies in a tail.
+        (n W,), what is diagnosed: normal scores, or whether a draw lies in a tail.
     centred
         (n / 2, C): each half-chain minus its mean.
     mean, variance, column
@@ -126,7 +128,7 @@ class _Scratch(NamedTuple):
 def _make_scratch(n_steps, walkers):
     half, n, columns = n_steps // 2, n_steps * walkers, 2 * walkers
     return _Scratch(
-        np.empty((n_steps, walkers)),
+        np.empty(n),
         np.empty((half, columns)),
         np.empty(columns),
         np.empty(columns),
@@ -142,26 +144,37 @@ def _make_scratch(n_steps, walkers):
 
 
 @kernel
-def _diagnose(chain, order, scores, result):
-    scratch = _make_scratch(chain.shape[2], chain.shape[3])
-    value, flat = scratch.value, scratch.draws.ravel()
+def _diagnose(chain, walkers, order, scores, result):
+    """Write the diagnostics of chains (S, P, n W); without an order, only their autocorrelation times."""
+    # One kernel for both, as compiling the Fourier transforms into two takes twice as long.
+    n_steps = chain.shape[2] // walkers
+    scratch = _make_scratch(n_steps, walkers)
     for star in range(chain.shape[0]):
         for p in range(chain.shape[1]):
-            _put_in_order(chain[star, p].ravel(), order[star, p], value)
-            _rank_scores(value, order[star, p], scores, scratch.first, flat)
-            first_lag = _first_transformed_lag(result.autocorr_steps[star, p])
-            within, total = _within_and_total(scratch)
-            rhat = np.sqrt(total / within)
-            result.ess_bulk[star, p] = _effective_size(scratch, within, total, first_lag)
-            _fold(value, order[star, p], scratch.distance, scratch.folded, scratch.order)
-            _rank_scores(scratch.folded, scratch.order, scores, scratch.first, flat)
-            within, total = _within_and_total(scratch)
-            result.rhat[star, p] = max(rhat, np.sqrt(total / within))
-            low = _tail_size(chain[star, p], sorted_quantile(value, 0.05), scratch, first_lag)
-            high = _tail_size(chain[star, p], sorted_quantile(value, 0.95), scratch, first_lag)
-            result.ess_tail[star, p] = np.nan if np.isnan(low) or np.isnan(high) else min(low, high)
-            if _has_stray_walker(chain[star, p], result.autocorr_steps[star, p], scratch.column):
-                result.stray_walker[star] = True
+            if order.shape[2] == 0:
+                result.autocorr_steps[star, p] = autocorrelation_time(chain[star, p], n_steps, walkers)
+            else:
+                _diagnose_one(chain[star, p], order[star, p], scores, scratch, star, p, result)
+
+
+@kernel
+def _diagnose_one(draws, order, scores, scratch, star, p, result):
+    value, autocorr_steps = scratch.value, result.autocorr_steps[star, p]
+    _put_in_order(draws, order, value)
+    _rank_scores(value, order, scores, scratch.first, scratch.draws)
+    first_lag = _first_transformed_lag(autocorr_steps)
+    within, total = _within_and_total(scratch)
+    rhat = np.sqrt(total / within)
+    result.ess_bulk[star, p] = _effective_size(scratch, within, total, first_lag)
+    _fold(value, order, scratch.distance, scratch.folded, scratch.order)
+    _rank_scores(scratch.folded, scratch.order, scores, scratch.first, scratch.draws)
+    within, total = _within_and_total(scratch)
+    result.rhat[star, p] = max(rhat, np.sqrt(total / within))
+    low = _tail_size(draws, sorted_quantile(value, 0.05), scratch, first_lag)
+    high = _tail_size(draws, sorted_quantile(value, 0.95), scratch, first_lag)
+    result.ess_tail[star, p] = np.nan if np.isnan(low) or np.isnan(high) else min(low, high)
+    if _has_stray_walker(draws, autocorr_steps, scratch.column):
+        result.stray_walker[star] = True
 
 
 @kernel
@@ -216,7 +229,9 @@ def _fold(value, order, distance, folded, folded_order):
     median = sorted_quantile(value, 0.5)
     for i in range(n + 2):
         distance[i] = abs(value[i] - median)
-    left = np.searchsorted(value[1 : n + 1], median, side="right")
+    left = (n + 1) // 2
+    while left < n and value[left + 1] <= median:
+        left += 1
     right = left + 1
     far_left, far_right = 1, n
     folded[0] = folded[n + 1] = np.inf
@@ -244,16 +259,17 @@ def _within_and_total(scratch):
     mean[:] = 0.0
     variance[:] = 0.0
     for h in range(2):
-        some, its_mean, its_variance = draws[h * half :], mean[h * walkers :], variance[h * walkers :]
+        some, its_mean, its_variance = draws[h * half * walkers :], mean[h * walkers :], variance[h * walkers :]
         for t in range(half):
+            step = some[t * walkers :]
             for w in range(walkers):
-                its_mean[w] += some[t, w]
+                its_mean[w] += step[w]
         for w in range(walkers):
             its_mean[w] /= half
         for t in range(half):
-            row = centred[t, h * walkers :]
+            step, row = some[t * walkers :], centred[t, h * walkers :]
             for w in range(walkers):
-                row[w] = some[t, w] - its_mean[w]
+                row[w] = step[w] - its_mean[w]
                 its_variance[w] += row[w] * row[w]
     for c in range(chains):
         variance[c] /= half - 1
@@ -271,10 +287,9 @@ def _within_and_total(scratch):
 
 @kernel
 def _tail_size(draws, cut, scratch, first_lag):
-    """Return the effective size of how many draws (n, W) lie below a cut."""
-    for t in range(draws.shape[0]):
-        for w in range(draws.shape[1]):
-            scratch.draws[t, w] = 1.0 if draws[t, w] <= cut else 0.0
+    """Return the effective size of how many draws (n W,) lie below a cut."""
+    for i in range(draws.size):
+        scratch.draws[i] = 1.0 if draws[i] <= cut else 0.0
     within, total = _within_and_total(scratch)
     return _effective_size(scratch, within, total, first_lag)
 
@@ -293,9 +308,7 @@ def _mean_autocovariance(scratch, lag, first_lag):
         all_products(scratch.centred, scratch.column, scratch.products)
     if lag < first_lag:
         _products(scratch.centred, lag, scratch.column)
-        total = 0.0
-        for c in range(scratch.column.size):
-            total += scratch.column[c]
+        total = _sum(scratch.column)
     else:
         total = scratch.products[lag]
     return total / scratch.centred.size
@@ -321,7 +334,7 @@ def _effective_size(scratch, within, total, first_lag):
     rho = scratch.rho
     rho[:] = 0.0
     rho[0] = 1.0
-    rho[1] = 1.0 - (within - _mean_autocovariance(scratch, 1, first_lag)) / total
+    rho[1] = 1.0 - (within - _mean_autocovariance(scratch, _NEXT_STEP, first_lag)) / total
     even, odd = 1.0, rho[1]
     t = 1
     while t < half - 3 and even + odd > 0.0:
@@ -345,25 +358,24 @@ def _effective_size(scratch, within, total, first_lag):
 
 
 @kernel
-def autocorrelation_time(draws):
-    """Return the integrated autocorrelation time in steps of draws (n, W), as emcee defines it."""
-    n_steps, walkers = draws.shape
+def autocorrelation_time(draws, n_steps, walkers):
+    """Return the integrated autocorrelation time in steps of draws (n W,), as emcee defines it."""
     centred = np.empty((n_steps, walkers))
-    column = np.zeros(walkers)
+    column, square, weight = np.empty(walkers), np.empty(walkers), np.empty(walkers)
     products = np.empty(n_steps)
+    _sum_columns(draws, column)
     for t in range(n_steps):
+        step, row = draws[t * walkers :], centred[t]
         for w in range(walkers):
-            column[w] += draws[t, w]
-    for t in range(n_steps):
-        for w in range(walkers):
-            centred[t, w] = draws[t, w] - column[w] / n_steps
-    square = np.empty(walkers)
-    _products(centred, 0, square)
+            row[w] = step[w] - column[w] / n_steps
+    _products(centred, _NO_LAG, square)
     tau = 1.0
     first_lag = n_steps
     for lag in range(1, n_steps):
         if first_lag == n_steps and lag >= _first_transformed_lag(tau):
-            all_products(centred, 1.0 / square, products)
+            for w in range(walkers):
+                weight[w] = 1.0 / square[w]
+            all_products(centred, weight, products)
             first_lag = lag
         correlation = 0.0
         if lag < first_lag:
@@ -379,17 +391,40 @@ def autocorrelation_time(draws):
 
 
 @kernel
+def _sum_columns(draws, out):
+    """Write the sum of each walker's draws (n W,)."""
+    walkers = out.size
+    out[:] = 0.0
+    for t in range(draws.size // walkers):
+        step = draws[t * walkers :]
+        for w in range(walkers):
+            out[w] += step[w]
+
+
+@kernel
 def _has_stray_walker(draws, tau, column):
-    n_steps, walkers = draws.shape
+    walkers = column.size // 2
+    n_steps = draws.size // walkers
     total, square = column[:walkers], column[walkers:]
-    column[:] = 0.0
+    _sum_columns(draws, total)
+    centre = _sum(total) / draws.size
+    square[:] = 0.0
     for t in range(n_steps):
+        step = draws[t * walkers :]
         for w in range(walkers):
-            total[w] += draws[t, w]
-    centre = total.sum() / (n_steps * walkers)
-    for t in range(n_steps):
-        for w in range(walkers):
-            square[w] += (draws[t, w] - centre) ** 2
-    spread = np.sqrt(square.sum() / (n_steps * walkers))
+            gap = step[w] - centre
+            square[w] += gap * gap
+    spread = np.sqrt(_sum(square) / draws.size)
     limit = spread * max(WALKER_ERRORS * np.sqrt(max(tau, 1.0) / n_steps), WALKER_SPREADS)
-    return (np.abs(total / n_steps - centre) > limit).any()
+    strays = False
+    for w in range(walkers):
+        strays |= abs(total[w] / n_steps - centre) > limit
+    return strays
+
+
+@kernel
+def _sum(values):
+    total = 0.0
+    for i in range(values.size):
+        total += values[i]
+    return total

@@ -28,73 +28,92 @@ def all_products(series, weight, out):
     for k in range(size // 2):
         sine[k], cosine[k] = sine_cosine_turns(k / size)
     room = np.empty((2, 2, size * LANES))
-    power = np.zeros(size * LANES)
-    scale = np.sqrt(weight)
+    power = np.empty(size * LANES)
+    power[:] = 0.0
+    scale = np.empty(columns)
+    for c in range(columns):
+        scale[c] = np.sqrt(weight[c])
     for begin in range(0, columns, 2 * LANES):
-        room[0] = 0.0
-        for part in range(2):
-            some = slice(begin + part * LANES, min(begin + (part + 1) * LANES, columns))
-            its_scale = scale[some]
-            for t in range(n):
-                row, target = series[t, some], room[0, part, t * LANES :]
-                for lane in range(its_scale.size):
-                    target[lane] = row[lane] * its_scale[lane]
-        real, imaginary = _transform(room, cosine, sine)
+        _put_columns(series, scale, begin, room)
+        here = _transform(room, cosine, sine)
+        real, imaginary = room[here, 0], room[here, 1]
         for i in range(power.size):
             power[i] += real[i] * real[i] + imaginary[i] * imaginary[i]
-    total = np.zeros((2, 2, size))
+    total = np.empty((2, 2, size))
+    total[0] = 0.0
     for k in range(size):
         for lane in range(LANES):
             total[0, 0, k] += power[k * LANES + lane]
-    out[:] = _transform(total, cosine, sine)[0, :n] / size
+    here = _transform(total, cosine, sine)
+    for lag in range(n):
+        out[lag] = total[here, 0, lag] / size
+
+
+@kernel
+def _put_columns(series, scale, begin, room):
+    """Write 2 * LANES scaled columns beside each other, zeros where there are none and in a second half."""
+    room[0] = 0.0
+    for part in range(2):
+        first = begin + part * LANES
+        its_scale = scale[first : first + LANES]
+        for t in range(series.shape[0]):
+            row, target = series[t, first:], room[0, part, t * LANES :]
+            for lane in range(its_scale.size):
+                target[lane] = row[lane] * its_scale[lane]
 
 
 @kernel
 def _transform(room, cosine, sine):
-    """Return the Fourier transform (2, size * lanes), real and imaginary, of the series in the first half of a room.
+    """Fourier transform the series in the first half of a room; return the half (2, size * lanes) where it is then.
 
-    The room is (2, 2, size * lanes), its second half scratch, the lanes beside each other. Stockham's order: nothing is
-    left bit-reversed.
+    The room is (2, 2, size * lanes): two halves, real and imaginary, the lanes beside each other. Stockham's order:
+    nothing is left bit-reversed.
     """
     here, there = 0, 1
     span = room.shape[2] // (2 * cosine.size)
     while span < room.shape[2]:
         parts = 4 if room.shape[2] // span % 4 == 0 else 2
-        n = room.shape[2] // (parts * span)
-        source, target = room[here].reshape((2, parts, n, span)), room[there].reshape((2, n, parts, span))
         if parts == 4:
-            _by_fours(source, target, cosine, sine)
+            _by_fours(room[here], room[there], span, cosine, sine)
         else:
-            _by_twos(source, target, cosine, sine)
+            _by_twos(room[here], room[there], span, cosine, sine)
         here, there = there, here
         span *= parts
-    return room[here]
+    return here
 
 
 @kernel
-def _by_twos(source, target, cosine, sine):
-    turn = cosine.size // source.shape[2]
-    for k in range(source.shape[2]):
+def _by_twos(source, target, span, cosine, sine):
+    """Turn series (2, 2, n, span) by halves into (2, n, 2, span), both without their inner axes."""
+    half = source.shape[1] // 2
+    turn = cosine.size * span // half
+    for k in range(half // span):
         c, s = cosine[k * turn], sine[k * turn]
-        a_re, b_re, a_im, b_im = source[0, 0, k], source[0, 1, k], source[1, 0, k], source[1, 1, k]
-        sum_re, turned_re, sum_im, turned_im = target[0, k, 0], target[0, k, 1], target[1, k, 0], target[1, k, 1]
-        for i in range(a_re.size):
+        begin, end = k * span, 2 * k * span
+        a_re, b_re, a_im, b_im = source[0, begin:], source[0, half + begin :], source[1, begin:], source[1, half + begin :]
+        sum_re, turned_re = target[0, end:], target[0, end + span :]
+        sum_im, turned_im = target[1, end:], target[1, end + span :]
+        for i in range(span):
             re, im = a_re[i] - b_re[i], a_im[i] - b_im[i]
             sum_re[i], sum_im[i] = a_re[i] + b_re[i], a_im[i] + b_im[i]
             turned_re[i], turned_im[i] = re * c - im * s, re * s + im * c
 
 
 @kernel
-def _by_fours(source, target, cosine, sine):
-    turn = cosine.size // (2 * source.shape[2])
-    for k in range(source.shape[2]):
+def _by_fours(source, target, span, cosine, sine):
+    """Turn series (2, 4, n, span) by quarters into (2, n, 4, span), both without their inner axes."""
+    quarter = source.shape[1] // 4
+    turn = cosine.size * span // (2 * quarter)
+    for k in range(quarter // span):
         c1, s1, c2, s2 = cosine[k * turn], sine[k * turn], cosine[2 * k * turn], sine[2 * k * turn]
         c3, s3 = c1 * c2 - s1 * s2, c1 * s2 + s1 * c2
-        a_re, b_re, c_re, d_re = source[0, 0, k], source[0, 1, k], source[0, 2, k], source[0, 3, k]
-        a_im, b_im, c_im, d_im = source[1, 0, k], source[1, 1, k], source[1, 2, k], source[1, 3, k]
-        re_0, re_1, re_2, re_3 = target[0, k, 0], target[0, k, 1], target[0, k, 2], target[0, k, 3]
-        im_0, im_1, im_2, im_3 = target[1, k, 0], target[1, k, 1], target[1, k, 2], target[1, k, 3]
-        for i in range(a_re.size):
+        re, im = source[0, k * span :], source[1, k * span :]
+        a_re, b_re, c_re, d_re = re, re[quarter:], re[2 * quarter :], re[3 * quarter :]
+        a_im, b_im, c_im, d_im = im, im[quarter:], im[2 * quarter :], im[3 * quarter :]
+        re, im = target[0, 4 * k * span :], target[1, 4 * k * span :]
+        re_0, re_1, re_2, re_3 = re, re[span:], re[2 * span :], re[3 * span :]
+        im_0, im_1, im_2, im_3 = im, im[span:], im[2 * span :], im[3 * span :]
+        for i in range(span):
             sum_re, sum_im = a_re[i] + c_re[i], a_im[i] + c_im[i]
             gap_re, gap_im = a_re[i] - c_re[i], a_im[i] - c_im[i]
             odd_re, odd_im = b_re[i] + d_re[i], b_im[i] + d_im[i]
