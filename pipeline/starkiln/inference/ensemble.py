@@ -39,8 +39,8 @@ class Stopping:
     def lengths(self) -> list[int]:
         """Return the chain lengths at which stars are looked at: even, each up to half as long again."""
         lengths = [64, 80, 96, 112, 128, *(length << k for k in range(40) for length in (160, 224))]
-        lengths = [length for length in lengths if length < self.max_steps]
-        return [*sorted(set(lengths)), self.max_steps - self.max_steps % 2]
+        last = self.max_steps - self.max_steps % 2
+        return [*sorted({length for length in lengths if length < last}), last]
 
 
 class Draws(NamedTuple):
@@ -263,13 +263,11 @@ class _Run:
 
     def steps(self, n_steps: int) -> Iterator[None]:
         """Take steps of every star's ensemble, and let the caller look at each."""
-        move = BlockMove(
-            self.streams, self.proposal, self.prior.fit_av, INDEPENDENCE, self.accepted, self.walkers
-        )
+        move = BlockMove(self.streams, self.proposal, self.prior.fit_av, INDEPENDENCE, self.accepted, self.walkers)
         log_prob_of = log_prob_function(self.block, self.grid, self.prior)
         sampler = emcee.EnsembleSampler(*self.coords.shape, log_prob_of, moves=move, vectorize=True)
-        state = emcee.State(self.coords, log_prob=self.log_prob)
-        for state in sampler.sample(state, iterations=n_steps, store=False, skip_initial_state_check=True):
+        first = emcee.State(self.coords, log_prob=self.log_prob)
+        for state in sampler.sample(first, iterations=n_steps, store=False, skip_initial_state_check=True):
             self.coords, self.log_prob = state.coords, state.log_prob
             yield
 
