@@ -60,7 +60,7 @@ def importance_draws(
 
 @kernel
 def _draw(proposal, fit_av, streams, coords, log_density):
-    n_stars, n_draws, ndim = coords.shape
+    n_stars, n_draws, _ = coords.shape
     scratch = make_scratch(proposal.centre.shape[1], n_draws)
     for star in range(n_stars):
         draw_independent(proposal, star, fit_av, streams[star], scratch, coords[star])

@@ -76,9 +76,7 @@ class BlockMove(Move):
             np.empty((2, n_walkers // 2, ndim)),
             np.empty((2, n_walkers // 2)),
         )
-        draw_ahead(
-            state.coords, self.streams, self.proposal, self.fit_av, self.independence, self.log_proposal, trials
-        )
+        draw_ahead(state.coords, self.streams, self.proposal, self.fit_av, self.independence, self.log_proposal, trials)
         for half in (0, 1):
             if not trials.is_independent.all():
                 evolve_half(state.coords, half, self.streams, trials)

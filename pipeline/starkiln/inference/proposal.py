@@ -73,6 +73,7 @@ class Proposal(NamedTuple):
 def empty_proposal(n_stars: int, n_knots: int, ndim: int, fit_av: bool) -> Proposal:
     """Return the arrays of a proposal, to be filled."""
     others = ndim - 1 - fit_av
+
     def zeros(*shape: int) -> NDArray[np.float64]:
         return np.zeros((n_stars, *shape, n_knots))
 
@@ -97,7 +98,7 @@ def log_normalisation(n_others: int) -> float:
 
 
 class Scratch(NamedTuple):
-    """Buffers for L positions of one star: uniforms of heat, A_V, the t's scale, which t and the normals; where they are.
+    """Buffers for L positions of one star: uniforms of heat, A_V, the t's scale, which t, and the normals; and places.
 
     Loops run over positions within loops over coordinates, few arrays at a time, so that they fill vector lanes.
 
