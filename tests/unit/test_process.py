@@ -58,6 +58,21 @@ def test_a_star_alone_first_or_last_has_the_same_bits(table, whole, settings, mo
     assert backwards.catalogue.take(np.arange(69, -1, -1)).equals(whole.catalogue)
 
 
+def test_stars_that_take_long_go_on_together_with_the_same_bits(table, whole, settings, model, monkeypatch):
+    late = np.flatnonzero(whole.catalogue["n_steps"].to_numpy() > ensemble.PATIENCE)
+    assert len(late) > 2
+    for row in late[:4]:
+        assert process_part(table.slice(row, 1), settings, model).catalogue.equals(whole.catalogue.slice(row, 1))
+    # Blocks of three: those that are late come from many, and some of these have none.
+    monkeypatch.setattr(fit_stage, "block_stars", lambda settings: 3)
+    assert len(np.unique(late // 3)) > 2
+    some = table.take(late)
+    together = process_part(some, settings, model)
+    assert together.catalogue.equals(whole.catalogue.take(late))
+    assert together.draws.equals(whole.draws.take(late))
+    assert process_part(table, settings, model).draws.equals(whole.draws)
+
+
 def test_size_of_blocks_and_memory_change_no_bit(table, whole, settings, model, monkeypatch):
     monkeypatch.setattr(fit_stage, "block_stars", lambda settings: 9)
     assert process_part(table, settings, model).catalogue.equals(whole.catalogue)

@@ -1,4 +1,4 @@
-"""Each star's posterior along temperature: a walk from its peaks, a Laplace fit of everything else at every knot."""
+"""Each star's posterior along temperature: a walk from its peaks, with a Laplace fit of all else at every knot."""
 
 from __future__ import annotations
 
@@ -102,10 +102,10 @@ def _walk_all(one, grid, prior, modes, star, knots):
 
 @kernel
 def _is_passed(heat, low, high):
-    for k in range(low.size):  # noqa: SIM110 - kernels know no any() of a generator
-        if low[k] < heat < high[k]:
-            return True
-    return False
+    found = False
+    for k in range(low.size):
+        found |= low[k] < heat < high[k]
+    return found
 
 
 @kernel
@@ -147,17 +147,17 @@ def _walk(one, grid, prior, peak, covariance, direction, here, there, knots, fir
         before, tries = marginal, 0
         best = max(best, marginal)
         n += 1
-        if marginal < best - DEPTH or heat == heat_low or heat == heat_high:
+        if marginal < best - DEPTH or heat <= heat_low or heat >= heat_high:
             break
     return n, best
 
 
 @kernel
 def _passes_earlier(knots, first, start, end):
-    for k in range(first):  # noqa: SIM110 - kernels know no any() of a generator
-        if (knots.heat[k] - start) * (knots.heat[k] - end) < 0.0:
-            return True
-    return False
+    found = False
+    for k in range(first):
+        found |= (knots.heat[k] - start) * (knots.heat[k] - end) < 0.0
+    return found
 
 
 @kernel

@@ -98,7 +98,7 @@ def log_normalisation(n_others: int) -> float:
 
 
 class Scratch(NamedTuple):
-    """Buffers for L positions of one star: uniforms of heat, A_V, the t's scale, which t and the normals; where they are.
+    """Buffers for L positions of one star: uniforms of heat, A_V, the t's scale, which t, and the normals; and places.
 
     Loops run over positions within loops over coordinates, few arrays at a time, so that they fill vector lanes.
 

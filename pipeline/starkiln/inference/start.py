@@ -192,6 +192,7 @@ def _profile_by_band(one, grid, prior, ln_teff, av_nodes, profile, best_av, best
 
 @kernel
 def one_star(block, star):
+    """Return the block of one star, which shares its arrays."""
     rows = slice(star, star + 1)
     return Block(
         block.n_bands[rows],
@@ -314,6 +315,7 @@ def damped(curvature, damping):
 
 @kernel
 def clamp(prior, point):
+    """Pull a point onto the bounds, and a little within those that a density ends at."""
     heat_low = exp(LN_HEAT_K - prior.ln_teff_max) * (1.0 + 1e-9)
     heat_high = exp(LN_HEAT_K - prior.ln_teff_min) * (1.0 - 1e-9)
     point[0] = min(max(point[0], heat_low), heat_high)
