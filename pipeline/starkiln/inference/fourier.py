@@ -90,7 +90,8 @@ def _by_twos(source, target, span, cosine, sine):
     for k in range(half // span):
         c, s = cosine[k * turn], sine[k * turn]
         begin, end = k * span, 2 * k * span
-        a_re, b_re, a_im, b_im = source[0, begin:], source[0, half + begin :], source[1, begin:], source[1, half + begin :]
+        a_re, b_re = source[0, begin:], source[0, half + begin :]
+        a_im, b_im = source[1, begin:], source[1, half + begin :]
         sum_re, turned_re = target[0, end:], target[0, end + span :]
         sum_im, turned_im = target[1, end:], target[1, end + span :]
         for i in range(span):

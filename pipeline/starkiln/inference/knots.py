@@ -326,8 +326,9 @@ def _lay_out(knots, n, prior, proposal, star):
 @kernel
 def _ascending(values, n):
     """Return the order that sorts the first n values."""
-    order = np.arange(n)
-    for i in range(1, n):
+    order = np.empty(n, dtype=np.int64)
+    for i in range(n):
+        order[i] = i
         k = i
         while k > 0 and values[order[k - 1]] > values[order[k]]:
             order[k - 1], order[k] = order[k], order[k - 1]

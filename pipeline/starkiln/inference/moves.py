@@ -134,8 +134,16 @@ def draw_ahead(coords, streams, proposal, fit_av, independence, log_proposal, tr
                     put(drawn[half * lanes + i], trials.coords[half, star * lanes + i])
                     trials.log_proposal[half, star * lanes + i] = density[half * lanes + i]
             mine = slice(star * walkers, (star + 1) * walkers)
-            if np.isnan(log_proposal[mine]).any():
+            if _any_nan(log_proposal[mine]):
                 log_proposal_density(proposal, star, fit_av, coords[mine], scratch, log_proposal[mine])
+
+
+@kernel
+def _any_nan(values):
+    found = False
+    for value in values:
+        found |= value != value
+    return found
 
 
 @kernel

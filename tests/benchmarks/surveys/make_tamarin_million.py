@@ -2,8 +2,8 @@
 
     python tests/benchmarks/surveys/make_tamarin_million.py [STARS] [FOLDER]
 
-Dwarfs, giants and hot stars of the demo's kinds in its proportions, without its white dwarfs: the run fits departures to
-all. Files of 20,000 stars, each drawn with a seed of its own, so that fewer stars are the first of many. FOLDER is
+Dwarfs, giants and hot stars of the demo's kinds in its proportions, without its white dwarfs: the run fits departures
+to all. Files of 20,000 stars, each drawn with a seed of its own, so that fewer stars are the first of many. FOLDER is
 runs/surveys/tamarin_million unless given.
 """
 
