@@ -16,11 +16,11 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
-ROOT = Path(__file__).parents[3]
-sys.path.insert(0, str(ROOT / "demo_catalog"))
+sys.path.insert(0, str(Path(__file__).parents[3] / "demo_catalog"))
 
 import make_tamarin_strip as strip
 
+ROOT = Path(__file__).parents[3]
 STARS = 1_000_000
 STARS_PER_FILE = 20_000
 SHARES = {"dwarf": 0.72, "giant": 0.17, "hot star": 0.11}
