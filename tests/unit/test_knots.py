@@ -76,6 +76,14 @@ def test_marginal_of_a_star_without_dust_counts_what_the_cut_leaves(star):
     np.testing.assert_allclose(off, 0.0, atol=0.03)
 
 
+def test_marginal_of_a_faint_star_counts_how_wide_the_others_are():
+    # The only one here whose scatter in glow and dust depends on temperature by as much as the tolerance.
+    block, model = simulated(10, seed=2)
+    _, knots, off = marginals(block.take(np.array([9])), model)
+    assert len(knots) > 7
+    np.testing.assert_allclose(off, 0.0, atol=0.1)
+
+
 def test_marginal_of_a_star_with_two_peaks_weighs_them_rightly():
     # A band that is 30 % too faint: the mixture leaves it out, or another. Deep between the peaks, glow has two, too.
     bands = ("gaia_dr3_bp", "gaia_dr3_rp", "panstarrs_g", "2mass_j", "2mass_ks")
