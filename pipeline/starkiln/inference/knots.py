@@ -28,6 +28,7 @@ WALK = 24  # knots on each side of a peak
 DEPTH = 14.0  # the marginal is followed down to exp(-14) of its peak
 BEYOND = 8.0  # and falls so much again towards the bounds of the temperature
 FIRST_STEP = 0.6  # in standard deviations
+HALVINGS = 4  # of a step, before a leap is taken for one
 SAME = 1e-6  # relative difference of heat below which two knots are one
 LONGEST = 0.15  # step, of the heat itself
 BENT = 2.0  # a climb from the straight way to a knot that shows the way to be bent
@@ -131,10 +132,12 @@ def _walk(one, grid, prior, peak, covariance, direction, here, there, knots, fir
         value, gain, here, there = _climb_beside(one, grid, prior, trial, here, there)
         marginal = _condition(trial, here, value, prior, knots, n)
         change = abs(before - marginal)
-        if (change > STEEP or gain > BENT) and tries < 4:
+        if (change > STEEP or gain > BENT) and tries < HALVINGS:
             step *= 0.5
             tries += 1
             continue
+        if tries == HALVINGS:
+            step *= 2.0**HALVINGS  # a leap between branches: no step is short enough
         for k in range(1, ndim):
             tangent[k] = (trial[k] - point[k]) / (heat - point[0])
         if change < FLAT and gain < 0.2 * BENT:
