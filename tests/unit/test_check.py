@@ -26,7 +26,7 @@ def test_the_plan_tells_what_a_run_will_take(tmp_path):
         "memory   up to 4.7 GB in all",
     ]
     assert plan_text(tmp_path).splitlines()[-1] == (
-        "time     about 12 seconds at 50 stars a second and worker, as measured on one machine: yours will differ"
+        "time     about 3 seconds at 200 stars a second and worker, as measured on one machine: yours will differ"
     )
 
 

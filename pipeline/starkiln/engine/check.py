@@ -20,7 +20,7 @@ from starkiln.settings import Settings
 from starkiln.tables.columns import catalogue_schema, draws_schema, output_fields
 from starkiln.tables.source import Source
 
-STARS_PER_SECOND = 50.0
+STARS_PER_SECOND = 200.0
 """Stars that one worker fits in a second: measured on one core with the demo's 14 bands; plain blackbodies or few
 bands went up to four times as fast, stars that the model does not fit slower."""
 

@@ -104,10 +104,6 @@ class _Scratch(NamedTuple):
         (C,); the last for sums down the columns.
     products, rho
         (n / 2,), by lag.
-    value, distance, folded
-        (n W + 2,): sorted values, their distances from the median, those sorted; an infinity at both ends.
-    order, first
-        (n W,) int64.
     """
 
     draws: NDArray[np.float64]
@@ -117,64 +113,64 @@ class _Scratch(NamedTuple):
     column: NDArray[np.float64]
     products: NDArray[np.float64]
     rho: NDArray[np.float64]
-    value: NDArray[np.float64]
-    distance: NDArray[np.float64]
-    folded: NDArray[np.float64]
-    order: NDArray[np.int64]
-    first: NDArray[np.int64]
 
 
 @kernel
 def _make_scratch(n_steps, walkers):
-    half, n, columns = n_steps // 2, n_steps * walkers, 2 * walkers
+    half, columns = n_steps // 2, 2 * walkers
     return _Scratch(
-        np.empty(n),
+        np.empty(n_steps * walkers),
         np.empty((half, columns)),
         np.empty(columns),
         np.empty(columns),
         np.empty(columns),
         np.empty(half),
         np.empty(half),
-        np.empty(n + 2),
-        np.empty(n + 2),
-        np.empty(n + 2),
-        np.empty(n, dtype=np.int64),
-        np.empty(n, dtype=np.int64),
     )
 
 
 @kernel
 def _diagnose(chain, walkers, order, scores, result):
     """Write the diagnostics of chains (S, P, n W); without an order, only their autocorrelation times."""
-    # One kernel for both, as compiling the Fourier transforms into two takes twice as long.
-    n_steps = chain.shape[2] // walkers
-    scratch = _make_scratch(n_steps, walkers)
-    for star in range(chain.shape[0]):
-        for p in range(chain.shape[1]):
-            if order.shape[2] == 0:
-                result.autocorr_steps[star, p] = autocorrelation_time(chain[star, p], n_steps, walkers)
-            else:
-                _diagnose_one(chain[star, p], order[star, p], scores, scratch, star, p, result)
+    # Both carry the Fourier transforms, which would be compiled twice for two kernels.
+    if order.shape[2] == 0:
+        _put_autocorrelation_times(chain, walkers, result.autocorr_steps)
+    else:
+        _put_diagnostics(chain, walkers, order, scores, result)
 
 
 @kernel
-def _diagnose_one(draws, order, scores, scratch, star, p, result):
-    value, autocorr_steps = scratch.value, result.autocorr_steps[star, p]
-    _put_in_order(draws, order, value)
-    _rank_scores(value, order, scores, scratch.first, scratch.draws)
-    first_lag = _first_transformed_lag(autocorr_steps)
-    within, total = _within_and_total(scratch)
-    rhat = np.sqrt(total / within)
-    result.ess_bulk[star, p] = _effective_size(scratch, within, total, first_lag)
-    _fold(value, order, scratch.distance, scratch.folded, scratch.order)
-    _rank_scores(scratch.folded, scratch.order, scores, scratch.first, scratch.draws)
-    within, total = _within_and_total(scratch)
-    result.rhat[star, p] = max(rhat, np.sqrt(total / within))
-    low = _tail_size(draws, sorted_quantile(value, 0.05), scratch, first_lag)
-    high = _tail_size(draws, sorted_quantile(value, 0.95), scratch, first_lag)
-    result.ess_tail[star, p] = np.nan if np.isnan(low) or np.isnan(high) else min(low, high)
-    if _has_stray_walker(draws, autocorr_steps, scratch.column):
-        result.stray_walker[star] = True
+def _put_autocorrelation_times(chain, walkers, out):
+    for star in range(out.shape[0]):
+        for p in range(out.shape[1]):
+            out[star, p] = autocorrelation_time(chain[star, p], walkers)
+
+
+@kernel
+def _put_diagnostics(chain, walkers, order, scores, result):
+    n = chain.shape[2]
+    scratch = _make_scratch(n // walkers, walkers)
+    # Sorted values, their distances from the median, and those sorted; an infinity at both ends.
+    value, distance, folded = np.empty(n + 2), np.empty(n + 2), np.empty(n + 2)
+    folded_order, first = np.empty(n, dtype=np.int64), np.empty(n, dtype=np.int64)
+    for star in range(chain.shape[0]):
+        for p in range(chain.shape[1]):
+            draws, its_order, autocorr_steps = chain[star, p], order[star, p], result.autocorr_steps[star, p]
+            _put_in_order(draws, its_order, value)
+            _rank_scores(value, its_order, scores, first, scratch.draws)
+            first_lag = _first_transformed_lag(autocorr_steps)
+            within, total = _within_and_total(scratch)
+            rhat = np.sqrt(total / within)
+            result.ess_bulk[star, p] = _effective_size(scratch, within, total, first_lag)
+            _fold(value, its_order, distance, folded, folded_order)
+            _rank_scores(folded, folded_order, scores, first, scratch.draws)
+            within, total = _within_and_total(scratch)
+            result.rhat[star, p] = max(rhat, np.sqrt(total / within))
+            low = _tail_size(draws, sorted_quantile(value, 0.05), scratch, first_lag)
+            high = _tail_size(draws, sorted_quantile(value, 0.95), scratch, first_lag)
+            result.ess_tail[star, p] = np.nan if np.isnan(low) or np.isnan(high) else min(low, high)
+            if _has_stray_walker(draws, autocorr_steps, scratch.column):
+                result.stray_walker[star] = True
 
 
 @kernel
@@ -280,7 +276,8 @@ def _within_and_total(scratch):
     within /= chains
     centre /= chains
     for c in range(chains):
-        between += (mean[c] - centre) ** 2
+        gap = mean[c] - centre
+        between += gap * gap
     between /= chains - 1
     return within, within * (half - 1) / half + between
 
@@ -358,8 +355,9 @@ def _effective_size(scratch, within, total, first_lag):
 
 
 @kernel
-def autocorrelation_time(draws, n_steps, walkers):
+def autocorrelation_time(draws, walkers):
     """Return the integrated autocorrelation time in steps of draws (n W,), as emcee defines it."""
+    n_steps = draws.size // walkers
     centred = np.empty((n_steps, walkers))
     column, square, weight = np.empty(walkers), np.empty(walkers), np.empty(walkers)
     products = np.empty(n_steps)

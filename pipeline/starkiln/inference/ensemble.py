@@ -86,11 +86,15 @@ def log_prob_function(block: Block, grid: Grid, prior: Prior) -> Callable[[NDArr
 
 
 class Start(NamedTuple):
-    """A block of stars to be sampled, the peaks of their posteriors, and their streams (S, 4), advanced in place."""
+    """A block of stars to be sampled, the peaks of their posteriors, and their streams (S, 4), advanced in place.
+
+    The proposals come from a walk from the peaks where they are not given.
+    """
 
     block: Block
     modes: Modes
     streams: NDArray[np.uint64]
+    proposal: Proposal | None = None
 
 
 def sample_blocks(
@@ -111,7 +115,7 @@ def sample_blocks(
     waiting: list[_Run] = []
     first = 0
     for start in starts:
-        run = burn_in(start.block, grid, prior, start.streams, walkers, start.modes)
+        run = burn_in(start, grid, prior, walkers)
         run.stars += first
         first += run.n_stars
         yield from _sample(run, patient, stopping, memory_bytes, waiting)
@@ -176,16 +180,17 @@ def sample_block(
     stopping: Stopping,
     memory_bytes: float = 1e9,
     modes: Modes | None = None,
+    proposal: Proposal | None = None,
 ) -> Iterator[Draws]:
     """Sample every star of one block, whose peaks may be known already; yield stars as they finish."""
-    start = Start(block, modes or find_modes(block, grid, prior), streams)
+    start = Start(block, modes or find_modes(block, grid, prior), streams, proposal)
     for _, draws in sample_blocks([start], grid, prior, walkers, stopping, memory_bytes):
         yield draws
 
 
-def burn_in(block: Block, grid: Grid, prior: Prior, streams: NDArray[np.uint64], walkers: int, modes: Modes) -> _Run:
-    """Return the run of a block after the burn-in."""
-    run = _Run(block, grid, prior, streams, walkers, *_first_walkers(block, grid, prior, modes, streams, walkers))
+def burn_in(start: Start, grid: Grid, prior: Prior, walkers: int) -> _Run:
+    """Return the run of a block after the burn-in, its proposal frozen."""
+    run = _first_run(start, grid, prior, walkers)
     first, last = LEARNING
     window = np.empty((last - first, *run.coords.shape))
     for step, _ in enumerate(run.steps(last)):
@@ -206,13 +211,11 @@ def chain_bytes(n_steps: int, walkers: int, ndim: int) -> int:
     return n_steps * walkers * 8 * (5 * ndim + 16)
 
 
-def _first_walkers(
-    block: Block, grid: Grid, prior: Prior, modes: Modes, streams: NDArray[np.uint64], walkers: int
-) -> tuple[Proposal, NDArray[np.float64], NDArray[np.float64]]:
+def _first_run(start: Start, grid: Grid, prior: Prior, walkers: int) -> _Run:
     """Draw each star's first walkers from its proposal, and pull in those that fall outside the bounds."""
-    n_stars, _, ndim = modes.coords.shape
-    proposal = fit_proposal(block, grid, prior, modes)
-    coords = np.empty((n_stars * walkers, ndim))
+    block, modes, streams, _ = start
+    proposal = start.proposal or fit_proposal(block, grid, prior, modes)
+    coords = np.empty((len(streams) * walkers, modes.coords.shape[2]))
     _draw_walkers(proposal, prior.fit_av, streams, coords)
     log_prob_of = log_prob_function(block, grid, prior)
     log_prob = log_prob_of(coords)
@@ -222,7 +225,7 @@ def _first_walkers(
             break
         _pull_in(coords, lost, modes)
         log_prob = log_prob_of(coords)
-    return proposal, coords, log_prob
+    return _Run(block, grid, prior, streams, walkers, proposal, coords, log_prob)
 
 
 @kernel

@@ -9,9 +9,15 @@ from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import HALF_LN_2PI
 from starkiln.inference.compile import kernel
-from starkiln.inference.ensemble import burn_in, log_prob_function
+from starkiln.inference.ensemble import Start, burn_in, log_prob_function
 from starkiln.inference.posterior import Block, Grid, Prior
-from starkiln.inference.proposal import draw_independent, log_normalisation, log_proposal_density, make_scratch
+from starkiln.inference.proposal import (
+    Proposal,
+    draw_independent,
+    log_normalisation,
+    log_proposal_density,
+    make_scratch,
+)
 from starkiln.inference.start import Modes
 
 
@@ -38,6 +44,7 @@ def importance_draws(
     streams: NDArray[np.uint64],
     walkers: int,
     modes: Modes,
+    proposal: Proposal | None = None,
     n_draws: int = 1024,
 ) -> WeightedDraws:
     """Draw from each star's learnt proposal and weigh the draws by the posterior.
@@ -47,7 +54,7 @@ def importance_draws(
     streams
         (S, 4) uint64, advanced in place.
     """
-    run = burn_in(block, grid, prior, streams, walkers, modes)
+    run = burn_in(Start(block, modes, streams, proposal), grid, prior, walkers)
     n_stars, ndim = run.n_stars, run.coords.shape[1]
     coords = np.empty((n_stars, n_draws, ndim))
     log_density = np.empty((n_stars, n_draws))

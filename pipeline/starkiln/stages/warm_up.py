@@ -14,7 +14,9 @@ import numpy as np
 from starkiln.inference.compile import FOUND_EMPTY
 from starkiln.inference.ensemble import Stopping, sample_block
 from starkiln.inference.evidence import importance_draws
+from starkiln.inference.knots import MAX_KNOTS, fit_proposal
 from starkiln.inference.posterior import LN_HEAT_K, n_parameters
+from starkiln.inference.proposal import Proposal, empty_proposal
 from starkiln.inference.start import MAX_MODES, Modes, climb
 from starkiln.inference.streams import star_streams
 from starkiln.physics.bandtable import ln_flux
@@ -86,8 +88,9 @@ def _finding_peaks(settings: Settings) -> Iterator[subprocess.Popen[bytes]]:
 
 
 def find_peaks(settings: Settings, model: FitModel) -> None:
-    """Call the kernels that find and climb peaks."""
+    """Call the kernels that find peaks, climb them and walk along them."""
     block, modes = start_block(invented_stars(model), model, settings)
+    fit_proposal(block, model.grid, model.prior, modes)
     climb(block, model.grid, model.prior, modes.coords[:, 0].copy())
 
 
@@ -96,13 +99,15 @@ def sample_from_anywhere(settings: Settings, model: FitModel) -> None:
     stars = invented_stars(model)
     block = pack_block(stars, model, settings)
     modes = _middle_as_peak(model, len(stars))
+    proposal = _about_the_middle(modes, model)
     walkers = settings.sampling.walkers
     streams = star_streams(stars.ids, settings.run.seed, b"warm up")
     stopping = Stopping(settings.sampling.effective_samples, FEWEST_STEPS)
-    for draws in sample_block(block, model.grid, model.prior, streams, walkers, stopping, modes=modes):
+    grid, prior = model.grid, model.prior
+    for draws in sample_block(block, grid, prior, streams, walkers, stopping, modes=modes, proposal=proposal):
         derive(stars.at(draws.stars), draws, model, settings)
     if model.rival is not None:
-        importance_draws(block, model.grid, model.prior, streams, walkers, modes)
+        importance_draws(block, grid, prior, streams, walkers, modes, proposal)
 
 
 def _middle_as_peak(model: FitModel, n_stars: int) -> Modes:
@@ -117,6 +122,19 @@ def _middle_as_peak(model: FitModel, n_stars: int) -> Modes:
         coords[:, :, -1] = 0.5 * prior.ln_jitter_min
     covariance = np.zeros((n_stars, MAX_MODES, ndim, ndim)) + 1e-4 * np.eye(ndim)
     return Modes(np.ones(n_stars, np.int64), coords, np.zeros((n_stars, MAX_MODES)), covariance)
+
+
+def _about_the_middle(modes: Modes, model: FitModel) -> Proposal:
+    """Return a proposal that is flat in heat to both sides of the middle."""
+    n_stars, _, ndim = modes.coords.shape
+    proposal = empty_proposal(n_stars, MAX_KNOTS + 2, ndim, model.prior.fit_av)
+    proposal.n_knots[:] = 3
+    proposal.heat[:, :3] = modes.coords[:, :1, 0] * np.array([0.9, 1.0, 1.1])
+    proposal.mass[:, :3] = 0.0, 0.5, 1.0
+    proposal.av[:, 1:] = 0.5
+    proposal.centre[:, 0] = modes.coords[:, :1, 1]
+    proposal.factor[:] = 0.1 * np.eye(proposal.factor.shape[1])[:, :, np.newaxis]
+    return proposal
 
 
 def _middle(model: FitModel) -> tuple[float, float]:
