@@ -89,18 +89,10 @@ def _by_twos(source, target, span, cosine, sine):
     turn = cosine.size * span // half
     for k in range(half // span):
         c, s = cosine[k * turn], sine[k * turn]
-<<<<<<< HEAD
-        begin, end = k * span, 2 * k * span
-        a_re, b_re = source[0, begin:], source[0, half + begin :]
-        a_im, b_im = source[1, begin:], source[1, half + begin :]
-        sum_re, turned_re = target[0, end:], target[0, end + span :]
-        sum_im, turned_im = target[1, end:], target[1, end + span :]
-=======
         a_re, a_im = source[0, k * span :], source[1, k * span :]
         b_re, b_im = a_re[half:], a_im[half:]
         sum_re, sum_im = target[0, 2 * k * span :], target[1, 2 * k * span :]
         turned_re, turned_im = sum_re[span:], sum_im[span:]
->>>>>>> comp
         for i in range(span):
             re, im = a_re[i] - b_re[i], a_im[i] - b_im[i]
             sum_re[i], sum_im[i] = a_re[i] + b_re[i], a_im[i] + b_im[i]
