@@ -94,7 +94,7 @@ def test_a_counted_plan_tells_all_that_becomes_of_rows(tmp_path):
         "gone     7 ids of the published catalogue",
     ]
     assert "parts    2" in lines
-    assert lines[-1].startswith("time     about 0.07 seconds")
+    assert lines[-1].startswith("time     about 0.018 seconds")
 
 
 def test_counting_makes_do_with_the_systems_folder_for_temporary_files(tmp_path):
