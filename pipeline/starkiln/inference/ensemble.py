@@ -248,6 +248,12 @@ def _pull_in(coords, lost, modes):
                 coords[row, k] = peak + 0.3 * (coords[row, k] - peak)
 
 
+class _Sampler(emcee.EnsembleSampler):
+    """emcee's sampler without a copy of the state of its own generator, which draws nothing here, in every step."""
+
+    random_state = None
+
+
 class _Run:
     """The stars of a block that are still sampled, and their chains so far: (S, P, n, W) of the natural parameters."""
 
@@ -283,7 +289,7 @@ class _Run:
         """Take steps of every star's ensemble, and let the caller look at each."""
         move = BlockMove(self.streams, self.proposal, self.prior.fit_av, self.independence, self.accepted, self.walkers)
         log_prob_of = log_prob_function(self.block, self.grid, self.prior)
-        sampler = emcee.EnsembleSampler(*self.coords.shape, log_prob_of, moves=move, vectorize=True)
+        sampler = _Sampler(*self.coords.shape, log_prob_of, moves=move, vectorize=True)
         state = emcee.State(self.coords, log_prob=self.log_prob)
         for reached in sampler.sample(state, iterations=n_steps, store=False, skip_initial_state_check=True):
             self.coords, self.log_prob = reached.coords, reached.log_prob
