@@ -4,7 +4,7 @@
 
 Prints a table for each section, writes FOLDER/speed.json, where sections that are not measured keep what is there, and
 draws FOLDER/speed.svg and .png from the section "scaling". Times are CPU times unless they are called wall. Sections:
-samplers, floor, end_to_end, startup, memory, workers, costs, scaling. `--stars 8` is a trial.
+samplers, floor, end_to_end, startup, memory, workers, driver, costs, scaling. `--stars 8` is a trial.
 """
 
 from __future__ import annotations
@@ -28,7 +28,7 @@ from typing import Any
 
 sys.path.insert(0, str(Path(__file__).parents[1]))
 
-from benchmarks.speed import costs, end_to_end, floor, memory, samplers, scaling, startup, workers
+from benchmarks.speed import costs, driver, end_to_end, floor, memory, samplers, scaling, startup, workers
 from benchmarks.speed.common import Suite
 
 SECTIONS = {
@@ -38,6 +38,7 @@ SECTIONS = {
     "startup": startup.measure,
     "memory": memory.measure,
     "workers": workers.measure,
+    "driver": driver.measure,
     "costs": costs.measure,
     "scaling": scaling.measure,
 }
