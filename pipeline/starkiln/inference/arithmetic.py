@@ -156,7 +156,7 @@ def log_array(x: NDArray[np.float64]) -> NDArray[np.float64]:
 
 @kernel
 def put(values, out):
-    """Copy values; assigning an array to a slice takes a second and a half to compile."""
+    """Copy values; the first assignment of an array to a slice takes more than a second to compile."""
     for i in range(out.size):
         out[i] = values[i]
 

@@ -1,4 +1,4 @@
-"""Sampling a block of stars: start, burn-in, a frozen proposal, and stopping star by star."""
+"""Sampling blocks of stars: start, burn-in, a frozen proposal, and stopping star by star."""
 
 from __future__ import annotations
 
@@ -19,7 +19,7 @@ from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, log_post
 from starkiln.inference.proposal import Proposal, draw_independent, learn_others, make_scratch
 from starkiln.inference.start import Modes, find_modes
 
-LEARNING = (4, 12)  # steps of the burn-in from which the proposal learns; walkers have been drawn from it
+LEARNING = (4, 12)  # the proposal learns from these steps of the burn-in; those before forget where walkers began
 TRYING = 6  # steps after these, which show how good the proposal is
 INDEPENDENCE = 0.85  # of the steps; the others are differential evolution, for what the proposal has missed
 LESS_INDEPENDENCE = 0.5  # where fewer than POOR_ACCEPTANCE of the last steps of the burn-in were accepted
@@ -54,7 +54,8 @@ class Draws(NamedTuple):
     stars
         (K,) int64, their places among all stars of the blocks.
     chain
-        (K, P, N): ln T, ln Omega and, where it is fitted, A_V; N = n_steps * walkers draws.
+        (K, P, N): ln T, ln Omega, A_V in magnitudes where it is fitted, factors, and ln jitter where it is fitted;
+        N = n_steps * walkers draws.
     log_prob
         (K, N), in the sampler's coordinates.
     n_steps
@@ -86,9 +87,16 @@ def log_prob_function(block: Block, grid: Grid, prior: Prior) -> Callable[[NDArr
 
 
 class Start(NamedTuple):
-    """A block of stars to be sampled, the peaks of their posteriors, and their streams (S, 4), advanced in place.
+    """A block of S stars to be sampled.
 
-    The proposals come from a walk from the peaks where they are not given.
+    Attributes
+    ----------
+    block, modes
+        The data, and the peaks of the posteriors.
+    streams
+        (S, 4) uint64, advanced in place.
+    proposal
+        What walkers are first drawn from; without, that of a walk from the peaks.
     """
 
     block: Block
@@ -103,7 +111,7 @@ def sample_blocks(
     """Sample every star of some blocks until it is done; yield stars as they finish, with their part of the block.
 
     Stars number on from block to block. Those that take longer than PATIENCE steps go on together at the end, or when
-    they are many.
+    their chains take more than WAITING_SHARE of the memory.
 
     Parameters
     ----------
@@ -152,7 +160,8 @@ def _joined(runs: list[_Run]) -> _Run:
     """Return runs of chains of one length as one; the list is emptied, as their chains are copied."""
     fields = [np.concatenate(columns) for columns in zip(*(run.block for run in runs), strict=True)]
     proposals = [np.concatenate(columns) for columns in zip(*(run.proposal for run in runs), strict=True)]
-    names = ("streams", "coords", "log_prob", "chain", "chain_log_prob", "accepted", "independence", "stars")
+    kept = ("chain", "chain_log_prob", "accepted", "independence", "stars")
+    names = ("streams", "coords", "log_prob", *kept)
     whole = {name: np.concatenate([getattr(run, name) for run in runs]) for name in names}
     first = runs[0]
     joined = _Run(
@@ -165,7 +174,7 @@ def _joined(runs: list[_Run]) -> _Run:
         whole["coords"],
         whole["log_prob"],
     )
-    for name in ("chain", "chain_log_prob", "accepted", "independence", "stars"):
+    for name in kept:
         setattr(joined, name, whole[name])
     runs.clear()
     return joined

@@ -53,6 +53,8 @@ def importance_draws(
     ----------
     streams
         (S, 4) uint64, advanced in place.
+    proposal
+        What the burn-in begins with; without, that of a walk from the peaks.
     """
     run = burn_in(Start(block, modes, streams, proposal), grid, prior, walkers)
     n_stars, ndim = run.n_stars, run.coords.shape[1]

@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
+from numpy.typing import NDArray
 
 from starkiln.inference.arithmetic import HALF_LN_2PI, exp, log, put
 from starkiln.inference.compile import kernel
@@ -34,20 +35,32 @@ LONGEST = 0.15  # step, of the heat itself
 BENT = 2.0  # a climb from the straight way to a knot that shows the way to be bent
 STEEP, FLAT = 3.0, 0.5  # changes of the log marginal between knots that are too large, or smaller than need be
 STRETCH = 1.05  # of all scatter: a proposal should be the wider one
-LOGISTIC_SCALE = 1.81  # of a normal: pi / sqrt(3), its scale for unit variance
+LOGISTIC_SCALE = 1.81  # pi / sqrt(3), the standard deviation of a logistic of scale one
 
 HEAT, DUST = np.int64(0), np.int64(2)  # axes of a walker; plain numbers would be compiled for one by one
 
 
 class Knots(NamedTuple):
-    """What a walk leaves: as in `Proposal`, for one star, and the log marginal in heat."""
+    """What a walk along one star's posterior leaves at K = MAX_KNOTS knots, M coordinates besides heat and A_V.
 
-    heat: np.ndarray
-    log_marginal: np.ndarray
-    av: np.ndarray
-    centre: np.ndarray
-    slope: np.ndarray
-    factor: np.ndarray
+    Attributes
+    ----------
+    heat, log_marginal
+        (K,): 1e4 K / T, and the log of its marginal density, up to a constant.
+    av
+        (K, 3): location, mean and scale of A_V's cut logistic in magnitudes.
+    centre, slope
+        (K, M): means of the others at the mean A_V, and their change with A_V.
+    factor
+        (K, M, M): lower Cholesky factors of their scatter.
+    """
+
+    heat: NDArray[np.float64]
+    log_marginal: NDArray[np.float64]
+    av: NDArray[np.float64]
+    centre: NDArray[np.float64]
+    slope: NDArray[np.float64]
+    factor: NDArray[np.float64]
 
 
 def fit_proposal(block: Block, grid: Grid, prior: Prior, modes: Modes) -> Proposal:
@@ -111,7 +124,10 @@ def _is_passed(heat, low, high):
 
 @kernel
 def _walk(one, grid, prior, peak, covariance, direction, here, there, knots, first, n, best):
-    """Walk from a peak until the marginal is low, a bound, or a knot of an earlier walk."""
+    """Walk from a peak until the marginal is low, a bound, or a knot of an earlier walk.
+
+    The peak's own knot is the ``first``; ``n`` and ``best`` are how many knots there are, and their highest marginal.
+    """
     ndim = peak.size
     heat_low = exp(LN_HEAT_K - prior.ln_teff_max) * (1.0 + 1e-9)
     heat_high = exp(LN_HEAT_K - prior.ln_teff_min) * (1.0 - 1e-9)
@@ -140,6 +156,7 @@ def _walk(one, grid, prior, peak, covariance, direction, here, there, knots, fir
             step *= 2.0**HALVINGS  # a leap between branches: no step is short enough
         for k in range(1, ndim):
             tangent[k] = (trial[k] - point[k]) / (heat - point[0])
+        # Longer where the way is flat and straight, shorter before it gets so steep that a knot is refused.
         if change < FLAT and gain < 0.2 * BENT:
             step *= 1.5
         elif change > 0.6 * STEEP:
@@ -258,11 +275,13 @@ def _cut_at_zero(peak, sigma, logistic):
     root = np.sqrt(u * u + 2.0 * np.pi)
     tail = exp(-0.5 * u * u) / np.sqrt(2.0 * np.pi) / ((1.0 - 1.0 / np.pi) * u + root / np.pi)
     if t > 0.0:
+        # sigma (phi / tail - u), where the difference of near equals has been worked out.
         mean = sigma * 2.0 / (root + u)
         log_mass = -0.5 * u * u - HALF_LN_2PI - log((1.0 - 1.0 / np.pi) * u + root / np.pi)
     else:
         mean = peak + sigma * exp(-0.5 * u * u) / np.sqrt(2.0 * np.pi) / (1.0 - tail)
         log_mass = log(1.0 - tail)
+    # Location over scale, for the scale that a normal so wide has; then the scale that gives a logistic the mean.
     ratio = min(max(-LOGISTIC_SCALE / STRETCH * t, FARTHEST_AV), 100.0)
     scale = mean / (log(1.0 + exp(ratio)) * (1.0 + exp(-ratio)))
     logistic[0], logistic[1], logistic[2] = ratio * scale, mean, scale
@@ -354,7 +373,10 @@ def _copy_knot(knots, source, best, proposal, star, target):
 
 @kernel
 def _tangents(heat, values, n, out):
-    """Write the derivatives at the knots, each of the parabola through a knot and its neighbours; none at the ends."""
+    """Write the derivatives at the knots, each of the parabola through a knot and its neighbours.
+
+    They are one-sided beside the end knots, which are copies of their neighbours, and zero at these.
+    """
     out[0] = out[n - 1] = 0.0
     for k in range(1, n - 1):
         left, right = heat[k] - heat[k - 1], heat[k + 1] - heat[k]
@@ -369,7 +391,7 @@ def _tangents(heat, values, n, out):
 
 @kernel
 def normalise(heat, log_density, mass, n):
-    """Write the cumulative mass of a marginal that is exponential between knots, and normalise its density."""
+    """Write the cumulative mass (n,) of a marginal that is exponential between knots, and normalise its log density."""
     mass[0] = 0.0
     for k in range(n - 1):
         rise = log_density[k + 1] - log_density[k]

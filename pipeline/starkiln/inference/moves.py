@@ -65,6 +65,7 @@ class BlockMove(Move):
         self.fit_av = fit_av
         self.independence = np.ascontiguousarray(np.broadcast_to(independence, len(streams)))
         self.accepted = accepted
+        # (S * walkers,), of where the walkers are; NaN where it is not known, after differential evolution.
         self.log_proposal = np.full(len(streams) * walkers, np.nan)
 
     def propose(self, model: Any, state: emcee.State) -> tuple[emcee.State, NDArray[np.bool_]]:
@@ -97,7 +98,7 @@ class BlockMove(Move):
 
 
 class Trials(NamedTuple):
-    """A step's trials of S stars: which stars use the independence proposal, and those positions, half by half.
+    """A step's trials of S stars: which stars use the independence proposal, and the positions tried, half by half.
 
     Attributes
     ----------

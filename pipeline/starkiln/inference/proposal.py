@@ -2,9 +2,9 @@
 
 Temperature comes first because a posterior may have several peaks in it, while dust, angular size and the photosphere's
 factors have one at any given temperature. The marginal is exponential between knots in heat = 1e4 K / T. Given the
-heat, A_V (where it is fitted) is logistic and cut at zero; given both, the others are multivariate t with eight degrees
-of freedom about a line in A_V. Their parameters are linear in heat between
-the knots, but for their places, which are cubic.
+heat, A_V (where it is fitted) is logistic and cut at zero; given both, the others, of which glow = ln(Omega T) is the
+first, follow two multivariate t with eight degrees of freedom in equal parts: one about a line in A_V, and one that the
+burn-in fits. Their parameters are linear in heat between the knots, but for their places, which are cubic.
 """
 
 from __future__ import annotations
@@ -34,7 +34,7 @@ class Proposal(NamedTuple):
     n_knots
         (S,) int64.
     heat
-        (S, K), ascending from one bound of the temperature to the other.
+        (S, K): 1e4 K / T, ascending from one bound of the temperature to the other.
     log_density
         (S, K): of the marginal in heat, normalised.
     mass
@@ -154,7 +154,7 @@ def other_axis(m, fit_av):
 
 @kernel
 def find_last_at_most(values, n, wanted, out):
-    """Write for each value wanted the last of the first n - 1 ascending values that is not above it."""
+    """Write (L,) for each value wanted (L,) the last of the first n - 1 ascending values that is not above it, or 0."""
     top = np.uint64(n - 2)
     out[:] = np.uint64(0)
     step = np.uint64(1)
@@ -178,7 +178,7 @@ def _linear(values, knot, spot, out):
 
 @kernel
 def _cubic(values, tangents, scratch, out):
-    """Write what is cubic between knots (K,)."""
+    """Write what is cubic between knots (K,), by values and derivatives at both (Hermite)."""
     knot, spot, width, bend = scratch.knot, scratch.spot, scratch.width, scratch.rooms[2]
     one = np.uint64(1)
     for i in range(out.size):

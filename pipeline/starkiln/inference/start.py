@@ -1,4 +1,4 @@
-"""Where each star's walkers begin: a grid in (T, A_V), Levenberg-Marquardt from its best peaks, and a Laplace fit."""
+"""The peaks of each star's posterior: a grid in (T, A_V), Levenberg-Marquardt from its best nodes, and curvatures."""
 
 from __future__ import annotations
 
@@ -329,7 +329,10 @@ def clamp(prior, point):
 
 
 class Slopes(NamedTuple):
-    """What the posterior is like at a point: its gradient and its Gauss-Newton curvature; and room to find out."""
+    """What the posterior is like at a point: its gradient (ndim,) and its Gauss-Newton curvature (ndim, ndim).
+
+    The rest is room to find out: a lane for the point, a step in ln T, one in A_V and one in each factor.
+    """
 
     gradient: NDArray[np.float64]
     curvature: NDArray[np.float64]

@@ -125,7 +125,7 @@ def _middle_as_peak(model: FitModel, n_stars: int) -> Modes:
 
 
 def _about_the_middle(modes: Modes, model: FitModel) -> Proposal:
-    """Return a proposal that is flat in heat to both sides of the middle."""
+    """Return a proposal that is flat in heat about the middle, not normalised: nobody looks at the result."""
     n_stars, _, ndim = modes.coords.shape
     proposal = empty_proposal(n_stars, MAX_KNOTS + 2, ndim, model.prior.fit_av)
     proposal.n_knots[:] = 3

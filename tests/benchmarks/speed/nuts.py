@@ -47,7 +47,7 @@ def sample(walkers: NDArray[np.float64], block: Block, grid: Grid, prior: Prior)
     """Sample the stars of a block.
 
     Positions are unconstrained and straightened by the walkers, see :class:`Frame`, so that the adaptation starts from
-    the same Laplace fit as every other sampler's chains.
+    the same Laplace fit as emcee's own chains.
 
     Parameters
     ----------

@@ -1,9 +1,9 @@
 """Effective samples and stars per core-second: the block ensemble beside general samplers, on the same posterior.
 
-Every chain starts from the same Laplace fit. Times are CPU times of this process, kept on one core, from the data to
-the end of the chains: the search for the peaks, burn-in or adaptation, and sampling. Effective sizes are arviz's
-rank-normalised ones of ln T, ln Omega, A_V and z_1, the least of the parameters, mean over the stars; rates are by the
-bulk.
+Chains of the others start from the Laplace fit of the highest peak, ours from its own proposal. Times are CPU times of
+this process, kept on one core, from the data to the end of the chains: the search for the peaks, burn-in or adaptation,
+and sampling. Effective sizes are arviz's rank-normalised ones of ln T, ln Omega, A_V and z_1, the least of the
+parameters, mean over the stars; rates are by the bulk.
 
 What another sampler would need to reach the effective size of our chains: its start and its burn-in as they are, once a
 star and not lengthened with the chain, and as much of its sampling as brings the mean bulk size, in proportion. The
