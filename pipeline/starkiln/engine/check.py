@@ -21,8 +21,8 @@ from starkiln.tables.columns import catalogue_schema, draws_schema, output_field
 from starkiln.tables.source import Source
 
 STARS_PER_SECOND = 200.0
-"""Stars that one worker fits in a second: measured on one core with the demo's 14 bands; plain blackbodies or few
-bands went up to four times as fast, stars that the model does not fit slower."""
+"""About what one worker fits in a second: measured with ten bands and departures, two workers beside each other; stars
+that the model does not fit are slower."""
 
 DRIVER_BYTES = 700e6
 """About what the driver takes, whatever the number of rows."""
