@@ -18,7 +18,7 @@ from starkiln.stages.model import LN_RSUN_PC, FitModel
 from starkiln.stages.stars import Stars
 
 MEMORY_SHARE = 0.3  # of a worker's memory that a block's chains may take
-LARGEST_BLOCK = 512
+LARGEST_BLOCK = 256
 
 
 @dataclass(frozen=True)

@@ -26,10 +26,11 @@ from benchmarks.speed import nuts
 from benchmarks.speed.cases import CASES, SEED, Case, make_case
 from benchmarks.speed.common import Clock, Row, Suite, one_core, print_rows
 from benchmarks.speed.plain import PlainPosterior, check_plain, natural
-from starkiln.inference.ensemble import Stopping, log_prob_function, sample_block
+from starkiln.inference.ensemble import Start, Stopping, log_prob_function, sample_blocks
 from starkiln.inference.posterior import Block, n_parameters
 from starkiln.inference.start import find_modes
 from starkiln.inference.streams import star_streams
+from starkiln.stages.fit import LARGEST_BLOCK
 
 WALKERS = 32
 BURN_IN = 200
@@ -90,13 +91,16 @@ def effective_sizes(chain: NDArray[np.float64]) -> tuple[float, float]:
 
 
 def block_ensemble(case: Case) -> Outcome:
-    """Sample all stars of a case with the package's sampler."""
-    block, model = case.block, case.model
-    streams = star_streams([b"%d" % k for k in range(len(block.n_bands))], 1, b"x")
+    """Sample all stars of a case with the package's sampler, in blocks as a part is."""
+    block, grid, prior = case.block, case.model.grid, case.model.prior
+    stars = np.arange(len(block.n_bands))
     clock = Clock()
-    modes = find_modes(block, model.grid, model.prior)
+    starts = []
+    for some in np.split(stars, range(LARGEST_BLOCK, len(stars), LARGEST_BLOCK)):
+        streams = star_streams([b"%d" % k for k in some], 1, b"x")
+        starts.append(Start(block.take(some), find_modes(block.take(some), grid, prior), streams))
     start_s = clock.lap()
-    finished = list(sample_block(block, model.grid, model.prior, streams, WALKERS, Stopping(), modes=modes))
+    finished = [draws for _, draws in sample_blocks(starts, grid, prior, WALKERS, Stopping())]
     sampling_s = clock.lap()
     chains = {
         star: chain.reshape(len(chain), draws.n_steps, WALKERS).transpose(0, 2, 1)
@@ -179,7 +183,7 @@ def check_posteriors(case: Case) -> dict[str, float]:
 
 def contenders(case: Case, stars: int, names: tuple[str, ...] | None = None) -> list[Outcome]:
     """Return the outcome of each sampler, or of those named, with the stars of a case."""
-    block_ensemble(replace(case, block=case.block.take(np.arange(2))))
+    block_ensemble(replace(case, block=case.block.take(np.arange(min(stars, LARGEST_BLOCK)))))
     ways = {OURS: partial(block_ensemble, case)}
     for name, moves in MOVES.items():
         name = f"emcee, {name}"
