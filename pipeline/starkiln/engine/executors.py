@@ -28,7 +28,7 @@ ALLOCATION = {
     "MALLOC_TRIM_THRESHOLD_": str(256 * 2**20),
     "MALLOC_MMAP_THRESHOLD_": str(32 * 2**20),
 }
-"""Chains are made and dropped all the time: giving their memory back to the system took a worker a sixth of its time."""
+"""Chains are made and dropped all the time: giving their memory back to the system took a sixth of the time."""
 
 WORKER_DEATHS_ALLOWED = 3
 

@@ -100,14 +100,13 @@ def block_ensemble(case: Case) -> Outcome:
         streams = star_streams([b"%d" % k for k in some], 1, b"x")
         starts.append(Start(block.take(some), find_modes(block.take(some), grid, prior), streams))
     start_s = clock.lap()
-    finished = [draws for _, draws in sample_blocks(starts, grid, prior, WALKERS, Stopping())]
-    sampling_s = clock.lap()
-    chains = {
-        star: chain.reshape(len(chain), draws.n_steps, WALKERS).transpose(0, 2, 1)
-        for draws in finished
-        for star, chain in zip(draws.stars, draws.chain, strict=True)
-    }
-    sizes = np.array([effective_sizes(chains[star]) for star in sorted(chains)])
+    sampling_s, of_star = 0.0, {}
+    for _, draws in sample_blocks(starts, grid, prior, WALKERS, Stopping()):
+        sampling_s += clock.lap()
+        for star, chain in zip(draws.stars, draws.chain, strict=True):
+            of_star[star] = effective_sizes(chain.reshape(len(chain), draws.n_steps, WALKERS).transpose(0, 2, 1))
+        clock.lap()
+    sizes = np.array([of_star[star] for star in stars])
     return Outcome(OURS, *sizes.T.tolist(), start_s, 0.0, sampling_s)
 
 
