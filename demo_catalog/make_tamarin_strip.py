@@ -151,11 +151,13 @@ def band_flux_jy(stars: dict[str, np.ndarray], passband_name: str, departures: D
     return omega * bare * departure(stars, passband_name, departures)[0]
 
 
-def visible_stars(departures: Departures, random: np.random.Generator) -> dict[str, np.ndarray]:
+def visible_stars(
+    departures: Departures, random: np.random.Generator, kinds: dict[str, int] = KINDS
+) -> dict[str, np.ndarray]:
     """Return the stars of every kind that are bright enough, in random order."""
     faintest_jy = AB_ZERO_JY * 10.0 ** (-0.4 * FAINTEST_R_MAG)
     chosen: list[dict[str, np.ndarray]] = []
-    for kind, wanted in KINDS.items():
+    for kind, wanted in kinds.items():
         found = 0
         while found < wanted:
             stars = draw_stars(kind, 4 * wanted, random)
@@ -218,13 +220,16 @@ def band_columns(
 
 
 def survey_columns(
-    stars: dict[str, np.ndarray], departures: Departures, random: np.random.Generator
+    stars: dict[str, np.ndarray],
+    departures: Departures,
+    random: np.random.Generator,
+    fields: dict[str, int] = FIELDS,
 ) -> dict[str, np.ndarray]:
     """Return the survey's columns and, under ``outlier_bands``, how many outliers each star has."""
     count = len(stars["teff"])
-    field = np.repeat(list(FIELDS), list(FIELDS.values()))
-    number = np.concatenate([np.arange(1, size + 1) for size in FIELDS.values()])
-    start_deg = 30.0 + FIELD_WIDTH_DEG * np.searchsorted(list(FIELDS), field)
+    field = np.repeat(list(fields), list(fields.values()))
+    number = np.concatenate([np.arange(1, size + 1) for size in fields.values()])
+    start_deg = 30.0 + FIELD_WIDTH_DEG * np.searchsorted(list(fields), field)
     columns: dict[str, np.ndarray] = {
         "star_id": np.array([f"TS-{f}-{n:04d}" for f, n in zip(field, number, strict=True)], dtype=object),
         "field": field,

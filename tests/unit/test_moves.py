@@ -54,7 +54,7 @@ def start(seed):
 
 def make_move(independence=0.7, fit_av=True):
     streams = star_streams([b"one", b"two"], 1, b"photometry")
-    return BlockMove(streams, mismatched(fit_av), fit_av, independence, np.zeros(2, np.int64), WALKERS)
+    return BlockMove(streams, mismatched(fit_av), fit_av, np.full(2, independence), np.zeros(2, np.int64), WALKERS)
 
 
 def sample(move, steps, coords, log_prob=gaussian):
@@ -84,7 +84,7 @@ def test_a_stars_chain_does_not_depend_on_its_block():
     for star in range(2):
         streams = star_streams([b"one", b"two"], 1, b"photometry")[star : star + 1]
         proposal = mismatched(True).take(np.array([star]))
-        move = BlockMove(streams, proposal, True, 0.7, np.zeros(1, np.int64), WALKERS)
+        move = BlockMove(streams, proposal, True, np.full(1, 0.7), np.zeros(1, np.int64), WALKERS)
         mine = slice(star * WALKERS, (star + 1) * WALKERS)
 
         def log_prob(c, star=star):

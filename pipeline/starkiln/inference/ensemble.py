@@ -187,13 +187,12 @@ def sample_block(
     streams: NDArray[np.uint64],
     walkers: int,
     stopping: Stopping,
-    memory_bytes: float = 1e9,
     modes: Modes | None = None,
     proposal: Proposal | None = None,
 ) -> Iterator[Draws]:
     """Sample every star of one block, whose peaks may be known already; yield stars as they finish."""
     start = Start(block, modes or find_modes(block, grid, prior), streams, proposal)
-    for _, draws in sample_blocks([start], grid, prior, walkers, stopping, memory_bytes):
+    for _, draws in sample_blocks([start], grid, prior, walkers, stopping):
         yield draws
 
 

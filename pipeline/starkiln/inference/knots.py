@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from starkiln.inference.arithmetic import HALF_LN_2PI, exp, log, put
 from starkiln.inference.compile import kernel
 from starkiln.inference.posterior import LN_HEAT_K, Block, Grid, Prior, n_parameters
-from starkiln.inference.proposal import FARTHEST_AV, Proposal, empty_proposal
+from starkiln.inference.proposal import FARTHEST_AV, Proposal, empty_proposal, other_axis
 from starkiln.inference.start import (
     MAX_MODES,
     Modes,
@@ -294,11 +294,11 @@ def _others(point, shift, inner, prior, knots, n):
     others = knots.centre.shape[1]
     reduced, coupling = np.empty((others, others)), np.zeros(others)
     for m in range(others):
-        a = m + 1 if prior.fit_av and m > 0 else m
+        a = other_axis(m, prior.fit_av) - 1
         if prior.fit_av:
             coupling[m] = -inner[a, 1]
         for j in range(others):
-            b = j + 1 if prior.fit_av and j > 0 else j
+            b = other_axis(j, prior.fit_av) - 1
             reduced[m, j] = inner[a, b]
     slope = solve_positive(reduced, coupling)
     scatter = inverse_positive(reduced)
@@ -309,7 +309,7 @@ def _others(point, shift, inner, prior, knots, n):
     for m in range(others):
         put(lower[m], knots.factor[n, m])
     for m in range(others):
-        a = m + 1 if prior.fit_av and m > 0 else m
+        a = other_axis(m, prior.fit_av) - 1
         knots.slope[n, m] = slope[m]
         knots.centre[n, m] = point[1 + a] + shift[a]
         if prior.fit_av:

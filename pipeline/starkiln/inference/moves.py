@@ -63,7 +63,7 @@ class BlockMove(Move):
         self.streams = streams
         self.proposal = proposal
         self.fit_av = fit_av
-        self.independence = np.ascontiguousarray(np.broadcast_to(independence, len(streams)))
+        self.independence = independence
         self.accepted = accepted
         # (S * walkers,), of where the walkers are; NaN where it is not known, after differential evolution.
         self.log_proposal = np.full(len(streams) * walkers, np.nan)

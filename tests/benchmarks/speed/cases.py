@@ -113,9 +113,7 @@ def _tamarin_files(stars: int) -> Iterable[pa.Table]:
     for number, first in enumerate(range(0, stars, survey.STARS_PER_FILE)):
         count = min(survey.STARS_PER_FILE, stars - first)
         # The shares of the kinds are rounded, so of very few stars some kind would be missing; their order is random.
-        table = survey.field_table(number, max(count, 100)).slice(0, count)
-        left_out = [name for name in table.column_names if set(name.split("_")) & set(survey.COLUMNS_LEFT_OUT)]
-        yield table.drop_columns(left_out)
+        yield survey.field_table(number, max(count, 100)).slice(0, count)
 
 
 def tamarin_settings(tables: Path, output: Path, **sections: Any) -> Settings:

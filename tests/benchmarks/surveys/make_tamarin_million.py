@@ -24,18 +24,19 @@ ROOT = Path(__file__).parents[3]
 STARS = 1_000_000
 STARS_PER_FILE = 20_000
 SHARES = {"dwarf": 0.72, "giant": 0.17, "hot star": 0.11}
-COLUMNS_LEFT_OUT = ("nuv", "w1", "w2", "h")
+BANDS_LEFT_OUT = ("nuv", "w1", "w2", "h")
 
 
 def field_table(number: int, count: int) -> pa.Table:
-    """Return the stars of one file, all of field ``M`` and its number."""
+    """Return the stars of one file, all of field ``M`` and its number, without the bands that are left out."""
     random = np.random.default_rng([strip.SEED, number])
-    strip.KINDS = {kind: round(share * count) for kind, share in SHARES.items()}
-    strip.KINDS["dwarf"] += count - sum(strip.KINDS.values())
-    strip.FIELDS = {f"M{number:04d}": count}
+    kinds = {kind: round(share * count) for kind, share in SHARES.items()}
+    kinds["dwarf"] += count - sum(kinds.values())
     departures = strip.invented_departures()
-    stars = strip.visible_stars(departures, random)
-    return strip.survey_table(strip.survey_columns(stars, departures, random))
+    stars = strip.visible_stars(departures, random, kinds)
+    table = strip.survey_table(strip.survey_columns(stars, departures, random, {f"M{number:04d}": count}))
+    left_out = [name for name in table.column_names if set(name.split("_")) & set(BANDS_LEFT_OUT)]
+    return table.drop_columns(left_out)
 
 
 def main() -> None:
@@ -44,9 +45,8 @@ def main() -> None:
     folder.mkdir(parents=True, exist_ok=True)
     for number, first in enumerate(range(0, stars, STARS_PER_FILE)):
         table = field_table(number, min(STARS_PER_FILE, stars - first))
-        left_out = [name for name in table.column_names if set(name.split("_")) & set(COLUMNS_LEFT_OUT)]
         path = folder / f"stars-{number:04d}.parquet"
-        pq.write_table(table.drop_columns(left_out), path, compression="zstd", row_group_size=10_000)
+        pq.write_table(table, path, compression="zstd", row_group_size=10_000)
 
 
 if __name__ == "__main__":
