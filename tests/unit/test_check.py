@@ -30,6 +30,11 @@ def test_the_plan_tells_what_a_run_will_take(tmp_path):
     )
 
 
+def test_a_choice_of_photosphere_takes_longer(tmp_path):
+    text = plan_text(tmp_path, model__photosphere="auto")
+    assert text.splitlines()[-1].startswith("time     about 10 seconds at 60 stars a second and worker")
+
+
 def test_filters_and_files_left_out_are_told(tmp_path):
     assert "\nfilters" not in plan_text(tmp_path)
     (tmp_path / "input" / "c.parquet").write_bytes(b"PAR1")
